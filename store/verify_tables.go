@@ -1,0 +1,412 @@
+package store
+
+import (
+	"bytes"
+	"context"
+	"errors"
+	"fmt"
+	"strconv"
+
+	"deltamoor/store/ledger"
+)
+
+// tables checks what the walk along the ledger cannot see: rows that nothing
+// in the ledger asks for, and the rows that are updated. Everything is read in one
+// state of the registry.
+func (c *checker) tables(ctx context.Context) error {
+	return c.store.Read(ctx, func(ctx context.Context, v *View) error {
+		v.tolerant = true
+		if err := c.head(ctx, v); err != nil {
+			return err
+		}
+		for _, o := range orphans {
+			rows, err := v.rows(ctx, len(o.key), o.statement, c.laboratory)
+			if err != nil {
+				return fmt.Errorf("look for rows of %s that nothing asks for: %w", o.table, err)
+			}
+			for _, row := range rows {
+				c.find(-1, o.table, orphanKey(o, row), "a row", "none: "+o.missing)
+			}
+		}
+		if err := c.sessions(ctx, v); err != nil {
+			return err
+		}
+		if err := c.loose(ctx, v); err != nil {
+			return err
+		}
+		return c.currents(ctx, v)
+	})
+}
+
+// An orphan is a row without the row it belongs to.
+type orphan struct {
+	table, missing string
+	key            []string // how the columns selected are written
+	statement      string
+}
+
+func orphanKey(o orphan, row []any) string {
+	key := ""
+	for i, format := range o.key {
+		key += fmt.Sprintf(format, fmt.Sprint(row[i]))
+	}
+	return key
+}
+
+var orphans = []orphan{
+	{"versions", "no ledger entry at its position", []string{"%s ", "%s", "/%s", ".%s"},
+		`SELECT v.kind, v.laboratory, v.code, v.version FROM versions v
+			LEFT JOIN entries e ON e.laboratory = v.laboratory AND e.position = v.position
+			WHERE v.laboratory = $1 AND e.position IS NULL ORDER BY v.kind, v.code, v.version`},
+	{"entries", "the ledger ends before it", []string{"%s", " position %s"},
+		`SELECT e.laboratory, e.position FROM entries e LEFT JOIN ledger_heads h ON h.laboratory = e.laboratory
+			WHERE e.laboratory = $1 AND e.position >= coalesce(h.size, 0) ORDER BY e.position`},
+	{"edges", "no version it comes from", []string{"%s", " %s", " %s", " %s", " %s", " %s", " %s", " %s", " %s"},
+		`SELECT d.laboratory, d.from_kind, d.from_code, d.from_version, d.to_laboratory, d.to_kind, d.to_code, d.to_version, d.part FROM edges d
+			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = d.from_kind AND v.code = d.from_code AND v.version = d.from_version
+			WHERE d.laboratory = $1 AND v.version IS NULL ORDER BY d.from_kind, d.from_code, d.from_version`},
+	{"names", "no version it comes from", []string{"%s", " %s", " %s", " %s", " %s"},
+		`SELECT d.laboratory, d.kind, d.name, d.code, d.version FROM names d
+			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = d.kind AND v.code = d.code AND v.version = d.version
+			WHERE d.laboratory = $1 AND v.version IS NULL ORDER BY d.kind, d.code, d.version`},
+	{"results", "no version it comes from", []string{"%s", " %s", " %s", " %s"},
+		`SELECT d.laboratory, d.calibration, d.version, d.line FROM results d
+			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = 'calibration' AND v.code = d.calibration AND v.version = d.version
+			WHERE d.laboratory = $1 AND v.version IS NULL ORDER BY d.calibration, d.version, d.line`},
+	{"sensitivities", "no version it comes from", []string{"%s", " %s", " %s"},
+		`SELECT d.laboratory, d.calibration, d.version FROM sensitivities d
+			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = 'calibration' AND v.code = d.calibration AND v.version = d.version
+			WHERE d.laboratory = $1 AND v.version IS NULL ORDER BY d.calibration, d.version`},
+	{"reported", "no version it comes from", []string{"%s"},
+		`SELECT d.code FROM reported d
+			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = 'report' AND v.code = d.report AND v.version = d.version
+			WHERE d.laboratory = $1 AND v.version IS NULL ORDER BY d.code`},
+	{"uses", "no session it comes from", []string{"%s", " %s", " %s"},
+		`SELECT d.laboratory, d.session, d.unit FROM uses d
+			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = 'session' AND v.code = d.session AND v.version = 1
+			WHERE d.laboratory = $1 AND v.version IS NULL ORDER BY d.session, d.unit`},
+	{"currents", "no record it is about", []string{"%s", " %s", " %s"},
+		`SELECT d.laboratory, d.kind, d.code FROM currents d
+			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = d.kind AND v.code = d.code AND v.version = 1
+			WHERE d.laboratory = $1 AND v.version IS NULL ORDER BY d.kind, d.code`},
+}
+
+const (
+	selectHeadRow = `SELECT size, recorded_at, checkpoints FROM ledger_heads WHERE laboratory = $1`
+	selectLastRow = `SELECT coalesce(max(position), -1), coalesce(max(recorded_at), 0) FROM versions WHERE laboratory = $1`
+	countNodes    = `SELECT count(*), coalesce(max(node), -1) FROM tree_hashes WHERE laboratory = $1`
+	countSigned   = `SELECT count(*) FROM checkpoints WHERE laboratory = $1`
+	selectNodesTo = `SELECT node FROM tree_hashes WHERE laboratory = $1 AND node >= $2 ORDER BY node LIMIT 100`
+)
+
+// head checks the one row writers queue for.
+func (c *checker) head(ctx context.Context, v *View) error {
+	var size, at, checkpoints, signed, last, lastAt, nodes, lastNode int64
+	rows, err := v.rows(ctx, 3, selectHeadRow, c.laboratory)
+	if err != nil {
+		return fmt.Errorf("read the head: %w", err)
+	}
+	if err := v.q.one(ctx, selectLastRow, []any{c.laboratory}, &last, &lastAt); err != nil {
+		return fmt.Errorf("read the last version: %w", err)
+	}
+	if err := v.q.one(ctx, countSigned, []any{c.laboratory}, &signed); err != nil {
+		return fmt.Errorf("count the checkpoints: %w", err)
+	}
+	if len(rows) == 0 {
+		if last >= 0 || signed > 0 {
+			c.find(-1, "ledger_heads", c.laboratory, "no row", fmt.Sprintf("size %d", last+1))
+		}
+		return nil
+	}
+	size, _ = rows[0][0].(int64)
+	at, _ = rows[0][1].(int64)
+	checkpoints, _ = rows[0][2].(int64)
+	if size != last+1 {
+		c.find(-1, "ledger_heads", c.laboratory, fmt.Sprintf("size %d", size), fmt.Sprintf("size %d, one more than the last position", last+1))
+	}
+	if at != lastAt {
+		c.find(-1, "ledger_heads", c.laboratory, "recorded at "+Instant(at).String(), "the time of the last version, "+Instant(lastAt).String())
+	}
+	if checkpoints != signed {
+		c.find(-1, "ledger_heads", c.laboratory, fmt.Sprintf("%d checkpoints", checkpoints), fmt.Sprint(signed))
+		c.find(-1, "checkpoints", c.laboratory, fmt.Sprintf("%d rows", signed), fmt.Sprint(checkpoints))
+	}
+	if err := v.q.one(ctx, countNodes, []any{c.laboratory}, &nodes, &lastNode); err != nil {
+		return fmt.Errorf("count the nodes: %w", err)
+	}
+	want := ledger.NodeCount(size)
+	if nodes == want && lastNode == want-1 {
+		return nil
+	}
+	extra, err := v.rows(ctx, 1, selectNodesTo, c.laboratory, want)
+	if err != nil {
+		return fmt.Errorf("read nodes: %w", err)
+	}
+	for _, row := range extra {
+		c.find(-1, "tree_hashes", fmt.Sprintf("%s node %v", c.laboratory, row[0]), "a row", fmt.Sprintf("none: a tree of %d has %d nodes", size, want))
+	}
+	return nil
+}
+
+const (
+	nextSession   = `SELECT coalesce(min(session), '') FROM readings WHERE laboratory = $1 AND session > $2`
+	sessionExists = `SELECT count(*) FROM versions WHERE laboratory = $1 AND kind = 'session' AND code = $2`
+)
+
+// sessions looks for readings of sessions that do not exist, from one session
+// to the next by the index.
+func (c *checker) sessions(ctx context.Context, v *View) error {
+	for session := ""; ; {
+		if err := v.q.one(ctx, nextSession, []any{c.laboratory, session}, &session); err != nil {
+			return fmt.Errorf("read sessions of readings: %w", err)
+		}
+		if session == "" {
+			break
+		}
+		var n int
+		if err := v.q.one(ctx, sessionExists, []any{c.laboratory, session}, &n); err != nil {
+			return fmt.Errorf("look up session %s: %w", session, err)
+		}
+		if n == 0 {
+			c.find(-1, "readings", c.laboratory+"/"+session, "rows", "none: no version of the session")
+		}
+	}
+	return nil
+}
+
+const (
+	nextUpload   = `SELECT sha256 FROM uploads WHERE laboratory = $1 AND sha256 > $2 ORDER BY sha256 LIMIT 1`
+	nextContent  = `SELECT sha256 FROM content WHERE laboratory = $1 AND sha256 > $2 ORDER BY sha256 LIMIT 1`
+	uploadExists = `SELECT count(*) FROM uploads WHERE laboratory = $1 AND sha256 = $2`
+)
+
+// loose looks for uploads no version binds, and for content that belongs neither
+// to an upload nor to a body.
+func (c *checker) loose(ctx context.Context, v *View) error {
+	step := func(statement string, after []byte) ([]byte, error) {
+		rows, err := v.rows(ctx, 1, statement, c.laboratory, after)
+		if err != nil || len(rows) == 0 {
+			return nil, err
+		}
+		next, _ := rows[0][0].([]byte)
+		return bytes.Clone(next), nil
+	}
+	for after := []byte{}; ; {
+		next, err := step(nextUpload, after)
+		if err != nil {
+			return fmt.Errorf("read uploads: %w", err)
+		}
+		if next == nil {
+			break
+		}
+		after = next
+		hash := Hash(next)
+		_, err = v.Newest(ctx, Key{Laboratory: c.laboratory, Kind: KindDocument, Code: hash.String()})
+		if errors.Is(err, ErrNotFound) {
+			c.find(-1, "uploads", c.laboratory+" "+hash.String(), "a row", "none: no version binds it")
+		} else if err != nil {
+			return err
+		}
+	}
+	for after := []byte{}; ; {
+		next, err := step(nextContent, after)
+		if err != nil {
+			return fmt.Errorf("read content: %w", err)
+		}
+		if next == nil {
+			break
+		}
+		after = next
+		var n int
+		if err := v.q.one(ctx, uploadExists, []any{c.laboratory, next}, &n); err != nil {
+			return fmt.Errorf("look up upload: %w", err)
+		}
+		if hash := Hash(next); n == 0 && !c.apart[hash] {
+			c.find(-1, "content", c.laboratory+" "+hash.String(), "rows", "none: no upload and no body")
+		}
+	}
+	return nil
+}
+
+const (
+	selectCurrentRows = `SELECT c.laboratory, c.kind, c.code, c.newest, c.state, c.in_force, c.held, c.until FROM currents c
+		WHERE c.laboratory = $1 AND (c.kind, c.code) > ($2, $3) ORDER BY c.kind, c.code LIMIT 200`
+	selectWithoutCurrent = `SELECT v.laboratory, v.kind, v.code FROM versions v
+		LEFT JOIN currents c ON c.laboratory = v.laboratory AND c.kind = v.kind AND c.code = v.code
+		WHERE v.laboratory = $1 AND v.version = 1 AND c.code IS NULL ORDER BY v.kind, v.code`
+)
+
+// currents computes the row of every record again, page by page.
+func (c *checker) currents(ctx context.Context, v *View) error {
+	missing, err := v.rows(ctx, 3, selectWithoutCurrent, c.laboratory)
+	if err != nil {
+		return fmt.Errorf("look for records without a current row: %w", err)
+	}
+	for _, row := range missing {
+		c.find(-1, "currents", rowKey("currents", row), "no row", "a row")
+	}
+	kind, code := "", ""
+	for {
+		page, err := v.rows(ctx, len(currentsTable.columns), selectCurrentRows, c.laboratory, kind, code)
+		if err != nil {
+			return fmt.Errorf("read current rows: %w", err)
+		}
+		if len(page) == 0 {
+			return nil
+		}
+		keys := make([]Key, len(page))
+		for i, row := range page {
+			kind, code = fmt.Sprint(row[1]), fmt.Sprint(row[2])
+			keys[i] = Key{Laboratory: c.laboratory, Kind: Kind(kind), Code: code}
+		}
+		histories, err := v.histories(ctx, c.laboratory, keys)
+		if err != nil {
+			return err
+		}
+		for i, row := range page {
+			history := histories[keys[i]]
+			if len(history) == 0 {
+				continue // told as an orphan
+			}
+			r := currentOf(keys[i], history)
+			expected := []any{c.laboratory, string(keys[i].Kind), keys[i].Code, int64(r.newest), string(r.state), int64(r.inForce), string(r.held), nullInstant(r.until)}
+			if f, e := rowText(row), rowText(expected); f != e {
+				c.find(-1, "currents", rowKey("currents", row), f, e)
+			}
+		}
+	}
+}
+
+const selectHistories = `) SELECT v.kind, v.code, v.version, v.recorded_at, v.valid_from
+	FROM wanted w JOIN versions v ON v.laboratory = w.laboratory AND v.kind = w.kind AND v.code = w.code
+	ORDER BY v.kind, v.code, v.version`
+
+// histories returns the histories of many records, decisions included.
+func (v *View) histories(ctx context.Context, laboratory string, keys []Key) (map[Key][]held, error) {
+	all := make(map[Key][]held, len(keys))
+	var codes []string
+	for len(keys) > 0 {
+		n := min(len(keys), codesPerStatement)
+		refs := make([]wanted, n)
+		for i, k := range keys[:n] {
+			refs[i] = wanted{Key: k}
+		}
+		values, args := wantedValues(refs)
+		rows, err := v.rows(ctx, 5, withWanted+values+selectHistories, args...)
+		if err != nil {
+			return nil, fmt.Errorf("read histories: %w", err)
+		}
+		for _, row := range rows {
+			key := Key{Laboratory: laboratory, Kind: Kind(fmt.Sprint(row[0])), Code: fmt.Sprint(row[1])}
+			version, _ := row[2].(int64)
+			at, _ := row[3].(int64)
+			h := held{version: int(version), recordedAt: Instant(at)}
+			if from, ok := row[4].(int64); ok {
+				h.validFrom = (*Instant)(&from)
+			}
+			all[key] = append(all[key], h)
+			if key.Kind.Decided() {
+				codes = append(codes, DecisionCode(Ref{Key: key, Version: h.version}))
+			}
+		}
+		keys = keys[n:]
+	}
+	decisions, err := v.decisions(ctx, laboratory, codes, always)
+	if err != nil {
+		return nil, fmt.Errorf("read decisions: %w", err)
+	}
+	for key, history := range all {
+		for i, h := range history {
+			for _, d := range decisions[DecisionCode(Ref{Key: key, Version: h.version})] {
+				history[i].decisions = append(history[i].decisions, said{act: d.Value.Act, recordedAt: d.RecordedAt, effectAt: d.Value.EffectAt})
+			}
+		}
+	}
+	return all, nil
+}
+
+const selectKeys = `SELECT ` + versionColumns + ` FROM versions v
+	WHERE v.laboratory = $1 AND v.kind = 'key' ORDER BY v.code, v.version`
+
+// loadCheckpoints reads the signed checkpoints and the public keys, and notes
+// at which sizes the root will be asked for.
+func (c *checker) loadCheckpoints(ctx context.Context, v *View) error {
+	c.keys = c.options.Verifiers
+	// Every version counts: a key that was replaced has signed its time.
+	recorded, err := v.raws(ctx, selectKeys, c.laboratory)
+	if err != nil {
+		return fmt.Errorf("read the public keys: %w", err)
+	}
+	for _, raw := range recorded {
+		if key, err := Decode[SigningKey](raw); err == nil {
+			c.keys = append(c.keys, key.Value.Verifier)
+		}
+	}
+	for after := int64(-1); ; {
+		page, err := v.Checkpoints(ctx, c.laboratory, after, MaxLimit)
+		if err != nil {
+			return err
+		}
+		c.stored = append(c.stored, page...)
+		if len(page) < MaxLimit {
+			break
+		}
+		after = page[len(page)-1].Size
+	}
+	for i, text := range c.options.Outside {
+		signed, err := ledger.Open(text, c.keys...)
+		if err != nil {
+			c.find(-1, "checkpoints", fmt.Sprintf("%s number %d of those kept outside", c.laboratory, i+1), err.Error(), "a note signed by a known key")
+			continue
+		}
+		c.outside = append(c.outside, Checkpoint{Size: signed.Size, Signer: signed.Signer, Note: text})
+	}
+	for _, p := range append(append([]Checkpoint{}, c.stored...), c.outside...) {
+		c.roots[p.Size] = ledger.Hash{}
+		if signed, err := ledger.Open(p.Note, c.keys...); err == nil {
+			c.roots[signed.Size] = ledger.Hash{}
+		}
+	}
+	c.roots[0] = ledger.EmptyRoot()
+	return nil
+}
+
+// checkCheckpoints compares the checkpoints, stored and kept outside, with the
+// roots recomputed on the way.
+func (c *checker) checkCheckpoints() {
+	size := c.tree.Size()
+	key := func(p Checkpoint) string { return fmt.Sprintf("%s size %d %s", c.laboratory, p.Size, p.Signer) }
+	byKey := make(map[string]Checkpoint, len(c.stored))
+	for _, p := range c.stored {
+		byKey[key(p)] = p
+		signed, err := ledger.Open(p.Note, c.keys...)
+		switch {
+		case err != nil:
+			c.find(-1, "checkpoints", key(p), err.Error(), "a note signed by a known key")
+		case signed.Size != p.Size || signed.Signer != p.Signer:
+			c.find(-1, "checkpoints", key(p), fmt.Sprintf("a note for size %d by %s", signed.Size, signed.Signer), "size and signer of its row")
+		case signed.Size > size:
+			c.find(-1, "entries", c.laboratory+" position "+strconv.FormatInt(size, 10), "no row", fmt.Sprintf("entries up to the checkpoint of size %d", signed.Size))
+		case c.roots[signed.Size] != signed.Root:
+			c.find(-1, "checkpoints", key(p), "root "+signed.Root.String(), "the recomputed root "+c.roots[signed.Size].String())
+		default:
+			c.signed++
+		}
+	}
+	for _, p := range c.outside {
+		signed, err := ledger.Open(p.Note, c.keys...)
+		if err != nil {
+			continue // told when it was loaded
+		}
+		if signed.Size > size {
+			c.find(-1, "entries", c.laboratory+" position "+strconv.FormatInt(size, 10), "no row", fmt.Sprintf("entries up to the checkpoint kept outside, of size %d", signed.Size))
+			continue
+		}
+		if c.roots[signed.Size] != signed.Root {
+			c.find(-1, "entries", c.laboratory+" positions below "+strconv.FormatInt(signed.Size, 10), "root "+c.roots[signed.Size].String(), "the root kept outside, "+signed.Root.String())
+		}
+		if stored, ok := byKey[key(p)]; !ok || !bytes.Equal(stored.Note, p.Note) {
+			c.find(-1, "checkpoints", key(p), "no such note", "the note kept outside")
+		}
+	}
+}
