@@ -1,0 +1,295 @@
+package registry
+
+import (
+	"context"
+	"fmt"
+	"slices"
+	"strings"
+
+	"deltamoor/calib"
+	"deltamoor/store"
+)
+
+// An assembly is everything that one fit is made of, whether chosen now or
+// pinned by a stored version: the same function makes the engine's input of
+// both, so that a stored calibration recomputes.
+type assembly struct {
+	session  store.Version[store.Session]
+	method   store.Version[store.Method]
+	spec     store.MethodQuantity
+	model    calib.Model
+	limits   store.Limits
+	between  *store.Component
+	readings []store.Reading // of the quantity, by number
+	origin   *store.Instant  // first reading of the session, any quantity
+	excluded map[int]bool
+	anchors  []store.Version[store.Value]
+	controls map[string]store.Version[store.Value]
+	flags    []calib.Flag
+}
+
+// assemble chooses what a new fit is made of, and names it as inputs.
+func assemble(ctx context.Context, v *store.View, laboratory string, q FitRequest) (assembly, []store.Input, error) {
+	var a assembly
+	s, err := newest[store.Session](ctx, v, store.Key{Laboratory: laboratory, Kind: store.KindSession, Code: q.Session})
+	if err != nil {
+		return a, nil, err
+	}
+	a.session = s.Version
+	if a.method, err = sessionMethod(ctx, v, a.session); err != nil {
+		return a, nil, err
+	}
+	if a.spec, err = specOf(a.method.Value, q.Quantity, q.Measurand); err != nil {
+		return a, nil, err
+	}
+	a.model, a.limits, a.between = a.spec.Model, a.spec.Limits, a.spec.BetweenSession
+	if q.Model != nil {
+		a.model = *q.Model
+	}
+	inputs := []store.Input{{Part: "session", Ref: s.Ref}, {Part: "method", Ref: a.method.Ref}}
+	if ref, err := inputOf(s.Inputs, "instrument"); err == nil {
+		inputs = append(inputs, store.Input{Part: "instrument", Ref: ref})
+	}
+	var last store.Ref
+	if a.excluded, _, last, err = exclusions(ctx, v, laboratory, a.session.Code); err != nil {
+		return a, nil, err
+	}
+	if last.Version > 0 {
+		inputs = append(inputs, store.Input{Part: "exclusion", Ref: last})
+	}
+	if err := a.loadReadings(ctx, v, laboratory); err != nil {
+		return a, nil, err
+	}
+
+	if a.session.Value.StartedAt == nil {
+		return a, nil, Refuse(Conflict, "session %s has no start: which assigned values held cannot be said", store.FormatCode(a.session.Code))
+	}
+	held := store.Moment{ValidAt: a.session.Value.StartedAt}
+	var c complaints
+	for _, material := range a.materials(calib.Anchor) {
+		value, err := valueInForce(ctx, v, laboratory, material, a.spec.Scale, measurandOf(a.spec), held)
+		if ignoreNotFound(err) != nil {
+			return a, nil, err
+		}
+		place := "anchor " + material
+		switch {
+		case err != nil:
+			c.add(place, "no approved value", "a value on %s (%s) that held on %s%s", a.spec.Scale, measurandOf(a.spec),
+				a.session.Value.StartedAt.Time().Format("2006-01-02"), otherScales(ctx, v, laboratory, material, a.spec))
+		case value.State == store.Withdrawn:
+			c.add(place, "a withdrawn value", "a value in force: %s", lastReason(value))
+		case value.Value.StandardUncertainty == 0 && !value.Value.Exact && value.Value.Sources == nil:
+			c.add(place, "a value that states no uncertainty", "one with an uncertainty: it cannot pin a line without")
+		default:
+			a.anchors = append(a.anchors, value.Version)
+			inputs = append(inputs, store.Input{Part: "anchor", Ref: value.Ref})
+			a.flags = append(a.flags, valueFlags(a, value.Version)...)
+		}
+	}
+	if err := Complain("this session cannot be fitted", c); err != nil {
+		return a, nil, err
+	}
+	a.controls = map[string]store.Version[store.Value]{}
+	for _, material := range a.materials(calib.Control) {
+		value, err := valueInForce(ctx, v, laboratory, material, a.spec.Scale, measurandOf(a.spec), held)
+		if ignoreNotFound(err) != nil {
+			return a, nil, err
+		}
+		if err == nil && value.State != store.Withdrawn {
+			a.controls[material] = value.Version
+			inputs = append(inputs, store.Input{Part: "control", Ref: value.Ref})
+		}
+	}
+	units, err := a.units(ctx, v, laboratory)
+	if err != nil {
+		return a, nil, err
+	}
+	return a, append(inputs, units...), nil
+}
+
+func lastReason(value Item[store.Value]) string {
+	if n := len(value.Decisions); n > 0 {
+		return value.Decisions[n-1].Reason
+	}
+	return "it was withdrawn"
+}
+
+// otherScales adds, to the complaint about a missing value, where the material
+// does have one: two realisations of one scale are never mixed in a fit.
+func otherScales(ctx context.Context, v *store.View, laboratory, material string, spec store.MethodQuantity) string {
+	var names []string
+	for _, lab := range []string{laboratory, store.Common} {
+		raws, _, err := v.List(ctx, store.ListQuery{Laboratory: lab, Kind: store.KindValue, Prefix: material + "/" + spec.Quantity + "-", Limit: 20})
+		if err != nil {
+			return ""
+		}
+		for _, raw := range raws {
+			if value, err := store.Decode[store.Value](raw.Raw); err == nil && !slices.Contains(names, value.Value.Scale) {
+				names = append(names, value.Value.Scale)
+			}
+		}
+	}
+	if len(names) == 0 {
+		return ""
+	}
+	return "; it has one on " + strings.Join(names, ", ") + ", and one fit never holds two realisations"
+}
+
+// assembleStored loads what a stored calibration names as its inputs.
+func assembleStored(ctx context.Context, v *store.View, c store.Version[store.Calibration]) (assembly, error) {
+	a := assembly{model: c.Value.Model, limits: c.Value.Limits, between: c.Value.BetweenSession, excluded: map[int]bool{}, controls: map[string]store.Version[store.Value]{}}
+	for _, n := range c.Value.Excluded {
+		a.excluded[n] = true
+	}
+	for _, in := range c.Inputs {
+		var err error
+		switch in.Part {
+		case "session":
+			a.session, err = decodeVersion[store.Session](ctx, v, in.Ref)
+		case "method":
+			a.method, err = decodeVersion[store.Method](ctx, v, in.Ref)
+		case "anchor":
+			var value store.Version[store.Value]
+			value, err = decodeVersion[store.Value](ctx, v, in.Ref)
+			a.anchors = append(a.anchors, value)
+		case "control":
+			var value store.Version[store.Value]
+			value, err = decodeVersion[store.Value](ctx, v, in.Ref)
+			a.controls[value.Value.Material] = value
+		}
+		if err != nil {
+			return a, fmt.Errorf("load %s of %s: %w", in.Part, c.Ref, err)
+		}
+	}
+	var err error
+	if a.spec, err = specOf(a.method.Value, c.Value.Quantity, c.Value.Measurand); err != nil {
+		return a, err
+	}
+	for _, value := range a.anchors {
+		a.flags = append(a.flags, valueFlags(a, value)...)
+	}
+	return a, a.loadReadings(ctx, v, c.Laboratory)
+}
+
+func specOf(m store.Method, quantity, measurand string) (store.MethodQuantity, error) {
+	var known []string
+	for _, q := range m.Quantities {
+		if q.Quantity == quantity && (measurand == "" || measurandOf(q) == measurand) {
+			return q, nil
+		}
+		known = append(known, q.Quantity)
+	}
+	return store.MethodQuantity{}, Complain("this session cannot be fitted", []Complaint{{Place: "body.quantity", Found: quote(quantity),
+		Expected: "a quantity of the session's method: " + strings.Join(known, ", ")}})
+}
+
+func (a *assembly) loadReadings(ctx context.Context, v *store.View, laboratory string) error {
+	a.readings, a.origin = nil, nil
+	err := v.Readings(ctx, laboratory, a.session.Code, func(rd store.Reading) error {
+		if rd.At != nil && (a.origin == nil || *rd.At < *a.origin) {
+			at := *rd.At
+			a.origin = &at
+		}
+		if rd.Quantity == a.spec.Quantity {
+			a.readings = append(a.readings, rd)
+		}
+		return nil
+	})
+	if err == nil && len(a.readings) == 0 {
+		err = Refuse(Invalid, "session %s has no readings of %s", store.FormatCode(a.session.Code), a.spec.Quantity)
+	}
+	return err
+}
+
+// materials lists the materials that have a role, in code order.
+func (a *assembly) materials(role calib.Role) []string {
+	set := map[string]bool{}
+	for _, rd := range a.readings {
+		if rd.Role == role && !a.excluded[rd.Number] {
+			set[rd.Material] = true
+		}
+	}
+	out := make([]string, 0, len(set))
+	for m := range set {
+		out = append(out, m)
+	}
+	slices.Sort(out)
+	return out
+}
+
+func (a *assembly) units(ctx context.Context, v *store.View, laboratory string) ([]store.Input, error) {
+	set := map[string]bool{}
+	for _, rd := range a.readings {
+		if rd.Unit != "" && (rd.Role == calib.Anchor || rd.Role == calib.Control || rd.Role == calib.Monitor) {
+			set[rd.Unit] = true
+		}
+	}
+	var inputs []store.Input
+	for _, code := range slices.Sorted(mapKeys(set)) {
+		raw, err := v.Newest(ctx, store.Key{Laboratory: laboratory, Kind: store.KindUnit, Code: code})
+		if err != nil {
+			return nil, err
+		}
+		inputs = append(inputs, store.Input{Part: "unit", Ref: raw.Ref})
+	}
+	return inputs, nil
+}
+
+func mapKeys[K comparable, V any](m map[K]V) func(func(K) bool) {
+	return func(yield func(K) bool) {
+		for k := range m {
+			if !yield(k) {
+				return
+			}
+		}
+	}
+}
+
+// input makes the engine's input.
+func (a *assembly) input() (calib.Session, calib.Policy, error) {
+	var s calib.Session
+	groups := map[string]bool{}
+	for _, v := range a.anchors {
+		n, gs, err := numberOf(v)
+		if err != nil {
+			return s, calib.Policy{}, err
+		}
+		s.Anchors = append(s.Anchors, calib.AssignedValue{Material: v.Value.Material, Value: n})
+		for _, g := range gs {
+			if !groups[g.ID] {
+				groups[g.ID] = true
+				s.Groups = append(s.Groups, g)
+			}
+		}
+	}
+	for _, rd := range a.readings {
+		in := calib.Reading{ID: fmt.Sprintf("%s/%d", rd.Session, rd.Number), Subject: rd.Material, Role: rd.Role, Raw: rd.Raw,
+			StandardUncertainty: rd.U, Size: rd.Size, Excluded: a.excluded[rd.Number]}
+		if rd.Sample != "" {
+			in.Subject = rd.Sample
+		}
+		if rd.Preparation != "" {
+			in.Preparation = in.Subject + "/" + rd.Preparation
+		}
+		switch {
+		case rd.At != nil:
+			hours := float64(*rd.At-*a.origin) / 3600e6
+			in.Time = &hours
+		case a.origin == nil && rd.Position != nil: // position stands in for time where the file has no clock
+			position := float64(*rd.Position)
+			in.Time = &position
+		}
+		s.Readings = append(s.Readings, in)
+	}
+	l := a.limits
+	p := calib.Policy{Probability: l.Probability, CoverageFactor: l.CoverageFactor, LeftOutLimit: l.LeftOut, StudentizedLimit: l.Studentized,
+		MinimumSpan: l.MinimumSpan, AdvisedSpan: l.AdvisedSpan, MinimumAnchors: l.MinimumAnchors}
+	if b := a.between; b != nil {
+		p.BetweenSession = calib.BetweenSession{StandardUncertainty: b.StandardUncertainty, Session: a.session.Code, Scale: a.spec.Scale, Common: b.Common}
+		if b.DegreesOfFreedom != nil {
+			p.BetweenSession.DegreesOfFreedom = *b.DegreesOfFreedom
+			p.BetweenSession.Group = fmt.Sprintf("between_session:%s.%d/%s", a.method.Code, a.method.Ref.Version, a.spec.Scale)
+		}
+	}
+	return s, p, nil
+}

@@ -1,0 +1,47 @@
+package registry
+
+import (
+	"context"
+	"errors"
+
+	"deltamoor/store"
+)
+
+// An IdempotencyKey is what a program calls one request of its own, and the
+// SHA-256 of that request, so that another request under the same name shows.
+type IdempotencyKey struct {
+	Key     string
+	Request store.Hash
+}
+
+// Recall finds the answer that an earlier request with the key was given. The
+// same key with another request is refused as invalid.
+func (r *Registry) Recall(ctx context.Context, actor Actor, k IdempotencyKey) (answer []byte, found bool, err error) {
+	if actor.Person == "" || actor.Laboratory == "" {
+		return nil, false, Refuse(Unauthenticated, "sign in or send a token first")
+	}
+	err = r.store.Read(ctx, func(ctx context.Context, v *store.View) error {
+		var err error
+		answer, err = v.Recall(ctx, actor.Laboratory, actor.Person, k.Key, k.Request)
+		return err
+	})
+	switch {
+	case errors.Is(err, store.ErrNotFound):
+		return nil, false, nil
+	case errors.Is(err, store.ErrKeyReused):
+		return nil, false, &Error{Meaning: Invalid, Message: "this Idempotency-Key was used for another request", Err: err,
+			Complaints: []Complaint{{Place: "header.Idempotency-Key", Found: quote(k.Key), Expected: "a key of its own for every request"}}}
+	}
+	return answer, err == nil, err
+}
+
+// Remember keeps the answer to a request for as long as store.IdempotencyPeriod.
+func (r *Registry) Remember(ctx context.Context, actor Actor, k IdempotencyKey, answer []byte) error {
+	if actor.Person == "" || actor.Laboratory == "" {
+		return Refuse(Unauthenticated, "sign in or send a token first")
+	}
+	_, err := r.store.Write(ctx, actor.Laboratory, func(ctx context.Context, tx *store.Tx) error {
+		return tx.Remember(ctx, actor.Person, k.Key, k.Request, answer)
+	})
+	return err
+}
