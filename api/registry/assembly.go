@@ -50,12 +50,12 @@ func assemble(ctx context.Context, v *store.View, laboratory string, q FitReques
 	if ref, err := inputOf(s.Inputs, "instrument"); err == nil {
 		inputs = append(inputs, store.Input{Part: "instrument", Ref: ref})
 	}
-	var last store.Ref
-	if a.excluded, _, last, err = exclusions(ctx, v, laboratory, a.session.Code); err != nil {
+	var acts []store.Ref
+	if a.excluded, acts, err = exclusions(ctx, v, laboratory, a.session.Code); err != nil {
 		return a, nil, err
 	}
-	if last.Version > 0 {
-		inputs = append(inputs, store.Input{Part: "exclusion", Ref: last})
+	for _, act := range acts { // each, so that every reason stands in the trace
+		inputs = append(inputs, store.Input{Part: "exclusion", Ref: act})
 	}
 	if err := a.loadReadings(ctx, v, laboratory); err != nil {
 		return a, nil, err

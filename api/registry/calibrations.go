@@ -120,6 +120,7 @@ func (a *assembly) fit() (store.Calibration, error) {
 		}
 	}
 	body.Flags = append(body.Flags, a.slopeFlags(result)...)
+	body.Flags = append(body.Flags, a.repeatabilityFlags(result)...)
 	body.Flags = append(body.Flags, a.flags...)
 	return body, nil
 }

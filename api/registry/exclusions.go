@@ -36,7 +36,7 @@ func (r *Registry) Exclude(ctx context.Context, actor Actor, session string, x s
 			return err
 		}
 		var c complaints
-		excluded, seen, _, err := exclusions(ctx, &tx.View, actor.Laboratory, session)
+		excluded, acts, err := exclusions(ctx, &tx.View, actor.Laboratory, session)
 		if err != nil {
 			return err
 		}
@@ -54,7 +54,7 @@ func (r *Registry) Exclude(ctx context.Context, actor Actor, session string, x s
 		if err := Complain("this exclusion cannot be recorded", c); err != nil {
 			return err
 		}
-		if e.After != seen {
+		if seen := len(acts); e.After != seen {
 			return Refuse(Stale, "session %s has %d acts of exclusion by now, not %d: read them again", store.FormatCode(session), seen, e.After)
 		}
 		_, err = tx.Append(ctx, store.Draft{Kind: store.KindExclusion, Code: session, By: actor.Person, Reason: strings.TrimSpace(e.Reason),
@@ -67,21 +67,21 @@ func (r *Registry) Exclude(ctx context.Context, actor Actor, session string, x s
 	return reread[store.Exclusion](ctx, r, actor, store.KindExclusion, session)
 }
 
-// exclusions replays a session's acts: which readings are out now, and the
-// newest act's version.
-func exclusions(ctx context.Context, v *store.View, laboratory, session string) (map[int]bool, int, store.Ref, error) {
+// exclusions replays a session's acts: which readings are out now, and every
+// act's version in order.
+func exclusions(ctx context.Context, v *store.View, laboratory, session string) (map[int]bool, []store.Ref, error) {
 	out := map[int]bool{}
 	key := store.Key{Laboratory: laboratory, Kind: store.KindExclusion, Code: session}
-	var last store.Ref
+	var acts []store.Ref
 	for after := 0; ; {
 		raws, err := v.Versions(ctx, key, after, MaxPage)
 		if err != nil {
-			return nil, 0, last, err
+			return nil, nil, err
 		}
 		for _, raw := range raws {
 			x, err := store.Decode[store.Exclusion](raw)
 			if err != nil {
-				return nil, 0, last, err
+				return nil, nil, err
 			}
 			for _, n := range x.Value.Readings {
 				if x.Value.Act == "exclude" {
@@ -90,10 +90,10 @@ func exclusions(ctx context.Context, v *store.View, laboratory, session string) 
 					delete(out, n)
 				}
 			}
-			last, after = x.Ref, x.Ref.Version
+			acts, after = append(acts, x.Ref), x.Ref.Version
 		}
 		if len(raws) < MaxPage {
-			return out, after, last, nil
+			return out, acts, nil
 		}
 	}
 }

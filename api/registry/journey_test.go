@@ -320,6 +320,46 @@ func TestOverlappingSessionsOfOneInstrumentAreFlagged(t *testing.T) {
 	}
 }
 
+func TestScatterBeyondTheMethodsLimitIsFlagged(t *testing.T) {
+	b := openBench(t)
+	m := carbonMethod()
+	m.Quantities[0].Limits.ReplicateSD = 0.001
+	b.method("C-solid", m)
+	session := b.session(carbonRows(b.sample("Marsh survey", "A1"))).Session.Code
+	c, err := b.Fit(b.ctx, b.analyst, registry.FitRequest{Session: session, Quantity: "d13C", Preview: true})
+	b.must(err)
+	for _, f := range c.Value.Flags {
+		if f.Code == "repeatability_outside_limit" {
+			return
+		}
+	}
+	t.Errorf("flags %+v: want repeatability_outside_limit, since the ripple is 0.04 and the limit 0.001", c.Value.Flags)
+}
+
+func TestOneLabelOfTwoMaterialsIsTwoUnits(t *testing.T) {
+	b := openBench(t)
+	b.method("C-solid", carbonMethod())
+	bottles := map[string]string{}
+	for _, material := range []string{"USGS40", "USGS41"} {
+		added, err := b.AddUnits(b.ctx, b.manager, store.Unit{Material: material, Label: "bottle 1", State: "open"}, 1)
+		b.must(err)
+		bottles[material] = added[0].Code
+	}
+	tab := table(carbonRows("USGS40")...)
+	for i := range tab.Readings {
+		if bottles[tab.Readings[i].Name] != "" {
+			tab.Readings[i].Unit = "bottle 1"
+		}
+	}
+	answer, err := b.ImportReadings(b.ctx, b.analyst, registry.ImportRequest{New: &registry.SessionRequest{Instrument: "EA1", Method: "C-solid"}, Bytes: []byte("units"), Table: tab})
+	b.must(err)
+	for _, rd := range answer.Readings {
+		if rd.Unit != bottles[rd.Material] {
+			t.Errorf("reading %d of %s: unit %s, want %s", rd.Number, rd.Material, rd.Unit, bottles[rd.Material])
+		}
+	}
+}
+
 func TestFitRefusesWhatCannotBeALine(t *testing.T) {
 	b := openBench(t)
 	b.method("C-solid", carbonMethod())
@@ -361,6 +401,15 @@ func TestExclusionIsRecordedAndReadmissible(t *testing.T) {
 	b.must(err)
 	if fmt.Sprint(c.Value.Excluded) != "[3]" {
 		t.Errorf("excluded: %v, want [3]", c.Value.Excluded)
+	}
+	parts := 0
+	for _, in := range c.Inputs {
+		if in.Part == "exclusion" {
+			parts++
+		}
+	}
+	if parts != 1 {
+		t.Errorf("the calibration names %d acts of exclusion, want 1", parts)
 	}
 	_, err = b.Exclude(b.ctx, b.analyst, session, store.Exclusion{Act: "readmit", Readings: []int{3}, Cause: "other"}, registry.Edit{After: 1, Reason: "the log showed another position"})
 	b.must(err)

@@ -75,3 +75,23 @@ func (a *assembly) slopeFlags(r *calib.Result) []calib.Flag {
 	}
 	return nil
 }
+
+// repeatabilityFlags holds the scatter of replicates against the method's limit.
+// The residual standard deviation is that of raw deltas, so it is divided by the slope.
+func (a *assembly) repeatabilityFlags(r *calib.Result) []calib.Flag {
+	limit := a.limits.ReplicateSD
+	if limit == 0 || r.ResidualSD == nil {
+		return nil
+	}
+	for _, p := range r.Parameters {
+		if p.Name != "slope" || p.Value == 0 {
+			continue
+		}
+		if sd := *r.ResidualSD / math.Abs(p.Value); sd > limit {
+			return []calib.Flag{{Code: "repeatability_outside_limit", Severity: calib.Warning,
+				Message: fmt.Sprintf("Readings scatter about the fit by %.3f ‰ (standard deviation); the method expects %.3f ‰ or less.", sd, limit),
+				Advice:  "Look at leaks, peak sizes and weighings before trusting any value of this session."}}
+		}
+	}
+	return nil
+}

@@ -20,7 +20,7 @@ func resolveReadings(ctx context.Context, v *store.View, laboratory string, meth
 		complaint        *Complaint
 	}
 	subjects := map[string]subject{}
-	units := map[string]string{}
+	units := map[[2]string]string{} // by label and material: two materials may each have a "bottle 1"
 	var c complaints
 	out := make([]store.Reading, 0, len(table.Readings))
 	quantities := map[string]store.MethodQuantity{}
@@ -74,7 +74,7 @@ func resolveReadings(ctx context.Context, v *store.View, laboratory string, meth
 			c.add(place("u"), fmt.Sprint(*raw.U), "a standard uncertainty of 0 or more")
 		}
 		if raw.Unit != "" {
-			code, ok := units[raw.Unit]
+			code, ok := units[[2]string{raw.Unit, s.material}]
 			if !ok {
 				var complaint *Complaint
 				var err error
@@ -86,7 +86,7 @@ func resolveReadings(ctx context.Context, v *store.View, laboratory string, meth
 					c = append(c, *complaint)
 					continue
 				}
-				units[raw.Unit] = code
+				units[[2]string{raw.Unit, s.material}] = code
 			}
 			rd.Unit = code
 		}
