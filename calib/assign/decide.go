@@ -3,6 +3,7 @@ package assign
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"deltamoor/calib/uncertain"
 )
@@ -76,6 +77,8 @@ type Decision struct {
 	// Drift is the slope to be stated with [ValueWithTime], in ‰ per unit of time.
 	Drift  *float64
 	Budget []BudgetLine
+	// Remarks are those of the three parts.
+	Remarks []Remark
 	// Common is what all units share: the sources of the characterisation, which
 	// keep their identity, and stability:<lot>/<version>.
 	Common uncertain.Number
@@ -106,12 +109,13 @@ func Decide(in DecisionInput) (*Decision, error) {
 	c := in.Characterisation
 	d := &Decision{
 		Value: c.Value.Value, CharacterisationUncertainty: c.Value.StandardUncertainty(),
-		Common: c.Value, Groups: c.Groups, lot: in.Lot,
+		Common: c.Value, Groups: c.Groups, Remarks: slices.Clone(c.Remarks), lot: in.Lot,
 	}
 	if h := in.Homogeneity; h != nil {
 		d.HomogeneityUncertainty, d.MinimumPortion = h.StandardUncertainty, h.MinimumPortion
 		d.unit = uncertain.Source{Kind: uncertain.KindUnit, U: h.StandardUncertainty, Group: h.Group.ID, Per: []float64{1}}
 		d.Groups = joinGroups(d.Groups, []uncertain.Group{h.Group})
+		d.Remarks = append(d.Remarks, h.Remarks...)
 	}
 	if in.Stability != nil {
 		if err := d.stability(in); err != nil {
@@ -144,6 +148,7 @@ func Decide(in DecisionInput) (*Decision, error) {
 func (d *Decision) stability(in DecisionInput) error {
 	s := in.Stability
 	d.ShelfLife = s.ShelfLife
+	d.Remarks = append(d.Remarks, s.Remarks...)
 	switch t := in.Trend; {
 	case !s.Significant:
 	case t == nil:

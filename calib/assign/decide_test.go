@@ -53,6 +53,9 @@ func TestAssignedValueAddsItsThreePartsInQuadrature(t *testing.T) {
 	near(t, "shares", shares, 1, 1e-12)
 	near(t, "anchors in the budget", d.Budget[1].StandardUncertainty, math.Hypot(0.6*0.03, 0.4*0.05), 1e-12)
 	near(t, "minimum portion", d.MinimumPortion, 0.9, 1e-12)
+	if want := len(in.Characterisation.Remarks) + len(in.Homogeneity.Remarks) + len(in.Stability.Remarks); len(d.Remarks) != want || want == 0 {
+		t.Errorf("%d remarks, the parts have %d", len(d.Remarks), want)
+	}
 }
 
 func TestAssignedValueStaysCorrelatedWithItsAnchorsAndUnits(t *testing.T) {

@@ -246,13 +246,13 @@ type SufficientHomogeneity struct {
 	SufficientWhenExpanded bool
 }
 
-// SufficientFor judges the study for a standard deviation σ_pt for proficiency.
-func (h *Homogeneity) SufficientFor(sigmaPT float64) (SufficientHomogeneity, error) {
-	if !(sigmaPT > 0) || !finite(sigmaPT) {
-		return SufficientHomogeneity{}, &InputError{Place: "standard deviation for proficiency", Found: fmt.Sprint(sigmaPT), Expected: "a positive number"}
+// SufficientFor judges the study for a standard deviation for proficiency, σ_pt.
+func (h *Homogeneity) SufficientFor(deviation float64) (SufficientHomogeneity, error) {
+	if !(deviation > 0) || !finite(deviation) {
+		return SufficientHomogeneity{}, &InputError{Place: "standard deviation for proficiency", Found: fmt.Sprint(deviation), Expected: "a positive number"}
 	}
 	f1, f2 := expandedFactors(h.BetweenDF, h.WithinDF, h.EffectiveReplicates)
-	c := 0.3 * sigmaPT
+	c := 0.3 * deviation
 	e := math.Sqrt(float64(f1*float64(c*c)) + float64(f2*h.MeanSquareWithin))
 	return SufficientHomogeneity{
 		Criterion: c, Sufficient: h.BetweenUnits <= c, F1: f1, F2: f2,
