@@ -14,6 +14,7 @@ import (
 // pinned by a stored version: the same function makes the engine's input of
 // both, so that a stored calibration recomputes.
 type assembly struct {
+	version  store.Ref // of the calibration: its estimated variances are a group of their own
 	session  store.Version[store.Session]
 	method   store.Version[store.Method]
 	spec     store.MethodQuantity
@@ -137,7 +138,7 @@ func otherScales(ctx context.Context, v *store.View, laboratory, material string
 
 // assembleStored loads what a stored calibration names as its inputs.
 func assembleStored(ctx context.Context, v *store.View, c store.Version[store.Calibration]) (assembly, error) {
-	a := assembly{model: c.Value.Model, limits: c.Value.Limits, between: c.Value.BetweenSession, excluded: map[int]bool{}, controls: map[string]store.Version[store.Value]{}}
+	a := assembly{version: c.Ref, model: c.Value.Model, limits: c.Value.Limits, between: c.Value.BetweenSession, excluded: map[int]bool{}, controls: map[string]store.Version[store.Value]{}}
 	for _, n := range c.Value.Excluded {
 		a.excluded[n] = true
 	}
@@ -247,7 +248,7 @@ func mapKeys[K comparable, V any](m map[K]V) func(func(K) bool) {
 
 // input makes the engine's input.
 func (a *assembly) input() (calib.Session, calib.Policy, error) {
-	var s calib.Session
+	s := calib.Session{NoiseGroup: fmt.Sprintf("fit:%s.%d", a.version.Code, a.version.Version)}
 	groups := map[string]bool{}
 	for _, v := range a.anchors {
 		n, gs, err := numberOf(v)

@@ -35,10 +35,6 @@ func (r *Registry) Fit(ctx context.Context, actor Actor, q FitRequest) (Item[sto
 		if err != nil {
 			return err
 		}
-		body, err := a.fit()
-		if err != nil {
-			return err
-		}
 		name := store.CalibrationName(a.session.Code, a.spec.Scale, measurandOf(a.spec))
 		keys, err := tx.Resolve(ctx, actor.Laboratory, store.KindCalibration, name)
 		if err != nil {
@@ -57,6 +53,11 @@ func (r *Registry) Fit(ctx context.Context, actor Actor, q FitRequest) (Item[sto
 				return err
 			}
 			e.After = old.Ref.Version
+		}
+		a.version = store.Ref{Key: store.Key{Laboratory: actor.Laboratory, Kind: store.KindCalibration, Code: code}, Version: e.After + 1}
+		body, err := a.fit()
+		if err != nil {
+			return err
 		}
 		if q.Preview {
 			out = Item[store.Calibration]{State: store.Drafted}

@@ -217,6 +217,51 @@ func TestFromStandardsToATracedDelta(t *testing.T) {
 	}
 }
 
+func TestDifferenceOfTwoDeltasOfOneSessionCancelsWhatTheyShare(t *testing.T) {
+	b := openBench(t)
+	b.method("C-solid", carbonMethod())
+	one, two := b.sample("Marsh survey", "A1"), b.sample("Marsh survey", "A2")
+	rows := carbonRows(one)
+	rows = append(rows[:8:8], row{two, "", -18.9}, row{two, "", -18.9}, row{"USGS40", "", -26.39}, row{"USGS41", "", 37.63})
+	b.approvedResult(b.session(rows).Session.Code)
+	rep := b.report("Marsh survey", b.final(one), b.final(two))
+	c, err := b.Compare(b.ctx, b.auditor, []string{rep.Lines[0].Code, rep.Lines[1].Code})
+	b.must(err)
+	if c.Pair == nil || !(c.Pair.StandardUncertainty < 0.9*c.Pair.RootSumOfSquares) || !(c.Pair.Correlation > 0.1) {
+		t.Errorf("pair %+v: want u of the difference below the root sum of squares, since the anchors are shared", c.Pair)
+	}
+	// var(a − b) = var(a) + var(b) − 2·cov(a, b), from the covariance that stands beside it (JCGM 100:2008 5.2.2).
+	want := c.Covariance[0][0] + c.Covariance[1][1] - 2*c.Covariance[0][1]
+	if got := c.Pair.StandardUncertainty * c.Pair.StandardUncertainty; got < want*(1-1e-9) || got > want*(1+1e-9) {
+		t.Errorf("u²(difference) = %v, the covariance matrix gives %v", got, want)
+	}
+	if u := rep.Lines[0].StandardUncertainty; c.Covariance[0][0] < u*u*(1-1e-9) || c.Covariance[0][0] > u*u*(1+1e-9) {
+		t.Errorf("variance %v of the first delta, its u² is %v", c.Covariance[0][0], u*u)
+	}
+	if mean := c.Mean.StandardUncertainty(); mean < c.MeanCommonPart || c.MeanCommonPart <= 0 {
+		t.Errorf("u of the mean %v falls below the common part %v", mean, c.MeanCommonPart)
+	}
+}
+
+func TestTraceUpFindsWhatRestsOnAnAnchor(t *testing.T) {
+	b := openBench(t)
+	b.method("C-solid", carbonMethod())
+	sample := b.sample("Marsh survey", "A1")
+	c := b.approvedResult(b.session(carbonRows(sample)).Session.Code)
+	rep := b.report("Marsh survey", b.final(sample))
+	up, err := b.TraceUp(b.ctx, b.auditor, store.KindValue, registry.ValueCode("USGS40", "d13C-VPDB-LSVEC", ""), 0)
+	b.must(err)
+	found := map[string]bool{}
+	for _, n := range up.Nodes {
+		found[string(n.Kind)+" "+n.Code] = true
+	}
+	for _, want := range []string{"calibration " + c.Code, "report " + rep.Code} {
+		if !found[want] {
+			t.Errorf("what rests on the value of USGS40 lacks %s: %v", want, found)
+		}
+	}
+}
+
 func TestApprovalNeedsAnotherPersonAndTheRole(t *testing.T) {
 	b := openBench(t)
 	b.method("C-solid", carbonMethod())

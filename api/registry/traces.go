@@ -156,7 +156,7 @@ func (t *tracer) walk(ctx context.Context, start store.Ref, line int) error {
 // describe fills in a node, and gives the variance shares of its inputs by index.
 func (t *tracer) describe(ctx context.Context, i int, raw store.Raw) (map[int]float64, error) {
 	n := &t.trace.Nodes[i]
-	n.Title = versionName(raw.Ref)
+	n.Ref, n.Title = raw.Ref, versionName(raw.Ref)
 	n.RecordedAt, n.RecordedBy, n.ValidFrom, n.Reason = raw.RecordedAt, raw.RecordedBy, raw.ValidFrom, raw.Reason
 	state, decisions, err := t.v.State(ctx, raw.Ref, store.Moment{})
 	if err != nil {
@@ -336,4 +336,64 @@ func (t *tracer) anchorShares(c store.Version[store.Calibration]) map[int]float6
 		k++
 	}
 	return shares
+}
+
+// TraceUp follows what rests on a version: generation by generation upwards,
+// to reports. At most MaxTrace nodes are listed; Cut counts versions beyond.
+func (r *Registry) TraceUp(ctx context.Context, actor Actor, kind store.Kind, code string, version int) (Trace, error) {
+	var out Trace
+	err := r.read(ctx, actor, func(ctx context.Context, v *store.View) error {
+		out = Trace{}
+		raw, err := lookup(ctx, v, actor.Laboratory, kind, code, version, store.Moment{})
+		if err != nil {
+			return err
+		}
+		t := tracer{v: v, trace: &out, at: map[store.Ref]int{raw.Ref: 0}, through: map[store.Ref]string{}}
+		out.Nodes = append(out.Nodes, TraceNode{Ref: raw.Ref})
+		for i := 0; i < len(out.Nodes); i++ {
+			if err := t.climb(ctx, actor.Laboratory, i); err != nil {
+				return err
+			}
+		}
+		return nil
+	})
+	return out, err
+}
+
+// climb describes node i and adds what rests on it. Decisions about it are
+// part of its description, not of the graph.
+func (t *tracer) climb(ctx context.Context, laboratory string, i int) error {
+	ref := t.trace.Nodes[i].Ref
+	raw, err := t.v.Version(ctx, ref.Key, ref.Version)
+	if err != nil {
+		return fmt.Errorf("trace %s: %w", ref, err)
+	}
+	if _, err := t.describe(ctx, i, raw); err != nil {
+		return err
+	}
+	for after := ""; ; {
+		edges, next, err := t.v.EdgesTo(ctx, store.EdgeQuery{Laboratory: laboratory, To: ref.Key, Version: ref.Version, After: after, Limit: MaxPage})
+		if err != nil {
+			return err
+		}
+		for _, e := range edges {
+			if e.From.Kind == store.KindDecision {
+				continue
+			}
+			from, ok := t.at[e.From]
+			if !ok {
+				if len(t.trace.Nodes) >= MaxTrace {
+					t.trace.Cut++
+					continue
+				}
+				from = len(t.trace.Nodes)
+				t.at[e.From] = from
+				t.trace.Nodes = append(t.trace.Nodes, TraceNode{Ref: e.From, Depth: t.trace.Nodes[i].Depth + 1})
+			}
+			t.trace.Edges = append(t.trace.Edges, TraceEdge{From: from, To: i, Part: e.Part})
+		}
+		if after = next; after == "" {
+			return nil
+		}
+	}
 }
