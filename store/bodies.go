@@ -102,6 +102,19 @@ type Material struct {
 	Document    *Hash           `json:"document,omitempty"`
 	Provisional bool            `json:"provisional,omitempty"`
 	Note        string          `json:"note,omitempty"`
+	// Stock says how its units are kept and watched; nil asks for nothing.
+	Stock *StockRule `json:"stock,omitempty"`
+}
+
+// A StockRule limits the units of a material and says when it is looked at; 0 asks for nothing.
+type StockRule struct {
+	MaximumOpenings int     `json:"maximum_openings,omitempty"`
+	MaximumAgeDays  float64 `json:"maximum_age_days,omitempty"` // since the first opening
+	RecheckDays     float64 `json:"recheck_days,omitempty"`     // between results that check its value
+	// Portion is what one analysis takes, losses included.
+	Portion *Amount `json:"portion,omitempty"`
+	// LeadDays is how long before the end a successor must be begun.
+	LeadDays float64 `json:"lead_days,omitempty"`
 }
 
 // An Identifier names a material in somebody else's system.
@@ -155,6 +168,15 @@ type Value struct {
 	Sources []Source `json:"sources,omitempty"`
 	// Groups are the variance groups that Sources name.
 	Groups []Group `json:"groups,omitempty"`
+	// UBetweenUnits is the homogeneity of the lot and ULongTerm its stability,
+	// where a campaign assigned the value: u² = u_char² + u_bb² + u_lts². Sources
+	// hold the characterisation and the stability; the homogeneity joins per unit
+	// where a unit is used.
+	UBetweenUnits *ValueComponent `json:"u_bb,omitempty"`
+	ULongTerm     *ValueComponent `json:"u_lts,omitempty"`
+	Campaign      *CampaignResult `json:"campaign,omitempty"`
+	// BackLoaded marks a value that was assigned before the registry was in use.
+	BackLoaded bool `json:"back_loaded,omitempty"`
 }
 
 // Stated is an uncertainty as its source printed it.
@@ -202,6 +224,14 @@ type Unit struct {
 	State              string  `json:"state"` // sealed open in-use suspect quarantined empty disposed
 	Content            *Amount `json:"content,omitempty"`
 	Location           string  `json:"location,omitempty"`
+	// FillingOrder is its place in the order of filling, from 1; 0 where unknown.
+	FillingOrder int `json:"filling_order,omitempty"`
+	// Openings counts how often it was opened, OpenedAt is when it was first.
+	Openings int      `json:"openings,omitempty"`
+	OpenedAt *Instant `json:"opened_at,omitempty"`
+	// SuspectSince is the last moment at which it was known to be good, for a unit
+	// that is suspect or quarantined: what used it later is in doubt.
+	SuspectSince *Instant `json:"suspect_since,omitempty"`
 }
 
 // Form of the body.

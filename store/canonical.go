@@ -114,6 +114,11 @@ func DecisionSubject(laboratory, code string) (Key, int, error) {
 	return Key{Laboratory: laboratory, Kind: Kind(kind), Code: rest[:dot]}, version, nil
 }
 
+// textFault reports whether checkText would refuse.
+func textFault(text string, limit int) bool {
+	return len(text) > limit || !utf8.ValidString(text) || strings.IndexByte(text, 0) >= 0
+}
+
 // checkText refuses what one of the engines, or a page, could not show again.
 func checkText(place, text string, limit int) error {
 	switch {

@@ -13,6 +13,11 @@ type engine struct {
 	name    string // also the folder of its migrations
 	dialect goose.Dialect
 
+	// unnumbered: parameters used once each, in order, are written "?".
+	unnumbered bool
+	// withWanted begins a statement about many versions, given as a JSON array of
+	// arrays; see wantedRows.
+	withWanted string
 	// open returns the pool that writes and the pool that reads; they may be one.
 	open func(ctx context.Context, o Options) (write, read *sql.DB, err error)
 	// hasTable asks whether the table $1 exists: one row with a count.

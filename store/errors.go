@@ -153,11 +153,16 @@ func (e *SchemaError) Is(target error) bool {
 // A CorruptError is a stored row that cannot be what was recorded. Verify names
 // the place of every one.
 type CorruptError struct {
-	Ref   Ref
+	Ref Ref
+	// Found is the hash of what is stored, where it is not the hash in Ref.
+	Found Hash
 	cause error
 }
 
 func (e *CorruptError) Error() string {
+	if e.cause == nil {
+		return fmt.Sprintf("%s is corrupt: found a body with hash %s, expected %s", e.Ref, e.Found, e.Ref.Hash)
+	}
 	return fmt.Sprintf("%s is corrupt: %v", e.Ref, e.cause)
 }
 

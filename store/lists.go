@@ -210,7 +210,7 @@ type RecentQuery struct {
 
 const (
 	selectRecent = `SELECT ` + versionColumns + ` FROM versions v
-		WHERE v.laboratory = $1 AND v.kind = $2 AND v.recorded_at <= $3 AND v.position < $4
+		WHERE v.laboratory = $1 AND v.kind || '' = $2 AND v.recorded_at <= $3 AND v.position < $4
 		ORDER BY v.recorded_at DESC, v.position DESC LIMIT $5`
 	selectRecentOfAll = `SELECT ` + versionColumns + ` FROM versions v
 		WHERE v.laboratory = $1 AND v.recorded_at <= $2 AND v.position < $3

@@ -114,8 +114,9 @@ func (s *Store) leaseMigration(ctx context.Context, holder string) (release func
 		}
 	}
 	take := func() (bool, error) {
-		// Leases compare the clocks of machines; a minute of difference is ten leases off,
-		// and only means that a dead process is waited for longer.
+		// The lease compares the clocks of machines. A holder whose clock is behind by
+		// more than the lease could be overtaken, so a migration must also run in a
+		// transaction of its own, which it does.
 		now := InstantOf(time.Now())
 		result, err := s.write.ExecContext(ctx, takeMigrationLease, holder, int64(now)+migrationLease.Microseconds(), int64(now))
 		if err != nil {

@@ -21,9 +21,10 @@ import (
 
 func postgresEngine() *engine {
 	return &engine{
-		name:    migrations.Postgres,
-		dialect: goose.DialectPostgres,
-		open:    openPostgres,
+		name:       migrations.Postgres,
+		dialect:    goose.DialectPostgres,
+		withWanted: wantedRows + `jsonb_array_elements(cast($1 as jsonb)) j (value)`,
+		open:       openPostgres,
 		hasTable: `SELECT count(*) FROM information_schema.tables
 			WHERE table_schema = current_schema() AND table_name = $1`,
 		read: sql.TxOptions{Isolation: sql.LevelRepeatableRead, ReadOnly: true},
@@ -82,6 +83,9 @@ func postgresClass(err error) errorClass {
 		return classGone
 	}
 	if _, ok := errors.AsType[net.Error](err); ok && !errors.Is(err, context.DeadlineExceeded) {
+		return classGone
+	}
+	if pgconn.SafeToRetry(err) { // such as a connection already closed
 		return classGone
 	}
 	if errors.Is(err, driver.ErrBadConn) || errors.Is(err, io.ErrUnexpectedEOF) || errors.Is(err, io.EOF) || errors.Is(err, net.ErrClosed) {

@@ -119,21 +119,24 @@ func ReadingBlocks(readings []Reading) []Hash {
 	return h.sum()
 }
 
+// maxReadingText bounds one text of a reading, in bytes.
+const maxReadingText = 10_000
+
 // check refuses what cannot be stored and read back the same, or found again.
 func (r *Reading) check(laboratory string) error {
 	place := func(field string) string {
 		return fmt.Sprintf("session %s/%s reading %d %s", laboratory, r.Session, r.Number, field)
 	}
-	for _, t := range []struct{ name, text string }{
+	for _, t := range [...]struct{ name, text string }{
 		{"session", r.Session}, {"analysis", r.Analysis}, {"preparation", r.Preparation}, {"quantity", r.Quantity},
 		{"role", string(r.Role)}, {"material", r.Material}, {"unit", r.Unit}, {"sample", r.Sample},
 		{"compound", r.Compound}, {"group", r.Group}, {"extra", r.Extra},
 	} {
-		if err := checkText(place(t.name), t.text, 10_000); err != nil {
-			return err
+		if textFault(t.text, maxReadingText) {
+			return checkText(place(t.name), t.text, maxReadingText)
 		}
 	}
-	for _, f := range []struct {
+	for _, f := range [...]struct {
 		name  string
 		value *float64
 	}{{"raw", &r.Raw}, {"u", r.U}, {"size", r.Size}} {

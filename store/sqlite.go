@@ -10,6 +10,7 @@ import (
 	"path/filepath"
 	"runtime"
 	"strings"
+	"time"
 
 	"github.com/pressly/goose/v3"
 	"modernc.org/sqlite"
@@ -24,6 +25,8 @@ func sqliteEngine() *engine {
 	return &engine{
 		name:         migrations.SQLite,
 		dialect:      goose.DialectSQLite3,
+		unnumbered:   true,
+		withWanted:   wantedRows + `json_each($1) j`,
 		open:         openSQLite,
 		hasTable:     `SELECT count(*) FROM sqlite_master WHERE type = 'table' AND name = $1`,
 		copyReadings: insertReadings,
@@ -73,8 +76,17 @@ func openSQLite(ctx context.Context, o Options) (write, read *sql.DB, err error)
 	// Two connections that write would only wait for each other's lock; one pool of
 	// one queues in the program (measured: ten times the commits).
 	write.SetMaxOpenConns(1)
-	if err := write.PingContext(ctx); err != nil {
-		return nil, nil, errors.Join(fmt.Errorf("open database %s: %w", path, err), write.Close())
+	// Of processes that turn a new database to its write-ahead log at once all but
+	// one are told that it is busy, without the driver's waiting for it.
+	for deadline := time.Now().Add(writePeriod); ; {
+		err := write.PingContext(ctx)
+		if err == nil {
+			break
+		}
+		if sqliteClass(err) != classRetry || time.Now().After(deadline) || ctx.Err() != nil {
+			return nil, nil, errors.Join(fmt.Errorf("open database %s: %w", path, err), write.Close())
+		}
+		time.Sleep(10 * time.Millisecond)
 	}
 	read, err = sql.Open("sqlite", name+common+"&_pragma=query_only(1)")
 	if err != nil {
@@ -122,7 +134,7 @@ const readingsPerStatement = 40
 
 func insertReadings(ctx context.Context, _ *sql.Conn, tx *sql.Tx, rows [][]any) error {
 	width := len(readingColumns)
-	many, err := tx.PrepareContext(ctx, readingsTable.statement(readingsPerStatement, ""))
+	many, err := tx.PrepareContext(ctx, readingsTable.statement(sqliteEngine(), readingsPerStatement, ""))
 	if err != nil {
 		return err
 	}
@@ -145,6 +157,6 @@ func insertReadings(ctx context.Context, _ *sql.Conn, tx *sql.Tx, rows [][]any) 
 	for _, r := range rows {
 		args = append(args, r...)
 	}
-	_, err = tx.ExecContext(ctx, readingsTable.statement(len(rows), ""), args...)
+	_, err = tx.ExecContext(ctx, readingsTable.statement(sqliteEngine(), len(rows), ""), args...)
 	return err
 }

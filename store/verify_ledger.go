@@ -217,6 +217,9 @@ func (c *checker) versions(ctx context.Context, rows []versionRow) error {
 		if err := c.derived(ctx, v, raws); err != nil {
 			return err
 		}
+		if err := c.haveCurrents(ctx, v, rows); err != nil {
+			return err
+		}
 		for _, raw := range raws {
 			if err := c.bulk(ctx, v, raw); err != nil {
 				return err

@@ -68,7 +68,7 @@ func rowKey(t string, row []any) string {
 }
 
 // derivedOf selects the derived rows of some versions.
-func derivedOf(t table, kind, code, version string, of Kind) (before, after string) {
+func derivedOf(t table, kind, code, version string, of Kind) string {
 	columns := make([]string, len(t.columns))
 	for i, c := range t.columns {
 		columns[i] = "d." + c
@@ -77,7 +77,7 @@ func derivedOf(t table, kind, code, version string, of Kind) (before, after stri
 	if kind == "" {
 		kindIs = "w.kind = '" + string(of) + "'"
 	}
-	return withWanted, fmt.Sprintf(`) SELECT %s FROM wanted w JOIN %s d ON d.laboratory = w.laboratory AND %s AND d.%s = w.code AND d.%s = w.version`,
+	return fmt.Sprintf(`) SELECT %s FROM wanted w JOIN %s d ON d.laboratory = w.laboratory AND %s AND d.%s = w.code AND d.%s = w.version`,
 		strings.Join(columns, ", "), t.name, kindIs, code, version)
 }
 
@@ -139,17 +139,16 @@ func (v *View) derivedRows(ctx context.Context, t table, kind, code, version str
 	if of != "" {
 		refs = slices.DeleteFunc(slices.Clone(refs), func(w wanted) bool { return w.Kind != of })
 	}
-	var found [][]any
-	before, after := derivedOf(t, kind, code, version, of)
-	for len(refs) > 0 {
-		n := min(len(refs), codesPerStatement)
-		values, args := wantedValues(refs[:n])
-		rows, err := v.rows(ctx, len(t.columns), before+values+after, args...)
-		if err != nil {
-			return nil, fmt.Errorf("read %s: %w", t.name, err)
-		}
-		found = append(found, rows...)
-		refs = refs[n:]
+	if len(refs) == 0 {
+		return nil, nil
+	}
+	list, err := wantedList(refs)
+	if err != nil {
+		return nil, err
+	}
+	found, err := v.rows(ctx, len(t.columns), v.q.engine.withWanted+derivedOf(t, kind, code, version, of), list)
+	if err != nil {
+		return nil, fmt.Errorf("read %s: %w", t.name, err)
 	}
 	return found, nil
 }

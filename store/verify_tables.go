@@ -3,6 +3,7 @@ package store
 import (
 	"bytes"
 	"context"
+	"database/sql"
 	"errors"
 	"fmt"
 	"strconv"
@@ -54,13 +55,13 @@ func orphanKey(o orphan, row []any) string {
 }
 
 var orphans = []orphan{
-	{"versions", "no ledger entry at its position", []string{"%s ", "%s", "/%s", ".%s"},
-		`SELECT v.kind, v.laboratory, v.code, v.version FROM versions v
-			LEFT JOIN entries e ON e.laboratory = v.laboratory AND e.position = v.position
-			WHERE v.laboratory = $1 AND e.position IS NULL ORDER BY v.kind, v.code, v.version`},
+	// Of positions below the size the walk has seen entry and version.
+	{"versions", "the ledger ends before its position", []string{"%s ", "%s", "/%s", ".%s"},
+		`SELECT kind, laboratory, code, version FROM versions WHERE laboratory = $1
+			AND position >= (SELECT coalesce(max(size), 0) FROM ledger_heads WHERE laboratory = $1) ORDER BY position`},
 	{"entries", "the ledger ends before it", []string{"%s", " position %s"},
-		`SELECT e.laboratory, e.position FROM entries e LEFT JOIN ledger_heads h ON h.laboratory = e.laboratory
-			WHERE e.laboratory = $1 AND e.position >= coalesce(h.size, 0) ORDER BY e.position`},
+		`SELECT laboratory, position FROM entries WHERE laboratory = $1
+			AND position >= (SELECT coalesce(max(size), 0) FROM ledger_heads WHERE laboratory = $1) ORDER BY position`},
 	{"edges", "no version it comes from", []string{"%s", " %s", " %s", " %s", " %s", " %s", " %s", " %s", " %s"},
 		`SELECT d.laboratory, d.from_kind, d.from_code, d.from_version, d.to_laboratory, d.to_kind, d.to_code, d.to_version, d.part FROM edges d
 			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = d.from_kind AND v.code = d.from_code AND v.version = d.from_version
@@ -93,20 +94,20 @@ var orphans = []orphan{
 
 const (
 	selectHeadRow = `SELECT size, recorded_at, checkpoints FROM ledger_heads WHERE laboratory = $1`
-	selectLastRow = `SELECT coalesce(max(position), -1), coalesce(max(recorded_at), 0) FROM versions WHERE laboratory = $1`
-	countNodes    = `SELECT count(*), coalesce(max(node), -1) FROM tree_hashes WHERE laboratory = $1`
+	selectLastRow = `SELECT position, recorded_at FROM versions WHERE laboratory = $1 ORDER BY position DESC LIMIT 1`
 	countSigned   = `SELECT count(*) FROM checkpoints WHERE laboratory = $1`
 	selectNodesTo = `SELECT node FROM tree_hashes WHERE laboratory = $1 AND node >= $2 ORDER BY node LIMIT 100`
 )
 
 // head checks the one row writers queue for.
 func (c *checker) head(ctx context.Context, v *View) error {
-	var size, at, checkpoints, signed, last, lastAt, nodes, lastNode int64
+	var size, at, checkpoints, signed, lastAt int64
+	last := int64(-1)
 	rows, err := v.rows(ctx, 3, selectHeadRow, c.laboratory)
 	if err != nil {
 		return fmt.Errorf("read the head: %w", err)
 	}
-	if err := v.q.one(ctx, selectLastRow, []any{c.laboratory}, &last, &lastAt); err != nil {
+	if err := v.q.one(ctx, selectLastRow, []any{c.laboratory}, &last, &lastAt); err != nil && !errors.Is(err, sql.ErrNoRows) {
 		return fmt.Errorf("read the last version: %w", err)
 	}
 	if err := v.q.one(ctx, countSigned, []any{c.laboratory}, &signed); err != nil {
@@ -131,13 +132,7 @@ func (c *checker) head(ctx context.Context, v *View) error {
 		c.find(-1, "ledger_heads", c.laboratory, fmt.Sprintf("%d checkpoints", checkpoints), fmt.Sprint(signed))
 		c.find(-1, "checkpoints", c.laboratory, fmt.Sprintf("%d rows", signed), fmt.Sprint(checkpoints))
 	}
-	if err := v.q.one(ctx, countNodes, []any{c.laboratory}, &nodes, &lastNode); err != nil {
-		return fmt.Errorf("count the nodes: %w", err)
-	}
 	want := ledger.NodeCount(size)
-	if nodes == want && lastNode == want-1 {
-		return nil
-	}
 	extra, err := v.rows(ctx, 1, selectNodesTo, c.laboratory, want)
 	if err != nil {
 		return fmt.Errorf("read nodes: %w", err)
@@ -231,20 +226,42 @@ func (c *checker) loose(ctx context.Context, v *View) error {
 const (
 	selectCurrentRows = `SELECT c.laboratory, c.kind, c.code, c.newest, c.state, c.in_force, c.held, c.until FROM currents c
 		WHERE c.laboratory = $1 AND (c.kind, c.code) > ($2, $3) ORDER BY c.kind, c.code LIMIT 200`
-	selectWithoutCurrent = `SELECT v.laboratory, v.kind, v.code FROM versions v
-		LEFT JOIN currents c ON c.laboratory = v.laboratory AND c.kind = v.kind AND c.code = v.code
-		WHERE v.laboratory = $1 AND v.version = 1 AND c.code IS NULL ORDER BY v.kind, v.code`
+	selectHasCurrent = `) SELECT c.laboratory, c.kind, c.code FROM wanted w
+		JOIN currents c ON c.laboratory = w.laboratory AND c.kind = w.kind AND c.code = w.code`
 )
+
+// haveCurrents checks that the records which begin in a batch have a row.
+func (c *checker) haveCurrents(ctx context.Context, v *View, rows []versionRow) error {
+	missing := make(map[string]int64)
+	var refs []wanted
+	for _, r := range rows {
+		if r.raw.Version == 1 {
+			refs = append(refs, wanted{Key: r.raw.Key})
+			missing[rowKey("currents", []any{r.raw.Laboratory, string(r.raw.Kind), r.raw.Code})] = r.raw.Position
+		}
+	}
+	if len(refs) == 0 {
+		return nil
+	}
+	list, err := wantedList(refs)
+	if err != nil {
+		return err
+	}
+	found, err := v.rows(ctx, 3, v.q.engine.withWanted+selectHasCurrent, list)
+	if err != nil {
+		return fmt.Errorf("look for current rows: %w", err)
+	}
+	for _, row := range found {
+		delete(missing, rowKey("currents", row))
+	}
+	for key, position := range missing {
+		c.find(position, "currents", key, "no row", "a row")
+	}
+	return nil
+}
 
 // currents computes the row of every record again, page by page.
 func (c *checker) currents(ctx context.Context, v *View) error {
-	missing, err := v.rows(ctx, 3, selectWithoutCurrent, c.laboratory)
-	if err != nil {
-		return fmt.Errorf("look for records without a current row: %w", err)
-	}
-	for _, row := range missing {
-		c.find(-1, "currents", rowKey("currents", row), "no row", "a row")
-	}
 	kind, code := "", ""
 	for {
 		page, err := v.rows(ctx, len(currentsTable.columns), selectCurrentRows, c.laboratory, kind, code)
@@ -285,31 +302,30 @@ const selectHistories = `) SELECT v.kind, v.code, v.version, v.recorded_at, v.va
 func (v *View) histories(ctx context.Context, laboratory string, keys []Key) (map[Key][]held, error) {
 	all := make(map[Key][]held, len(keys))
 	var codes []string
-	for len(keys) > 0 {
-		n := min(len(keys), codesPerStatement)
-		refs := make([]wanted, n)
-		for i, k := range keys[:n] {
-			refs[i] = wanted{Key: k}
+	refs := make([]wanted, len(keys))
+	for i, k := range keys {
+		refs[i] = wanted{Key: k}
+	}
+	list, err := wantedList(refs)
+	if err != nil {
+		return nil, err
+	}
+	rows, err := v.rows(ctx, 5, v.q.engine.withWanted+selectHistories, list)
+	if err != nil {
+		return nil, fmt.Errorf("read histories: %w", err)
+	}
+	for _, row := range rows {
+		key := Key{Laboratory: laboratory, Kind: Kind(fmt.Sprint(row[0])), Code: fmt.Sprint(row[1])}
+		version, _ := row[2].(int64)
+		at, _ := row[3].(int64)
+		h := held{version: int(version), recordedAt: Instant(at)}
+		if from, ok := row[4].(int64); ok {
+			h.validFrom = (*Instant)(&from)
 		}
-		values, args := wantedValues(refs)
-		rows, err := v.rows(ctx, 5, withWanted+values+selectHistories, args...)
-		if err != nil {
-			return nil, fmt.Errorf("read histories: %w", err)
+		all[key] = append(all[key], h)
+		if key.Kind.Decided() {
+			codes = append(codes, DecisionCode(Ref{Key: key, Version: h.version}))
 		}
-		for _, row := range rows {
-			key := Key{Laboratory: laboratory, Kind: Kind(fmt.Sprint(row[0])), Code: fmt.Sprint(row[1])}
-			version, _ := row[2].(int64)
-			at, _ := row[3].(int64)
-			h := held{version: int(version), recordedAt: Instant(at)}
-			if from, ok := row[4].(int64); ok {
-				h.validFrom = (*Instant)(&from)
-			}
-			all[key] = append(all[key], h)
-			if key.Kind.Decided() {
-				codes = append(codes, DecisionCode(Ref{Key: key, Version: h.version}))
-			}
-		}
-		keys = keys[n:]
 	}
 	decisions, err := v.decisions(ctx, laboratory, codes, always)
 	if err != nil {

@@ -3,9 +3,9 @@ package store
 import (
 	"context"
 	"database/sql"
+	"encoding/json"
 	"errors"
 	"fmt"
-	"strings"
 )
 
 // A View reads the registry within one transaction. Inside a Write it also sees
@@ -460,51 +460,45 @@ type wanted struct {
 // bodies. Versions that do not exist are missing from the answer.
 func (v *View) hashesOf(ctx context.Context, refs []wanted) (map[wanted]Hash, error) {
 	found := make(map[wanted]Hash, len(refs))
-	for rest := refs; len(rest) > 0; {
-		n := min(len(rest), codesPerStatement)
-		statement, args := hashesStatement(rest[:n])
-		err := v.q.each(ctx, statement, args, func(scan func(...any) error) error {
-			var w wanted
-			var hash []byte
-			err := scan(&w.Laboratory, &w.Kind, &w.Code, &w.version, &hash)
-			var h Hash
-			copy(h[:], hash)
-			found[w] = h
-			return err
-		})
-		if err != nil {
-			return nil, fmt.Errorf("look up hashes of versions: %w", err)
-		}
-		rest = rest[n:]
+	if len(refs) == 0 {
+		return found, nil
+	}
+	list, err := wantedList(refs)
+	if err != nil {
+		return nil, err
+	}
+	err = v.q.each(ctx, v.q.engine.withWanted+selectHashes, []any{list}, func(scan func(...any) error) error {
+		var w wanted
+		var hash []byte
+		err := scan(&w.Laboratory, &w.Kind, &w.Code, &w.version, &hash)
+		var h Hash
+		copy(h[:], hash)
+		found[w] = h
+		return err
+	})
+	if err != nil {
+		return nil, fmt.Errorf("look up hashes of versions: %w", err)
 	}
 	return found, nil
 }
 
+// Many versions are asked for as one parameter, a JSON array of arrays, so that
+// the statement is the same however many there are.
 const (
-	withWanted   = `WITH wanted (laboratory, kind, code, version) AS (VALUES `
+	wantedRows = `WITH wanted (laboratory, kind, code, version) AS (
+		SELECT j.value ->> 0, j.value ->> 1, j.value ->> 2, cast(j.value ->> 3 as bigint) FROM `
 	selectHashes = `) SELECT v.laboratory, v.kind, v.code, v.version, v.hash
 		FROM wanted w JOIN versions v ON v.laboratory = w.laboratory AND v.kind = w.kind AND v.code = w.code AND v.version = w.version`
 )
 
-func hashesStatement(refs []wanted) (string, []any) {
-	values, args := wantedValues(refs)
-	return withWanted + values + selectHashes, args
-}
-
-// wantedValues writes the rows of the wanted table. The casts give Postgres the
-// types; SQLite has them anyway.
-func wantedValues(refs []wanted) (string, []any) {
-	var b strings.Builder
-	args := make([]any, 0, 4*len(refs))
+// wantedList writes the one parameter.
+func wantedList(refs []wanted) (string, error) {
+	rows := make([][4]any, len(refs))
 	for i, r := range refs {
-		if i > 0 {
-			b.WriteString(", ")
-		}
-		n := 4 * i
-		fmt.Fprintf(&b, "(cast($%d as text), cast($%d as text), cast($%d as text), cast($%d as bigint))", n+1, n+2, n+3, n+4)
-		args = append(args, r.Laboratory, string(r.Kind), r.Code, r.version)
+		rows[i] = [4]any{r.Laboratory, string(r.Kind), r.Code, r.version}
 	}
-	return b.String(), args
+	b, err := json.Marshal(rows)
+	return string(b), err
 }
 
 // DefaultLimit and MaxLimit bound a page.

@@ -22,7 +22,9 @@ CREATE TABLE versions (
     PRIMARY KEY (laboratory, kind, code, version)
 );
 CREATE UNIQUE INDEX versions_position ON versions (laboratory, position);
-CREATE INDEX versions_recorded ON versions (laboratory, kind, recorded_at, position);
+-- Reached only by asking for kind || '': a lookup of one record by its key must
+-- never be led through a whole kind, which planners without statistics choose.
+CREATE INDEX versions_recorded ON versions (laboratory, (kind || ''), recorded_at, position);
 
 CREATE TABLE readings (
     laboratory  text COLLATE "C" NOT NULL,
@@ -122,7 +124,7 @@ CREATE TABLE results (
     recorded_at bigint NOT NULL,
     PRIMARY KEY (laboratory, calibration, version, line)
 );
-CREATE INDEX results_subject ON results (laboratory, subject, scale, measured_at, calibration, version, line);
+CREATE INDEX results_subject ON results (laboratory, subject, measured_at, calibration, version, line);
 CREATE INDEX results_scale ON results (laboratory, scale, measured_at, calibration, version, line);
 
 CREATE TABLE sensitivities (
@@ -155,9 +157,9 @@ CREATE TABLE names (
     code        text COLLATE "C" NOT NULL,
     version     bigint NOT NULL,
     recorded_at bigint NOT NULL,
-    PRIMARY KEY (laboratory, kind, name, code, version)
+    PRIMARY KEY (laboratory, kind, code, version, name)
 );
-CREATE INDEX names_record ON names (laboratory, kind, code, version, name);
+CREATE INDEX names_name ON names (laboratory, kind, name, code, version);
 
 CREATE TABLE uses (
     laboratory text COLLATE "C" NOT NULL,

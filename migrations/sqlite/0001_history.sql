@@ -20,7 +20,9 @@ CREATE TABLE versions (
     PRIMARY KEY (laboratory, kind, code, version)
 ) STRICT;
 CREATE UNIQUE INDEX versions_position ON versions (laboratory, position);
-CREATE INDEX versions_recorded ON versions (laboratory, kind, recorded_at, position);
+-- Reached only by asking for kind || '': a lookup of one record by its key must
+-- never be led through a whole kind, which planners without statistics choose.
+CREATE INDEX versions_recorded ON versions (laboratory, (kind || ''), recorded_at, position);
 
 CREATE TABLE readings (
     laboratory  TEXT    NOT NULL,
@@ -120,7 +122,7 @@ CREATE TABLE results (
     recorded_at INTEGER NOT NULL,
     PRIMARY KEY (laboratory, calibration, version, line)
 ) STRICT;
-CREATE INDEX results_subject ON results (laboratory, subject, scale, measured_at, calibration, version, line);
+CREATE INDEX results_subject ON results (laboratory, subject, measured_at, calibration, version, line);
 CREATE INDEX results_scale ON results (laboratory, scale, measured_at, calibration, version, line);
 
 CREATE TABLE sensitivities (
@@ -153,9 +155,9 @@ CREATE TABLE names (
     code        TEXT    NOT NULL,
     version     INTEGER NOT NULL,
     recorded_at INTEGER NOT NULL,
-    PRIMARY KEY (laboratory, kind, name, code, version)
+    PRIMARY KEY (laboratory, kind, code, version, name)
 ) STRICT, WITHOUT ROWID;
-CREATE INDEX names_record ON names (laboratory, kind, code, version, name);
+CREATE INDEX names_name ON names (laboratory, kind, name, code, version);
 
 CREATE TABLE uses (
     laboratory TEXT    NOT NULL,

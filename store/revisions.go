@@ -1,0 +1,491 @@
+package store
+
+import (
+	"context"
+	"crypto/sha256"
+	"database/sql"
+	"errors"
+	"fmt"
+	"strings"
+)
+
+// KindClosing is what became of one set of a revision: record
+// "<revision>/<report>", undecided, since it is a decision itself.
+const KindClosing Kind = "closing"
+
+// The phases of a revision: version 1 proposes and freezes, version 2 states
+// what was drafted, and is what an approval binds.
+const (
+	RevisionProposed = "proposed"
+	RevisionDrafted  = "drafted"
+)
+
+// Revision is the body of a revision: what is taken to have changed, the moment
+// its affected set is frozen at, and, once everything is drawn up again, the
+// hash over the drafts. A draft of it names version 1 as an input of part "revision".
+type Revision struct {
+	Phase      string              `json:"phase"` // proposed drafted
+	Values     []RevisedValue      `json:"values,omitempty"`
+	Units      []SuspectUnit       `json:"units,omitempty"`
+	Methods    []ReplacedMethod    `json:"methods,omitempty"`
+	Exclusions []RevisionExclusion `json:"exclusions,omitempty"`
+	// Position is the size of the ledger at which the affected set is frozen, and
+	// FrozenAt the time of its last entry: nothing recorded later belongs to the set.
+	Position int64   `json:"position"`
+	FrozenAt Instant `json:"frozen_at"`
+	// Drafted is the set of the drafts; nil while proposed.
+	Drafted *RevisionSet `json:"drafted,omitempty"`
+}
+
+// Form of the body.
+func (Revision) Form() string { return "revision/1" }
+
+// A RevisedValue is one assigned value that changes or falls away.
+type RevisedValue struct {
+	// Old is the version that is no longer to be used.
+	Old Ref `json:"old"`
+	// New is a recorded version to use in its place; nil where the revision drafts
+	// one of Value, or where the value is withdrawn.
+	New       *Ref `json:"new,omitempty"`
+	Withdrawn bool `json:"withdrawn,omitempty"`
+	// From restricts the change to sessions that started then or later; nil is all.
+	From *Instant `json:"from,omitempty"`
+	// Value (‰) as typed, and its standard uncertainty (‰), of a value that the revision drafts.
+	Value               Decimal `json:"value,omitempty"`
+	StandardUncertainty float64 `json:"u,omitempty"`
+	// Stated, Basis and Evidence are those of the value that the revision drafts.
+	Stated   *Stated `json:"stated,omitempty"`
+	Basis    string  `json:"basis,omitempty"`
+	Evidence string  `json:"evidence,omitempty"`
+}
+
+// A SuspectUnit is a bottle whose readings do not count in sessions that
+// started at Since or later; nil is all.
+type SuspectUnit struct {
+	Unit  string   `json:"unit"`
+	Since *Instant `json:"since,omitempty"`
+}
+
+// A ReplacedMethod says which version of a method a calibration should have been made by.
+type ReplacedMethod struct {
+	Old Ref `json:"old"`
+	New Ref `json:"new"`
+}
+
+// A RevisionExclusion names readings of a session that should have been left out.
+type RevisionExclusion struct {
+	Session  string `json:"session"`
+	Readings []int  `json:"readings"`
+}
+
+// A RevisionSet is what a revision drafted.
+type RevisionSet struct {
+	Calibrations int64 `json:"calibrations"`
+	Values       int64 `json:"values"`
+	Finals       int64 `json:"finals"`
+	// Hash is SHA-256 over the drafts' body hashes, sorted.
+	Hash Hash `json:"hash"`
+	// Untold are the versions that could not be drawn up again, and why.
+	Untold []UntoldVersion `json:"untold,omitempty"`
+}
+
+// An UntoldVersion is a version whose new value cannot be told.
+type UntoldVersion struct {
+	Ref Ref    `json:"ref"`
+	Why string `json:"why"`
+}
+
+// Closing is the body of the decision that ends one set of a revision: the
+// deltas of one report. Inputs: the revision as "revision", the report as
+// "report", and the amended report as "reissued".
+type Closing struct {
+	Action string `json:"action"` // re-issue annotate "no action"
+	// Lines counts the report's lines that the revision moves.
+	Lines int `json:"lines"`
+	// Reissued is the code of the amended report, with action re-issue.
+	Reissued string `json:"reissued,omitempty"`
+}
+
+// Form of the body.
+func (Closing) Form() string { return "closing/1" }
+
+// Bare is the reference without its hash, as edges give it.
+func (r Ref) Bare() Ref {
+	r.Hash = Hash{}
+	return r
+}
+
+// An AffectedQuery asks for everything that rests on some versions.
+type AffectedQuery struct {
+	// Laboratory whose versions are asked for.
+	Laboratory string
+	// Roots are versions of values and calibrations. They are part of the answer
+	// where they are of the laboratory. Hashes do not count.
+	Roots []Ref
+	// AsOf leaves out what was recorded later; nil is now.
+	AsOf *Instant
+	// After begins after a ledger position; -1 at the beginning.
+	After int64
+	// Limit 0 is no limit.
+	Limit int
+}
+
+// An AffectedVersion is a calibration, value, final value or report that rests
+// on a root, through anchors, members and lines alone.
+type AffectedVersion struct {
+	Ref
+	Position int64
+	// State is as far as the current rows tell: Approved for the version in force
+	// now, the newest version's own state, and Superseded for others.
+	State State
+}
+
+const selectAffected = `), up (laboratory, kind, code, version) AS (
+		SELECT w.laboratory, w.kind, w.code, w.version FROM wanted w
+		UNION
+		SELECT e.laboratory, e.from_kind, e.from_code, e.from_version FROM up u
+		JOIN edges e ON e.laboratory = $2 AND e.to_laboratory = u.laboratory AND e.to_kind = u.kind AND e.to_code = u.code AND e.to_version = u.version
+		WHERE e.part IN ('anchor', 'member', 'line') AND e.recorded_at <= $3
+	)
+	SELECT v.kind, v.code, v.version, v.position, v.hash, c.newest, c.state, c.in_force, c.held
+	FROM up u
+	JOIN versions v ON v.laboratory = u.laboratory AND v.kind = u.kind AND v.code = u.code AND v.version = u.version
+	JOIN currents c ON c.laboratory = v.laboratory AND c.kind = v.kind AND c.code = v.code
+	WHERE v.laboratory = $2 AND v.position > $4 ORDER BY v.position LIMIT $5`
+
+// Affected calls row for everything that rests on the roots, at any depth, in
+// the order of the ledger, in which a version stands after all it rests on. The
+// database walks and sorts; nothing is kept here. Row must not use this view:
+// its connection is busy.
+func (v *View) Affected(ctx context.Context, q AffectedQuery, row func(AffectedVersion) error) error {
+	as, err := v.asOf(ctx, q.Laboratory, Moment{AsOf: q.AsOf})
+	if err != nil {
+		return err
+	}
+	roots := make([]wanted, len(q.Roots))
+	for i, r := range q.Roots {
+		roots[i] = wanted{Key: r.Key, version: r.Version}
+	}
+	list, err := wantedList(roots)
+	if err != nil {
+		return err
+	}
+	limit := int64(q.Limit)
+	if limit <= 0 {
+		limit = int64(always)
+	}
+	statement := strings.Replace(v.q.engine.withWanted, "wanted", "RECURSIVE wanted", 1) + selectAffected
+	err = v.q.each(ctx, statement, []any{list, q.Laboratory, int64(as), q.After, limit}, func(scan func(...any) error) error {
+		a := AffectedVersion{Ref: Ref{Key: Key{Laboratory: q.Laboratory}}}
+		var hash []byte
+		var newest, inForce int
+		var state, held string
+		if err := scan(&a.Kind, &a.Code, &a.Version, &a.Position, &hash, &newest, &state, &inForce, &held); err != nil {
+			return err
+		}
+		copy(a.Hash[:], hash)
+		switch a.Version {
+		case inForce:
+			a.State = State(held)
+		case newest:
+			a.State = State(state)
+		default:
+			a.State = Superseded
+		}
+		return row(a)
+	})
+	if err != nil {
+		return fmt.Errorf("read what rests on %d versions of %s: %w", len(q.Roots), q.Laboratory, err)
+	}
+	return nil
+}
+
+// A CalibrationBlock is what a shift needs of one calibration version.
+type CalibrationBlock struct {
+	Sensitivities
+	// Anchors are the values' versions by material code, the order of the columns;
+	// without hashes.
+	Anchors []Ref
+	// Session, Scale and StartedAt are those of its results; "" and nil without any.
+	Session, Scale string
+	StartedAt      *Instant
+}
+
+const (
+	selectBlocks = `) SELECT s.calibration, s.version, s.parameters, s.results, r.session, r.scale, r.measured_at
+		FROM wanted w
+		JOIN sensitivities s ON s.laboratory = w.laboratory AND s.calibration = w.code AND s.version = w.version
+		LEFT JOIN results r ON r.laboratory = s.laboratory AND r.calibration = s.calibration AND r.version = s.version AND r.line = 0
+		WHERE s.laboratory = $2`
+	selectAnchors = `) SELECT e.from_code, e.from_version, e.to_laboratory, e.to_code, e.to_version
+		FROM wanted w
+		JOIN edges e ON e.laboratory = w.laboratory AND e.from_kind = w.kind AND e.from_code = w.code AND e.from_version = w.version AND e.part = 'anchor'
+		WHERE e.laboratory = $2`
+)
+
+// Blocks returns the derivatives and anchors of calibration versions of one
+// laboratory, by reference without hash. Versions that do not exist are missing.
+func (v *View) Blocks(ctx context.Context, laboratory string, calibrations []Ref) (map[Ref]CalibrationBlock, error) {
+	ask := make([]wanted, len(calibrations))
+	for i, r := range calibrations {
+		ask[i] = wanted{Key: r.Key, version: r.Version}
+	}
+	list, err := wantedList(ask)
+	if err != nil {
+		return nil, err
+	}
+	key := func(code string, version int) Ref {
+		return Ref{Key: Key{Laboratory: laboratory, Kind: KindCalibration, Code: code}, Version: version}
+	}
+	blocks := make(map[Ref]CalibrationBlock, len(calibrations))
+	err = v.q.each(ctx, v.q.engine.withWanted+selectBlocks, []any{list, laboratory}, func(scan func(...any) error) error {
+		var code string
+		var version int
+		var parameters, results []byte
+		var session, scale sql.Null[string]
+		var at sql.Null[int64]
+		if err := scan(&code, &version, &parameters, &results, &session, &scale, &at); err != nil {
+			return err
+		}
+		s, err := unpackSensitivities(parameters, results)
+		if err != nil {
+			return fmt.Errorf("sensitivities of calibration %s/%s.%d: %w", laboratory, code, version, err)
+		}
+		b := CalibrationBlock{Sensitivities: s, Session: session.V, Scale: scale.V}
+		if at.Valid && at.V != 0 {
+			b.StartedAt = instantOrNil(at)
+		}
+		blocks[key(code, version)] = b
+		return nil
+	})
+	if err != nil {
+		return nil, fmt.Errorf("read derivatives: %w", err)
+	}
+	err = v.q.each(ctx, v.q.engine.withWanted+selectAnchors, []any{list, laboratory}, func(scan func(...any) error) error {
+		var code string
+		var version int
+		to := Ref{Key: Key{Kind: KindValue}}
+		if err := scan(&code, &version, &to.Laboratory, &to.Code, &to.Version); err != nil {
+			return err
+		}
+		b, ok := blocks[key(code, version)]
+		if ok {
+			b.Anchors = append(b.Anchors, to)
+			blocks[key(code, version)] = b
+		}
+		return nil
+	})
+	if err != nil {
+		return nil, fmt.Errorf("read anchors: %w", err)
+	}
+	for _, b := range blocks {
+		sortByMaterial(b.Anchors)
+	}
+	return blocks, nil
+}
+
+const selectVersionsOf = `) SELECT ` + versionColumns + ` FROM wanted w
+	JOIN versions v ON v.laboratory = w.laboratory AND v.kind = w.kind AND v.code = w.code AND v.version = w.version`
+
+// VersionsOf returns many versions by reference without hash; those that do not
+// exist are missing.
+func (v *View) VersionsOf(ctx context.Context, refs []Ref) (map[Ref]Raw, error) {
+	found := make(map[Ref]Raw, len(refs))
+	if len(refs) == 0 {
+		return found, nil
+	}
+	ask := make([]wanted, len(refs))
+	for i, r := range refs {
+		ask[i] = wanted{Key: r.Key, version: r.Version}
+	}
+	list, err := wantedList(ask)
+	if err != nil {
+		return nil, err
+	}
+	raws, err := v.raws(ctx, v.q.engine.withWanted+selectVersionsOf, list)
+	if err != nil {
+		return nil, fmt.Errorf("read %d versions: %w", len(refs), err)
+	}
+	for _, raw := range raws {
+		found[raw.Ref.Bare()] = raw
+	}
+	return found, nil
+}
+
+const selectLinesOfReport = `SELECT code, line, final, final_version, value, u FROM reported
+	WHERE laboratory = $1 AND report = $2 AND version = $3 ORDER BY line`
+
+// LinesOfReport returns the reported deltas of one report version, by line.
+func (v *View) LinesOfReport(ctx context.Context, ref Ref) ([]Reported, error) {
+	var lines []Reported
+	err := v.q.each(ctx, selectLinesOfReport, []any{ref.Laboratory, ref.Code, ref.Version}, func(scan func(...any) error) error {
+		r := Reported{Laboratory: ref.Laboratory, Report: ref.Code, Version: ref.Version}
+		r.Final.Laboratory, r.Final.Kind = ref.Laboratory, KindFinal
+		err := scan(&r.Code, &r.Line, &r.Final.Code, &r.Final.Version, &r.Value, &r.StandardUncertainty)
+		lines = append(lines, r)
+		return err
+	})
+	if err != nil {
+		return nil, fmt.Errorf("read the lines of %s: %w", ref, err)
+	}
+	return lines, nil
+}
+
+const selectDraftsOf = `SELECT e.from_version, v.hash, v.valid_from FROM edges e
+	JOIN versions v ON v.laboratory = e.laboratory AND v.kind = e.from_kind AND v.code = e.from_code AND v.version = e.from_version
+	WHERE e.laboratory = $1 AND e.from_kind = $2 AND e.from_code = $3 AND e.part = 'revision'
+		AND e.to_kind = 'revision' AND e.to_code = $4 ORDER BY e.from_version`
+
+// DraftOf returns the version of a record that a revision drafted for one
+// valid_from (nil for records without a period), or ErrNotFound.
+func (v *View) DraftOf(ctx context.Context, revision string, key Key, validFrom *Instant) (Ref, error) {
+	found := Ref{Key: key}
+	err := v.q.each(ctx, selectDraftsOf, []any{key.Laboratory, string(key.Kind), key.Code, revision}, func(scan func(...any) error) error {
+		var version int
+		var hash []byte
+		var from sql.Null[int64]
+		if err := scan(&version, &hash, &from); err != nil {
+			return err
+		}
+		if from.Valid != (validFrom != nil) || validFrom != nil && Instant(from.V) != *validFrom {
+			return nil
+		}
+		found.Version = version
+		copy(found.Hash[:], hash)
+		return nil
+	})
+	if err != nil {
+		return Ref{}, fmt.Errorf("read what revision %s drafted of %s: %w", revision, key, err)
+	}
+	if found.Version == 0 {
+		return Ref{}, notFound("draft of %s by revision %s", key, revision)
+	}
+	return found, nil
+}
+
+const (
+	selectMembers = `SELECT v.kind, v.code, v.version, v.hash, v.position FROM edges e
+		JOIN versions v ON v.laboratory = e.laboratory AND v.kind = e.from_kind AND v.code = e.from_code AND v.version = e.from_version
+		WHERE e.laboratory = $1 AND e.to_laboratory = $1 AND e.to_kind = 'revision' AND e.to_code = $2 AND e.part = 'revision'
+			AND e.from_kind IN ('value', 'calibration', 'final')
+			AND v.position > $3 ORDER BY v.position LIMIT $4`
+	selectMemberHashes = `SELECT v.kind, v.hash FROM edges e
+		JOIN versions v ON v.laboratory = e.laboratory AND v.kind = e.from_kind AND v.code = e.from_code AND v.version = e.from_version
+		WHERE e.laboratory = $1 AND e.to_laboratory = $1 AND e.to_kind = 'revision' AND e.to_code = $2 AND e.part = 'revision'
+			AND e.from_kind IN ('value', 'calibration', 'final')
+		ORDER BY v.hash`
+)
+
+// Drafts returns up to limit drafts of a revision, in the order of the ledger,
+// beginning after a position (-1 at the beginning); limit 0 is DefaultLimit.
+func (v *View) Drafts(ctx context.Context, laboratory, revision string, after int64, limit int) ([]AffectedVersion, error) {
+	var all []AffectedVersion
+	err := v.q.each(ctx, selectMembers, []any{laboratory, revision, after, pageLimit(limit)}, func(scan func(...any) error) error {
+		a := AffectedVersion{Ref: Ref{Key: Key{Laboratory: laboratory}}}
+		var hash []byte
+		err := scan(&a.Kind, &a.Code, &a.Version, &hash, &a.Position)
+		copy(a.Hash[:], hash)
+		all = append(all, a)
+		return err
+	})
+	if err != nil {
+		return nil, fmt.Errorf("read the drafts of revision %s/%s: %w", laboratory, revision, err)
+	}
+	return all, nil
+}
+
+// DraftedSet counts the drafts of a revision and hashes their body hashes, sorted.
+func (v *View) DraftedSet(ctx context.Context, laboratory, revision string) (RevisionSet, error) {
+	var set RevisionSet
+	sum := sha256.New()
+	err := v.q.each(ctx, selectMemberHashes, []any{laboratory, revision}, func(scan func(...any) error) error {
+		var kind string
+		var hash []byte
+		if err := scan(&kind, &hash); err != nil {
+			return err
+		}
+		sum.Write(hash)
+		switch Kind(kind) {
+		case KindCalibration:
+			set.Calibrations++
+		case KindValue:
+			set.Values++
+		case KindFinal:
+			set.Finals++
+		}
+		return nil
+	})
+	if err != nil {
+		return set, fmt.Errorf("hash the drafts of revision %s/%s: %w", laboratory, revision, err)
+	}
+	sum.Sum(set.Hash[:0])
+	return set, nil
+}
+
+// A RevisionReport is a report with lines that a revision moves.
+type RevisionReport struct {
+	Report string
+	Lines  int
+}
+
+// An older version of a final value that the revision drafted again stands on a line of the report.
+const selectReportsOfRevision = `SELECT l.from_code, count(DISTINCT l.to_code) FROM edges e
+	JOIN edges l ON l.laboratory = e.laboratory AND l.to_laboratory = e.laboratory AND l.to_kind = e.from_kind AND l.to_code = e.from_code
+		AND l.from_kind = 'report' AND l.part = 'line' AND l.to_version < e.from_version
+	WHERE e.laboratory = $1 AND e.to_laboratory = $1 AND e.to_kind = 'revision' AND e.to_code = $2 AND e.from_kind = 'final' AND e.part = 'revision'
+		AND l.from_code > $3 AND ($4 = '' OR l.from_code = $4)
+	GROUP BY l.from_code ORDER BY l.from_code LIMIT $5`
+
+// ReportsOfRevision returns up to limit reports with lines that a revision
+// moves, by code, beginning after the given one; only narrows it to one report.
+func (v *View) ReportsOfRevision(ctx context.Context, laboratory, revision, after, only string, limit int) ([]RevisionReport, error) {
+	var all []RevisionReport
+	err := v.q.each(ctx, selectReportsOfRevision, []any{laboratory, revision, after, only, pageLimit(limit)}, func(scan func(...any) error) error {
+		var r RevisionReport
+		err := scan(&r.Report, &r.Lines)
+		all = append(all, r)
+		return err
+	})
+	if err != nil {
+		return nil, fmt.Errorf("read the reports that revision %s/%s moves: %w", laboratory, revision, err)
+	}
+	return all, nil
+}
+
+const countJudged = `) SELECT count(*) FROM wanted w
+	JOIN edges e ON e.laboratory = $2 AND e.to_laboratory = w.laboratory AND e.to_kind = w.kind AND e.to_code = w.code AND e.to_version = w.version
+		AND e.from_kind = 'calibration' AND e.part = 'control'
+	JOIN currents c ON c.laboratory = e.laboratory AND c.kind = e.from_kind AND c.code = e.from_code AND c.in_force = e.from_version`
+
+// Judged counts the calibrations in force of a laboratory whose controls were judged by
+// the values named: their results do not rest on them.
+func (v *View) Judged(ctx context.Context, laboratory string, values []Ref) (int64, error) {
+	ask := make([]wanted, len(values))
+	for i, r := range values {
+		ask[i] = wanted{Key: r.Key, version: r.Version}
+	}
+	list, err := wantedList(ask)
+	if err != nil {
+		return 0, err
+	}
+	var n int64
+	err = v.q.one(ctx, v.q.engine.withWanted+countJudged, []any{list, laboratory}, &n)
+	if err != nil && !errors.Is(err, sql.ErrNoRows) {
+		return 0, fmt.Errorf("count controls judged by %d values: %w", len(values), err)
+	}
+	return n, nil
+}
+
+// sortByMaterial orders values by their material's code, which is the order in
+// which a calibration names its anchors.
+func sortByMaterial(refs []Ref) {
+	material := func(r Ref) string {
+		m, _, _ := strings.Cut(r.Code, "/")
+		return m
+	}
+	for i := 1; i < len(refs); i++ { // a handful
+		for j := i; j > 0 && material(refs[j]) < material(refs[j-1]); j-- {
+			refs[j], refs[j-1] = refs[j-1], refs[j]
+		}
+	}
+}
