@@ -57,3 +57,16 @@ func BenchmarkFit(b *testing.B) {
 		}
 	}
 }
+
+// The joint fit with sample values alone, without diagnostics.
+func BenchmarkValuesOnly(b *testing.B) {
+	for _, weights := range []Weights{WeightsDeclared, WeightsReplicate, WeightsEqual} {
+		b.Run(string(weights), func(b *testing.B) {
+			s := benchSession(20)
+			b.ReportAllocs()
+			for b.Loop() {
+				valuesOnly(b, s, Model{Drift: DriftLinear, Size: SizeLinear, Weights: weights})
+			}
+		})
+	}
+}

@@ -16,7 +16,7 @@ func (c *calibrated) subjectIDs(groups []subjectGroup, total int) []string {
 	ends := make([]int, 0, total+len(groups))
 	for _, g := range groups {
 		for _, i := range g.readings {
-			b.WriteString(c.in.readings[i].sourceID())
+			c.in.readings[i].writeSourceID(&b)
 			ends = append(ends, b.Len())
 		}
 		c.writeBetweenID(&b, g)

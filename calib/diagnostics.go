@@ -79,7 +79,7 @@ func (c *solved) aicc(chi2, rss float64, n, p int) *float64 {
 		if len(c.variances.phi) > 1 || rss <= 0 {
 			return nil
 		}
-		q, base = p+1, float64(float64(n)*naturalLog(rss/float64(n)))
+		q, base = p+1, float64(float64(n)*adjust.NaturalLog(rss/float64(n)))
 	} else if c.variances != nil {
 		return nil // declared with degrees of freedom: neither known nor estimated here
 	}
@@ -144,7 +144,7 @@ func (c *calibrated) diagnoseReadings(r *Result, residuals []float64) {
 	if proj != nil {
 		lambda = c.weightedReadings()
 	}
-	coordinates, other := make([]float64, len(c.r.z)), make([]float64, len(c.r.z))
+	coordinates := make([]float64, len(c.r.z))
 	nu, p := float64(c.r.n-c.layout.p), float64(c.layout.p)
 	for j, i := range c.fitted {
 		out := &r.Readings[c.in.readings[i].index]
@@ -152,7 +152,7 @@ func (c *calibrated) diagnoseReadings(r *Result, residuals []float64) {
 		if proj == nil || nu <= 0 {
 			continue
 		}
-		pii, sii := c.diagonals(j, proj, inverse, coordinates, other)
+		pii, sii := c.diagonals(j, proj, inverse, coordinates)
 		if !(pii > 1e-12*sii) {
 			out.Leverage = store(1)
 			continue
@@ -170,13 +170,13 @@ func (c *calibrated) diagnoseReadings(r *Result, residuals []float64) {
 }
 
 // diagonals are P_ii and (Σ⁻¹)_ii of a fitted reading.
-func (c *calibrated) diagonals(j int, proj, inverse *adjust.Matrix, v, x []float64) (pii, sii float64) {
+func (c *calibrated) diagonals(j int, proj, inverse *adjust.Matrix, v []float64) (pii, sii float64) {
 	r := c.r
 	if r.white == nil {
 		return proj.At(j, j), inverse.At(j, j)
 	}
 	clear(v)
-	square := c.whitenedUnit(j, v, x)
+	square := c.whitenedUnit(j, v)
 	rest := square - adjust.Dot(v, v)
 	if rest < 1e-13*square {
 		rest = 0
@@ -187,7 +187,7 @@ func (c *calibrated) diagonals(j int, proj, inverse *adjust.Matrix, v, x []float
 
 // whitenedUnit writes the coordinates of L⁻¹e_j into v and returns its square
 // length.
-func (c *calibrated) whitenedUnit(j int, v, _ []float64) float64 {
+func (c *calibrated) whitenedUnit(j int, v []float64) float64 {
 	w := c.r.white
 	if s := w.single[j]; s != 0 {
 		c.r.coordinates(c.problem, j, s, v)
@@ -348,19 +348,21 @@ func (c *calibrated) leaveOut(k int) *LeftOut {
 			readings = append(readings, i)
 		}
 	}
-	gradient, anchors := make([]float64, p.layout.p), make([]float64, len(c.in.anchors))
+	gradient, anchors := make([]float64, p.layout.p), make([]float64, len(c.in.inputs))
 	own := make([]float64, len(readings))
 	pred := rest.predict(readings, gradient, own, anchors)
-	variance := pred.variance + c.in.vy.At(k, k)
-	for l, h := range anchors {
-		variance -= float64(2 * float64(h*c.in.vy.At(l, k)))
+	// The difference's sources: the prediction's less the value's own, whatever
+	// they share.
+	var w []float64
+	if rest.nz.general {
+		w = rest.functional(readings, gradient, own, rest.lags)
 	}
-	if c.in.cross != nil {
-		for i, w := range rest.functional(readings, gradient, own, rest.lags) {
-			variance -= float64(2 * float64(w*c.in.cross.At(i, k)))
-		}
+	q := rest.anchorLoads(anchors, w)
+	variance := pred.variance - adjust.Dot(q, q)
+	for j, t := range c.in.anchors[k].terms {
+		q[c.in.sources.index[k][j]] -= float64(t.Sensitivity * t.U)
 	}
-	u := math.Sqrt(math.Max(0, variance))
+	u := math.Sqrt(math.Max(0, variance+adjust.Dot(q, q)))
 	if u == 0 {
 		return nil
 	}

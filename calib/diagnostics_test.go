@@ -201,7 +201,7 @@ func TestPredictedCovarianceIsTheOneThatHappens(t *testing.T) {
 	var predicted [2][2]float64
 	for range n {
 		s, values := w.session(r)
-		fit := mustFit(t, s, Model{Drift: DriftLinear}, Policy{})
+		fit := valuesOnly(t, s, Model{Drift: DriftLinear})
 		var d [2]float64
 		for i := range 2 {
 			d[i] = fit.Subjects[i].Value - values[fit.Subjects[i].Subject]
@@ -295,7 +295,6 @@ func TestCrossCovarianceAddsUp(t *testing.T) {
 	}
 	// Cov θ = K Σ Kᵀ with the engine's own K.
 	c := got.calibrated
-	k := c.s.K
 	cov := c.covariance()
 	sigma := c.s.Covariance()
 	for a := range cov.Rows {
@@ -303,7 +302,6 @@ func TestCrossCovarianceAddsUp(t *testing.T) {
 			near(t, fmt.Sprint("Cov θ ", a, b), cov.At(a, b), sigma.At(a, b), 1e-8*math.Sqrt(sigma.At(a, a)*sigma.At(b, b)))
 		}
 	}
-	_ = k
 }
 
 func TestNullsWhereNothingCanBeComputed(t *testing.T) {

@@ -33,7 +33,16 @@ func (t *timeTerm) columns() int {
 	return 0
 }
 
-// names lists what is reported: for bracketed, one more than there are columns.
+// reportedColumns is how many coefficients are reported: for bracketed, one
+// more than there are columns.
+func (t *timeTerm) reportedColumns() int {
+	if t.kind == DriftBracketed {
+		return len(t.nodes)
+	}
+	return t.columns()
+}
+
+// names lists what is reported.
 func (t *timeTerm) names() []string {
 	switch t.kind {
 	case DriftLinear:

@@ -60,6 +60,8 @@ type (
 	OrderError struct{ Refusal }
 	// CovarianceError: a covariance of the wrong shape, or none.
 	CovarianceError struct{ Refusal }
+	// CorrectionError: a correction input that cannot be used.
+	CorrectionError struct{ Refusal }
 	// TooManyError: more readings than the engine takes.
 	TooManyError struct{ Refusal }
 	// PolicyError: a limit that cannot be used.

@@ -2,10 +2,8 @@ package calib
 
 import (
 	"math"
-	"slices"
 
 	"deltamoor/calib/adjust"
-	"deltamoor/calib/uncertain"
 )
 
 // Fit adjusts the session's line through its anchors, with the model's terms,
@@ -65,7 +63,8 @@ type calibrated struct {
 	kraw         *adjust.Matrix
 	noise        *adjust.Matrix
 	patternNoise []*adjust.Matrix
-	// sensitivity is ∂θ/∂y, internal parameters × the input's anchors.
+	// sensitivity is ∂θ/∂y, and ∂θ/∂x of the corrections after it, internal
+	// parameters × the input's inputs.
 	sensitivity *adjust.Matrix
 
 	// Buffers, so that predictions do not allocate.
@@ -109,19 +108,27 @@ func (s *solved) calibrate() (*calibrated, error) {
 		c.noisePhi = make([]float64, len(s.variances.patterns))
 	}
 	local := s.s.Sensitivity()
-	c.sensitivity = adjust.NewMatrix(p, len(in.anchors))
+	c.sensitivity = adjust.NewMatrix(p, len(in.inputs))
 	for a := 0; a < p; a++ {
 		for l, k := range s.anchors {
 			c.sensitivity.Set(a, k, local.At(a, l))
 		}
+		if in.corrected == nil {
+			continue
+		}
+		for i, x := range c.kraw.Row(a) {
+			if x != 0 {
+				adjust.AddScaled(c.sensitivity.Row(a)[len(in.anchors):], x, in.corrected.Row(i))
+			}
+		}
 	}
-	buffer := make([]float64, s.layout.globals+1+len(s.time.names())+2*in.preparations+len(c.sources.list)+c.sources.phis)
+	buffer := make([]float64, s.layout.globals+1+s.time.reportedColumns()+2*in.preparations+len(c.sources.list)+c.sources.phis)
 	take := func(k int) []float64 {
 		b := buffer[:k:k]
 		buffer = buffer[k:]
 		return b
 	}
-	c.basis, c.nodes = take(s.layout.globals+1), take(len(s.time.names()))
+	c.basis, c.nodes = take(s.layout.globals+1), take(s.time.reportedColumns())
 	c.preparationSums = take(2 * in.preparations)
 	c.sourceWork, c.anchorPhi = take(len(c.sources.list)), take(c.sources.phis)
 	return c, nil
@@ -197,15 +204,9 @@ func (c *calibrated) result() (*Result, error) {
 	}
 	r.Covariance = outward.Slices()
 	r.NoiseCovariance = c.reported.covariance(c.noise).Slices()
-	r.AnchorSensitivities = c.toSession(c.reported.outward(c.sensitivity))
-	if d, err := c.s.Derivative(); err == nil {
-		wide := adjust.NewMatrix(c.layout.p, len(c.in.anchors))
-		for a := 0; a < c.layout.p; a++ {
-			for l, k := range c.anchors {
-				wide.Set(a, k, d.At(a, l))
-			}
-		}
-		r.AnchorDerivatives = c.toSession(c.reported.outward(wide))
+	r.AnchorSensitivities, r.CorrectionSensitivities = c.toSession(c.reported.outward(c.sensitivity))
+	if d, err := c.exactDerivatives(); err == nil {
+		r.AnchorDerivatives, r.CorrectionDerivatives = c.toSession(c.reported.outward(d))
 	}
 	if v := c.variances; v != nil {
 		for j, name := range v.names {
@@ -233,216 +234,67 @@ func (c *calibrated) result() (*Result, error) {
 
 func pointer(v float64) *float64 { return &v }
 
-// toSession puts the columns of anchors into the session's order.
-func (c *calibrated) toSession(a *adjust.Matrix) [][]float64 {
-	out := adjust.NewMatrix(a.Rows, a.Cols)
-	for k, anchor := range c.in.anchors {
+// exactDerivatives is the exact derivative of the internal parameters by each
+// input at fixed variances. A correction moves the readings, and with memory
+// the readings before them.
+func (c *calibrated) exactDerivatives() (*adjust.Matrix, error) {
+	in := c.in
+	m := len(in.anchors)
+	q := len(in.inputs) - m
+	var directions []adjust.Direction
+	for j := 0; j < q; j++ {
+		moved, before := make([]float64, c.r.n), make([]float64, c.r.n)
+		for k, i := range c.fitted {
+			moved[k] = in.corrected.At(i, j)
+			if p := in.readings[i].previous; p >= 0 && c.layout.memory >= 0 {
+				before[k] = in.corrected.At(p, j)
+				moved[k] -= float64(c.state.mu * before[k])
+			}
+		}
+		d := adjust.Direction{Observed: moved}
+		if c.layout.memory >= 0 {
+			d.Score = make([]float64, c.layout.p)
+			d.Score[c.layout.memory] = adjust.Dot(before, c.weightedReadings())
+		}
+		if c.r.white != nil {
+			c.r.white.apply(moved)
+			d.Observed = make([]float64, len(c.r.z))
+			c.r.project(c.problem, moved, d.Observed)
+		}
+		directions = append(directions, d)
+	}
+	values, observed, err := c.s.Derivatives(directions)
+	if err != nil {
+		return nil, err
+	}
+	wide := adjust.NewMatrix(c.layout.p, len(in.inputs))
+	for a := 0; a < c.layout.p; a++ {
+		for l, k := range c.anchors {
+			wide.Set(a, k, values.At(a, l))
+		}
+		for j := 0; j < q; j++ {
+			wide.Set(a, m+j, observed.At(a, j))
+		}
+	}
+	return wide, nil
+}
+
+// toSession puts the columns of inputs into the session's order: those of the
+// anchors, and those of the corrections (nil for none).
+func (c *calibrated) toSession(a *adjust.Matrix) (anchors, corrections [][]float64) {
+	m := len(c.in.anchors)
+	x, y := adjust.NewMatrix(a.Rows, m), adjust.NewMatrix(a.Rows, a.Cols-m)
+	for k, input := range c.in.inputs {
 		for i := 0; i < a.Rows; i++ {
-			out.Set(i, anchor.index, a.At(i, k))
-		}
-	}
-	return out.Slices()
-}
-
-// takeLine quotes the fit as true = Slope·raw + Intercept, and refuses a slope
-// that cannot be inverted: (t_p·u(β)/β)² above 1.
-func (c *calibrated) takeLine(r *Result, covariance *adjust.Matrix) error {
-	alpha, beta := r.Parameters[c.reported.intercept].Value, r.Parameters[c.reported.slope].Value
-	if beta == 0 || !finite(1/beta) {
-		return c.weakSlope(beta, r.Parameters[c.reported.slope].StandardUncertainty)
-	}
-	caa, cab, cbb := r.Covariance[c.reported.intercept][c.reported.intercept], r.Covariance[c.reported.intercept][c.reported.slope], r.Covariance[c.reported.slope][c.reported.slope]
-	// slope 1/β, intercept −α/β
-	s, i := 1/beta, -alpha/beta
-	ds := -float64(s * s)       // ∂(1/β)/∂β
-	da, db := -s, -float64(i*s) // ∂(−α/β)/∂α, ∂/∂β = α/β²
-	l := &Line{Slope: s, Intercept: i, USlope: float64(math.Abs(ds) * math.Sqrt(math.Max(0, cbb)))}
-	variance := float64(float64(da*da)*caa) + float64(2*float64(da*db)*cab) + float64(float64(db*db)*cbb)
-	l.UIntercept = math.Sqrt(math.Max(0, variance))
-	l.Covariance = float64(ds * (float64(da*cab) + float64(db*cbb)))
-	r.Line = l
-	if g := c.slopeRatio(beta, math.Sqrt(math.Max(0, cbb))); g > 1 && !c.ratio {
-		return c.weakSlope(beta, math.Sqrt(cbb))
-	}
-	return nil
-}
-
-// slopeRatio is (t_p·u(β)/β)², with ν of the slope.
-func (c *calibrated) slopeRatio(beta, u float64) float64 {
-	if u == 0 {
-		return 0
-	}
-	t := float64(uncertain.CoverageFactor(c.in.policy.Probability, c.slopeDF())*u) / beta
-	return float64(t * t)
-}
-
-// slopeDF is ν_eff of the slope.
-func (c *calibrated) slopeDF() float64 {
-	g := c.reported.jacobian.Row(c.reported.slope)
-	var variance, below float64
-	variance = adjust.Quadratic(g, c.noise, g)
-	anchors := make([]float64, len(c.in.anchors))
-	for k := range anchors {
-		for a, x := range g {
-			anchors[k] += float64(x * c.sensitivity.At(a, k))
-		}
-	}
-	p := prediction{variance: variance}
-	for i := range c.noisePhi {
-		for j := range c.noisePhi {
-			below += float64(adjust.Quadratic(g, c.patternNoise[i], g) * float64(adjust.Quadratic(g, c.patternNoise[j], g)*c.variances.cov.At(i, j)))
-		}
-	}
-	p.below = below
-	c.anchorVariance(&p, anchors, nil)
-	return uncertain.SatterthwaiteDF(p.variance, p.below)
-}
-
-func (c *calibrated) weakSlope(beta, u float64) error {
-	return &WeakSlopeError{Refusal{Place: "anchors", Found: "slope " + format(beta) + " with standard uncertainty " + format(u), Expected: "a slope that is clearly not zero: anchors further apart, or more readings of them"}}
-}
-
-// takeSubjects predicts every sample and control, in the order of their first
-// readings.
-func (c *calibrated) takeSubjects(r *Result) {
-	groups := c.subjects()
-	p, m := len(c.reported.names), len(c.in.anchors)
-	total := 0
-	for _, g := range groups {
-		total += len(g.readings)
-	}
-	r.Subjects = make([]SubjectResult, len(groups))
-	// One array for all subjects of each kind of slice.
-	floats := make([]float64, len(groups)*p+total)
-	indices := make([]int, total)
-	lines := make([]Contribution, 0, len(groups)*(len(c.sources.list)+2)+total*(1+indicatorInt(c.nz.preparations)))
-	ids := c.subjectIDs(groups, total)
-	gradient, anchors := make([]float64, c.layout.p), make([]float64, m)
-	id := 0
-	for k, g := range groups {
-		s := &r.Subjects[k]
-		rd := &c.in.readings[g.readings[0]]
-		s.Subject, s.Role, s.N = rd.Subject, rd.Role, g.preparations
-		n := len(g.readings)
-		s.Readings, indices = indices[:n:n], indices[n:]
-		s.Gradient, floats = floats[:p:p], floats[p:]
-		s.Coefficients, floats = floats[:n:n], floats[n:]
-		pred := c.predict(g.readings, gradient, s.Coefficients, anchors)
-		var w []float64
-		if c.nz.general {
-			w = c.functional(g.readings, gradient, s.Coefficients, c.lags)
-		}
-		c.fillSubject(s, g, pred)
-		start := len(lines)
-		lines = c.budget(lines, s, g, w, gradient, anchors, ids[id:])
-		s.Sources = lines[start:len(lines):len(lines)]
-		id += n + 1
-	}
-}
-
-func indicatorInt(b bool) int {
-	if b {
-		return 1
-	}
-	return 0
-}
-
-// A subjectGroup is one sample's or control's readings, by position.
-type subjectGroup struct {
-	readings     []int
-	preparations int
-	// ambiguous says that a sample and a control of the session have one code.
-	ambiguous bool
-}
-
-// subjects collects the usable readings of samples and controls. A control
-// reading of a material that is an anchor is shown, and flagged.
-func (c *calibrated) subjects() []subjectGroup {
-	type key struct {
-		subject string
-		sample  bool
-	}
-	count := 0
-	for i := range c.in.readings {
-		if rd := &c.in.readings[i]; rd.usable && rd.class < 0 {
-			count++
-		}
-	}
-	at := make(map[key]int, count)
-	var groups []subjectGroup
-	which := make([]int, 0, count)
-	for i := range c.in.readings {
-		rd := &c.in.readings[i]
-		if !rd.usable || rd.class >= 0 {
-			continue
-		}
-		k := key{rd.Subject, rd.Role == Sample}
-		g, ok := at[k]
-		if !ok {
-			g = len(groups)
-			at[k] = g
-			groups = append(groups, subjectGroup{})
-		}
-		groups[g].preparations++ // readings, for now
-		which = append(which, g)
-	}
-	slab := make([]int, count)
-	for g := range groups {
-		n := groups[g].preparations
-		groups[g].readings, slab = slab[:0:n], slab[n:]
-	}
-	j := 0
-	for i := range c.in.readings {
-		if rd := &c.in.readings[i]; rd.usable && rd.class < 0 {
-			groups[which[j]].readings = append(groups[which[j]].readings, i)
-			j++
-		}
-	}
-	for k, g := range at {
-		_, groups[g].ambiguous = at[key{k.subject, !k.sample}]
-	}
-	seen := make([]bool, c.in.preparations)
-	for g := range groups {
-		groups[g].preparations = 0
-		for _, i := range groups[g].readings {
-			if p := c.in.readings[i].preparation; !seen[p] {
-				seen[p] = true
-				groups[g].preparations++
+			if k < m {
+				x.Set(i, input.index, a.At(i, k))
+			} else {
+				y.Set(i, input.index, a.At(i, k))
 			}
 		}
 	}
-	return groups
-}
-
-// fillSubject sets value, uncertainty and coverage.
-func (c *calibrated) fillSubject(s *SubjectResult, g subjectGroup, pred prediction) {
-	for k, i := range g.readings {
-		s.Readings[k] = c.in.readings[i].index
+	if y.Cols == 0 {
+		return x.Slices(), nil
 	}
-	s.Value, s.scatter = pred.value+0, pred.scatter
-	between := c.in.policy.BetweenSession
-	s.BetweenSession = between.StandardUncertainty
-	b2 := float64(between.StandardUncertainty * between.StandardUncertainty)
-	variance := pred.variance + b2
-	below := pred.below
-	if nu := between.DegreesOfFreedom; nu > 0 {
-		below += float64(2*float64(b2*b2)) / nu
-	}
-	s.StandardUncertainty = math.Sqrt(math.Max(0, variance))
-	nu := uncertain.SatterthwaiteDF(variance, below)
-	s.Expanded, _ = uncertain.ExpandedFrom(s.StandardUncertainty, nu, c.in.policy.coverage()) // the policy was validated
-	for k, i := range g.readings {
-		rd := &c.in.readings[i]
-		// The readings' weights in the value are own·slope.
-		line := c.invert(rd, 0, nil)
-		c.reportedGradient(rd, line.value, float64(s.Coefficients[k]*line.slope), s.Gradient)
-	}
-	for _, l := range c.lags {
-		if k := slices.Index(g.readings, l.reading); k >= 0 {
-			s.Coefficients[k] += l.coefficient
-			continue
-		}
-		s.OtherReadings = append(s.OtherReadings, c.in.readings[l.reading].index)
-		s.OtherCoefficients = append(s.OtherCoefficients, l.coefficient)
-	}
+	return x.Slices(), y.Slices()
 }

@@ -463,3 +463,29 @@ func TestTheTwoDerivativesDifferWithResiduals(t *testing.T) {
 		t.Errorf("with large residuals the derivatives differ by %v only", d)
 	}
 }
+
+// An anchor whose readings are all excluded takes no part, but for what it
+// shares with others.
+func TestAnchorWithoutUsableReadingsTakesNoPart(t *testing.T) {
+	for _, m := range []Model{{}, {Drift: DriftLinear, Weights: WeightsEqual}} {
+		s := randomSession(6, false)
+		for i := range s.Anchors {
+			s.Anchors[i].Value.Terms = s.Anchors[i].Value.Terms[:1] // independent
+		}
+		without := s
+		without.Anchors = slices.Delete(slices.Clone(s.Anchors), 1, 2)
+		without.Readings = slices.DeleteFunc(slices.Clone(s.Readings), func(r Reading) bool { return r.Subject == "A1" })
+		s.Readings = slices.Clone(s.Readings)
+		for i := range s.Readings {
+			s.Readings[i].Excluded = s.Readings[i].Subject == "A1"
+		}
+		got, want := mustFit(t, s, m, Policy{}), mustFit(t, without, m, Policy{})
+		for i, p := range want.Parameters {
+			near(t, p.Name, got.Parameters[i].Value, p.Value, 1e-12*(1+math.Abs(p.Value)))
+			near(t, "u of "+p.Name, got.Parameters[i].StandardUncertainty, p.StandardUncertainty, 1e-12)
+		}
+		if a := got.Anchors[1]; a.LeftOut != nil || a.Adjusted != a.Value {
+			t.Errorf("%+v, want it as assigned", a)
+		}
+	}
+}

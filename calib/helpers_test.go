@@ -56,6 +56,36 @@ func mustFit(t testing.TB, s Session, m Model, p Policy) *Result {
 	return r
 }
 
+// valuesOnly fits and predicts without the diagnostics of the fit, for
+// simulations of thousands of sessions.
+func valuesOnly(t testing.TB, s Session, m Model) *Result {
+	t.Helper()
+	fail := func(err error) {
+		t.Helper()
+		if err != nil {
+			t.Fatal(err)
+		}
+	}
+	fail(validate(&s, m, Policy{}))
+	in, err := prepare(&s, m, Policy{})
+	fail(err)
+	p, err := in.newProblem(-1)
+	fail(err)
+	solved, err := p.solve()
+	fail(err)
+	c, err := solved.calibrate()
+	fail(err)
+	r := &Result{calibrated: c}
+	covariance := c.reported.covariance(c.covariance())
+	for i, name := range c.reported.names {
+		r.Parameters = append(r.Parameters, Parameter{Name: name, Value: c.reported.values[i]})
+	}
+	r.Covariance = covariance.Slices()
+	c.takeBlank(r)
+	c.takeSubjects(r)
+	return r
+}
+
 func (r *Result) parameter(t testing.TB, name string) Parameter {
 	t.Helper()
 	for _, p := range r.Parameters {

@@ -20,9 +20,12 @@ type input struct {
 	policy  Policy
 	// readings, sorted by (time, number, material, raw).
 	readings []reading
-	// anchors, sorted by material.
-	anchors []anchor
-	sources *anchorSources
+	// inputs are the anchors, sorted by material, and after them the correction
+	// inputs, in the session's order; anchors is the first part.
+	inputs, anchors []anchor
+	// corrected is ∂raw/∂input of each reading, readings × corrections.
+	corrected *adjust.Matrix
+	sources   *anchorSources
 	// vy is the covariance of the anchors' values; exact says it is zero. vyLow
 	// is what it is beyond double precision, kept for full covariances only.
 	vy, vyLow *adjust.Matrix
@@ -77,16 +80,15 @@ func prepare(s *Session, m Model, p Policy) (*input, error) {
 }
 
 func (in *input) takeAnchors() {
-	in.anchors = make([]anchor, len(in.session.Anchors))
+	in.inputs = make([]anchor, 0, len(in.session.Anchors)+len(in.session.Corrections))
 	for i, a := range in.session.Anchors {
-		terms := a.Value.Terms
-		if a.Value.Validate() != nil {
-			n, _ := uncertain.New(a.Value.Value, terms...) // sorted copy; each term was validated
-			terms = n.Terms
-		}
-		in.anchors[i] = anchor{index: i, material: a.Material, value: a.Value.Value + 0, terms: terms}
+		in.inputs = append(in.inputs, anchor{index: i, material: a.Material, value: a.Value.Value + 0, terms: sortedTerms(a.Value)})
 	}
+	in.anchors = in.inputs
 	slices.SortFunc(in.anchors, func(a, b anchor) int { return strings.Compare(a.material, b.material) })
+	for i, c := range in.session.Corrections {
+		in.inputs = append(in.inputs, anchor{index: i, material: c.Name, value: c.Input.Value, terms: sortedTerms(c.Input)})
+	}
 	in.sources = in.newAnchorSources()
 	m := len(in.anchors)
 	t := in.sources.matrix(in)
@@ -112,6 +114,15 @@ func (in *input) takeAnchors() {
 	}
 }
 
+// sortedTerms are the terms of a validated number, sorted where they were not.
+func sortedTerms(n uncertain.Number) []uncertain.Term {
+	if n.Validate() == nil {
+		return n.Terms
+	}
+	sorted, _ := uncertain.New(n.Value, n.Terms...) // each term was validated
+	return sorted.Terms
+}
+
 func (in *input) takeReadings() {
 	in.readings = make([]reading, len(in.session.Readings))
 	value := func(v *float64) float64 {
@@ -127,7 +138,9 @@ func (in *input) takeReadings() {
 			previous: -1, class: -1, preparation: -1,
 		}
 	}
-	slices.SortStableFunc(in.readings, compareReadings)
+	if !slices.IsSortedFunc(in.readings, compareReadings) {
+		slices.SortStableFunc(in.readings, compareReadings)
+	}
 	for i := range in.readings {
 		in.readings[i].position = i
 	}
@@ -135,22 +148,21 @@ func (in *input) takeReadings() {
 }
 
 // compareReadings is the order of every sum. What follows raw only keeps
-// readings apart that differ in nothing before.
+// readings apart that differ in nothing before. What is not known, NaN, comes
+// first.
 func compareReadings(a, b reading) int {
-	missing := func(v float64) float64 {
-		if math.IsNaN(v) {
-			return math.Inf(-1)
-		}
-		return v
+	if c := cmp.Compare(a.time, b.time); c != 0 {
+		return c
+	}
+	if c := compareIDs(a.ID, b.ID); c != 0 {
+		return c
 	}
 	return cmp.Or(
-		cmp.Compare(missing(a.time), missing(b.time)),
-		compareIDs(a.ID, b.ID),
 		strings.Compare(a.Subject, b.Subject),
 		cmp.Compare(a.raw, b.raw),
 		strings.Compare(string(a.Role), string(b.Role)),
-		cmp.Compare(missing(a.size), missing(b.size)),
-		cmp.Compare(missing(a.u), missing(b.u)),
+		cmp.Compare(a.size, b.size),
+		cmp.Compare(a.u, b.u),
 		strings.Compare(a.Preparation, b.Preparation),
 	)
 }
@@ -296,6 +308,16 @@ func (in *input) takePreparations() {
 
 func (in *input) takeCovariances() {
 	s := in.session
+	if len(s.Corrections) > 0 {
+		in.corrected = adjust.NewMatrix(len(in.readings), len(s.Corrections))
+		for i := range in.readings {
+			for j, c := range s.Corrections {
+				if k := in.readings[i].index; k >= 0 {
+					in.corrected.Set(i, j, c.PerReading[k])
+				}
+			}
+		}
+	}
 	n, m := len(in.readings), len(in.anchors)
 	if s.ReadingCovariance != nil {
 		in.covariance = adjust.NewMatrix(n, n)
@@ -329,10 +351,19 @@ func (in *input) takeCovariances() {
 
 // sourceID is the identity of a reading's noise.
 func (rd *reading) sourceID() string {
+	var b strings.Builder
+	rd.writeSourceID(&b)
+	return b.String()
+}
+
+func (rd *reading) writeSourceID(b *strings.Builder) {
+	b.WriteString("reading:")
 	if rd.ID == "" {
-		return "reading:#" + strconv.Itoa(rd.index)
+		b.WriteString("#")
+		b.WriteString(strconv.Itoa(rd.index))
+		return
 	}
-	return "reading:" + rd.ID
+	b.WriteString(rd.ID)
 }
 
 // preparationID is the identity of a preparation's effect.

@@ -69,6 +69,26 @@ func (c *calibrated) invert(rd *reading, weight float64, gradient []float64) sam
 	return out
 }
 
+// invertAt is the value of a reading at other parameters, whose state c holds.
+func (c *calibrated) invertAt(theta []float64, rd *reading) float64 {
+	l, s := &c.layout, &c.state
+	c.columns(rd, c.basis)
+	f := rd.raw - c.r0
+	if l.memory >= 0 {
+		f = (f - float64(s.mu*c.basis[l.globals])) / s.rest
+	}
+	rest, b := f-s.alpha, s.beta
+	for t := 0; t < l.globals; t++ {
+		rest -= float64(theta[l.firstGlobal+t] * c.basis[t])
+	}
+	if l.blank >= 0 {
+		h := c.size.value(rd.size)
+		rest -= float64(s.k0 * h)
+		b += float64(s.k1 * h)
+	}
+	return c.y0 + rest/b
+}
+
 // reportedGradient adds the derivatives by the reported parameters.
 func (c *calibrated) reportedGradient(rd *reading, value, weight float64, gradient []float64) {
 	s := c.state
@@ -83,7 +103,7 @@ func (c *calibrated) reportedGradient(rd *reading, value, weight float64, gradie
 	gradient[r.intercept] -= w
 	gradient[r.slope] -= float64(w * value)
 	if r.drift >= 0 {
-		n := len(c.time.names())
+		n := c.time.reportedColumns()
 		c.time.reported(rd.time, c.nodes[:n])
 		for j, g := range c.nodes[:n] {
 			gradient[r.drift+j] -= float64(w * g)
@@ -226,8 +246,8 @@ type prediction struct {
 }
 
 // predict forms the value of some readings. gradient (internal parameters),
-// own (∂value/∂raw, one for each) and anchors (∂value/∂y through the fit, one
-// for each anchor of the input) are written to. The coefficients of
+// own (∂value/∂raw, one for each) and anchors (∂value/∂input, one for each input:
+// the anchors through the fit, the corrections directly too) are written to. The coefficients of
 // predecessors are left in c.lags.
 func (c *calibrated) predict(readings []int, gradient, own, anchors []float64) prediction {
 	clear(gradient)
@@ -260,6 +280,15 @@ func (c *calibrated) predict(readings []int, gradient, own, anchors []float64) p
 	for k := range anchors {
 		for a, g := range gradient {
 			anchors[k] += float64(g * c.sensitivity.At(a, k))
+		}
+	}
+	if c.in.corrected != nil {
+		direct := anchors[len(c.in.anchors):]
+		for k, i := range readings {
+			adjust.AddScaled(direct, own[k], c.in.corrected.Row(i))
+		}
+		for _, l := range c.lags {
+			adjust.AddScaled(direct, l.coefficient, c.in.corrected.Row(l.reading))
 		}
 	}
 	c.spreadVariance(&p, readings, gradient, own, anchors)

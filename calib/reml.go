@@ -1,7 +1,6 @@
 package calib
 
 import (
-	"fmt"
 	"math"
 
 	"deltamoor/calib/adjust"
@@ -435,62 +434,4 @@ func (p *problem) groupPattern(k pattern, g preparationGroup) *adjust.Matrix {
 		adjust.SolveLower(g.l, row)
 	}
 	return t
-}
-
-// blankContrasts are the rows that determine the blank and the other terms
-// with every level free: each anchor's contrast with 1/s, on (1, τ) at the
-// assigned value, and the pooled rows. A monitor's τ is not known, so its
-// contrast says nothing here. It returns the columns, what they are to
-// explain, and the number of contrasts.
-func (p *problem) blankContrasts(r *reduction) (*adjust.Matrix, []float64, int) {
-	var at []int
-	for k, l := range p.classes {
-		if i := r.contrastRow[k]; i >= 0 && l.anchor >= 0 {
-			at = append(at, i)
-		}
-	}
-	contrasts := len(at)
-	for t := 0; t < r.pooled.Rows; t++ {
-		at = append(at, r.firstPooled+t)
-	}
-	x, z := adjust.NewMatrix(2+r.pooled.Rows, len(at)), make([]float64, len(at))
-	for j, i := range at {
-		z[j] = r.z[i]
-		if l := r.model.latent[i]; l >= 0 {
-			x.Set(0, j, r.model.h[i])
-			x.Set(1, j, float64(r.model.h[i]*p.values[l]))
-		}
-		for t := 0; t < p.layout.globals; t++ {
-			x.Set(2+t, j, r.model.global.At(t, i))
-		}
-		if p.layout.memory >= 0 {
-			x.Set(2+p.layout.globals, j, r.model.previous[i])
-		}
-	}
-	return x, z, contrasts
-}
-
-func (p *problem) blankRefusal() error {
-	return &NotEstimableError{Refusal{Place: "model.size", Found: fmt.Sprintf("%d materials measured at different sizes", p.sizedClasses()), Expected: "at least 2 anchors of different value, each at different sizes (size blank)"}}
-}
-
-func (p *problem) sizedClasses() int {
-	sizes := map[int]map[float64]bool{}
-	for j, i := range p.fitted {
-		k := p.class[j]
-		if p.classes[k].anchor < 0 {
-			continue
-		}
-		if sizes[k] == nil {
-			sizes[k] = map[float64]bool{}
-		}
-		sizes[k][p.in.readings[i].size] = true
-	}
-	count := 0
-	for _, s := range sizes {
-		if len(s) > 1 {
-			count++
-		}
-	}
-	return count
 }

@@ -18,6 +18,11 @@ type Result struct {
 	// AnchorDerivatives is the exact dθ/dy of the estimate at fixed variances, p × anchors, for predicting shifts.
 	AnchorDerivatives [][]float64
 
+	// CorrectionSensitivities is ∂θ/∂x = K·∂r/∂x for uncertainty, p × corrections,
+	// and CorrectionDerivatives the exact dθ/dx at fixed variances; nil without
+	// corrections.
+	CorrectionSensitivities, CorrectionDerivatives [][]float64
+
 	// Variances are the estimated or declared variance groups of this fit, and
 	// VarianceCovariance their covariance.
 	Variances          []Variance

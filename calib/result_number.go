@@ -21,13 +21,13 @@ func (r *Result) Number(i int) uncertain.Number {
 	for k, index := range s.Readings {
 		readings[k] = at[index]
 	}
-	gradient, anchors, own := make([]float64, c.layout.p), make([]float64, len(c.in.anchors)), make([]float64, len(readings))
+	gradient, anchors, own := make([]float64, c.layout.p), make([]float64, len(c.in.inputs)), make([]float64, len(readings))
 	p := c.private()
 	pred := p.predict(readings, gradient, own, anchors)
 	w := p.functional(readings, gradient, own, p.lags)
 	n := p.compose(pred.value, anchors, w)
 	if s.BetweenSession > 0 {
-		n.Terms = append(n.Terms, r.betweenTerm(i, readings[0]))
+		n.Terms = append(n.Terms, r.betweenTerm(i))
 	}
 	return c.clean(n)
 }
@@ -36,7 +36,7 @@ func (r *Result) Number(i int) uncertain.Number {
 func (r *Result) ParameterNumber(k int) uncertain.Number {
 	c := r.calibrated
 	g := c.reported.jacobian.Row(k)
-	w, anchors := make([]float64, len(c.in.readings)), make([]float64, len(c.in.anchors))
+	w, anchors := make([]float64, len(c.in.readings)), make([]float64, len(c.in.inputs))
 	for a, x := range g {
 		for i, v := range c.kraw.Row(a) {
 			w[i] += float64(x * v)
@@ -98,8 +98,8 @@ func (c *calibrated) compose(value float64, anchors, w []float64) uncertain.Numb
 	numbers := make([]uncertain.Number, 0, len(anchors)+1)
 	coefficients := make([]float64, 0, len(anchors)+1)
 	for k, h := range anchors {
-		if h != 0 && len(c.in.anchors[k].terms) > 0 {
-			numbers = append(numbers, uncertain.Number{Terms: c.in.anchors[k].terms})
+		if h != 0 && len(c.in.inputs[k].terms) > 0 {
+			numbers = append(numbers, uncertain.Number{Terms: c.in.inputs[k].terms})
 			coefficients = append(coefficients, h)
 		}
 	}
@@ -135,7 +135,7 @@ func (c *calibrated) clean(n uncertain.Number) uncertain.Number {
 }
 
 // betweenTerm is subject i's between-session source.
-func (r *Result) betweenTerm(i, first int) uncertain.Term {
+func (r *Result) betweenTerm(i int) uncertain.Term {
 	c := r.calibrated
 	s := &r.Subjects[i]
 	id := ""
@@ -144,7 +144,6 @@ func (r *Result) betweenTerm(i, first int) uncertain.Term {
 			id = s.Sources[k].ID
 		}
 	}
-	_ = first
 	t := uncertain.Term{Sensitivity: 1, Source: uncertain.Source{ID: id, Kind: uncertain.KindBetweenSession, U: s.BetweenSession, Group: c.betweenGroup()}}
 	if math.IsInf(c.in.policy.BetweenSession.DegreesOfFreedom, 1) {
 		t.Group = ""

@@ -38,6 +38,24 @@ type Session struct {
 	ReadingCovariance [][]float64
 	// CrossCovariance is readings × anchors (‰²); nil for none.
 	CrossCovariance [][]float64
+
+	// Corrections are the inputs common to many readings with which their raw
+	// deltas were corrected before the fit (an H3 factor, a blank known
+	// independently, a relation). They do not enter the weights; their sources
+	// are propagated to every parameter and result.
+	Corrections []Correction
+}
+
+// A Correction is one input of the corrections made before the fit.
+type Correction struct {
+	// Name says which, for people.
+	Name string
+	// Input is its value with its sources; the value itself is already in the
+	// raw deltas.
+	Input uncertain.Number
+	// PerReading is ∂raw/∂input of each reading, in the order of Readings; 0
+	// where the reading was not corrected with it.
+	PerReading []float64
 }
 
 // An AssignedValue is what an anchor is worth on the scale of the fit (‰).

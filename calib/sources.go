@@ -31,13 +31,13 @@ type scaling struct {
 }
 
 func (in *input) newAnchorSources() *anchorSources {
-	a := &anchorSources{index: make([][]int, len(in.anchors)), groups: in.session.Groups}
+	a := &anchorSources{index: make([][]int, len(in.inputs)), groups: in.session.Groups}
 	count := 0
-	for _, k := range in.anchors {
+	for _, k := range in.inputs {
 		count += len(k.terms)
 	}
 	a.list = make([]uncertain.Source, 0, count)
-	for _, k := range in.anchors {
+	for _, k := range in.inputs {
 		for _, t := range k.terms {
 			a.list = append(a.list, t.Source)
 		}
@@ -50,7 +50,7 @@ func (in *input) newAnchorSources() *anchorSources {
 		a.mixed = a.mixed || x.U != y.U || x.Group != y.Group || !slices.Equal(x.Per, y.Per) || len(x.Shares)+len(y.Shares) > 0
 		return true
 	})
-	for k, anchor := range in.anchors {
+	for k, anchor := range in.inputs {
 		a.index[k] = make([]int, len(anchor.terms))
 		for j, t := range anchor.terms {
 			a.index[k][j], _ = slices.BinarySearchFunc(a.list, t.ID, func(s uncertain.Source, id string) int { return strings.Compare(s.ID, id) })
@@ -95,7 +95,7 @@ func (a *anchorSources) standardised(in *input, h, out []float64) {
 		if c == 0 {
 			continue
 		}
-		for j, t := range in.anchors[k].terms {
+		for j, t := range in.inputs[k].terms {
 			out[a.index[k][j]] += float64(c * float64(t.Sensitivity*t.U))
 		}
 	}

@@ -61,6 +61,7 @@ func validate(s *Session, m Model, p Policy) error {
 	validateAnchors(&r, s)
 	validateReadings(&r, s, m)
 	validateCovariances(&r, s, m)
+	validateCorrections(&r, s)
 	return r.err()
 }
 
@@ -192,7 +193,13 @@ func validateReadings(r *refusals, s *Session, m Model) {
 }
 
 func validateReading(r *refusals, rd *Reading, i int) {
-	r.number(rd.Raw, "readings[%d].raw", i)
+	number := func(v *float64, field string) bool {
+		if v == nil || finite(*v) {
+			return v != nil
+		}
+		return r.number(*v, "readings[%d].%s", i, field)
+	}
+	number(&rd.Raw, "raw")
 	switch rd.Role {
 	case Anchor, Control, Monitor, Blank, Gas, Conditioning, Sample:
 	default:
@@ -201,18 +208,12 @@ func validateReading(r *refusals, rd *Reading, i int) {
 	if rd.Subject == "" && rd.Role.measured() {
 		r.add(&UnassignedAnchorError{Refusal{Place: fmt.Sprintf("readings[%d].%s", i, rd.Role.noun()), Found: "nothing", Expected: "a code"}})
 	}
-	if u := rd.StandardUncertainty; u != nil && r.number(*u, "readings[%d].u", i) && *u < 0 {
+	if u := rd.StandardUncertainty; number(u, "u") && *u < 0 {
 		r.add(&NegativeUncertaintyError{Refusal{Place: fmt.Sprintf("readings[%d].u", i), Found: fmt.Sprint(*u), Expected: "a standard uncertainty, not negative"}})
 	}
-	if rd.Time != nil {
-		r.number(*rd.Time, "readings[%d].time", i)
-	}
-	if rd.Previous != nil {
-		r.number(*rd.Previous, "readings[%d].previous", i)
-	}
-	if rd.Size != nil {
-		r.number(*rd.Size, "readings[%d].size", i)
-	}
+	number(rd.Time, "time")
+	number(rd.Previous, "previous")
+	number(rd.Size, "size")
 }
 
 func validateCovariances(r *refusals, s *Session, m Model) {
@@ -246,6 +247,21 @@ func validateCovariances(r *refusals, s *Session, m Model) {
 			for j, v := range row {
 				r.number(v, "cross_covariance[%d][%d]", i, j)
 			}
+		}
+	}
+}
+
+func validateCorrections(r *refusals, s *Session) {
+	for i, c := range s.Corrections {
+		place := fmt.Sprintf("corrections[%d]", i)
+		if _, err := uncertain.New(c.Input.Value, c.Input.Terms...); err != nil {
+			r.add(&CorrectionError{Refusal{Place: place, Found: err.Error(), Expected: "an uncertain number"}})
+		}
+		if len(c.PerReading) != len(s.Readings) {
+			r.add(&CorrectionError{Refusal{Place: place + ".per_reading", Found: fmt.Sprintf("%d derivatives", len(c.PerReading)), Expected: fmt.Sprintf("one for each of %d readings", len(s.Readings))}})
+		}
+		for j, v := range c.PerReading {
+			r.number(v, "%s.per_reading[%d]", place, j)
 		}
 	}
 }

@@ -26,35 +26,65 @@ func (s *Solution) Sensitivity() *Matrix {
 // the residuals are zero or the values exact. A singular ∂s/∂θ (a flat
 // minimum) is a *RankError.
 func (s *Solution) Derivative() (*Matrix, error) {
+	d, _, err := s.Derivatives(nil)
+	return d, err
+}
+
+// A Direction is a change of the observations, and what else it changes of the
+// score (nil for nothing): that of a column of X that holds observations.
+type Direction struct {
+	Observed []float64
+	Score    []float64
+}
+
+// Derivatives is [Solution.Derivative] by the values, and by each direction
+// of the observations, parameters × directions.
+func (s *Solution) Derivatives(directions []Direction) (values, observed *Matrix, err error) {
 	p, m := s.Problem.Parameters, len(s.Problem.Values)
+	observed = NewMatrix(p, len(directions))
 	if s.Determined || s.whitener == nil {
-		return s.Sensitivity(), nil
+		for k := 0; k < p; k++ {
+			for j, d := range directions {
+				observed.Set(k, j, Dot(s.K.Row(k), d.Observed))
+			}
+		}
+		return s.Sensitivity(), observed, nil
 	}
 	b := s.newBend()
 	columns := newQR(p, p)
+	still := make([]float64, len(s.Problem.Observed))
 	dtheta, dy := make([]float64, p), make([]float64, m)
 	for k := 0; k < p; k++ {
-		// In units of its own column, so that all are comparable.
 		dtheta[k] = 1
-		b.score(dtheta, dy, columns.columns.Row(k))
+		b.score(dtheta, dy, still, columns.columns.Row(k))
 		dtheta[k] = 0
 	}
 	if err := columns.factor(); err != nil {
-		return nil, err
+		return nil, nil, err
 	}
-	out := NewMatrix(p, m)
+	values = NewMatrix(p, m)
 	ds, x := make([]float64, p), make([]float64, p)
-	for l := 0; l < m; l++ {
-		dy[l] = 1
-		b.score(dtheta, dy, ds)
-		dy[l] = 0
+	answer := func(out *Matrix, at int) {
 		columns.transposed(ds)
 		columns.solve(ds, x)
 		for k := range x {
-			out.Set(k, l, -x[k])
+			out.Set(k, at, -x[k])
 		}
 	}
-	return out, nil
+	for l := 0; l < m; l++ {
+		dy[l] = 1
+		b.score(dtheta, dy, still, ds)
+		dy[l] = 0
+		answer(values, l)
+	}
+	for j, d := range directions {
+		b.score(dtheta, dy, d.Observed, ds)
+		for k, v := range d.Score {
+			ds[k] += v
+		}
+		answer(observed, j)
+	}
+	return values, observed, nil
 }
 
 // bend holds the buffers of directional derivatives of the score.
@@ -75,17 +105,18 @@ func (s *Solution) newBend() *bend {
 	return b
 }
 
-// score writes the change of s(θ, y) in the direction (dtheta, dy) into ds.
-func (b *bend) score(dtheta, dy, ds []float64) {
+// score writes the change of s(θ, y) in the direction (dtheta, dy, dr) into ds.
+func (b *bend) score(dtheta, dy, dr, ds []float64) {
 	s, pr := b.s, b.s.Problem
 	lambda := s.Weighted
 	// The change of the slopes does not depend on that of τ: F is linear in τ.
+	clear(b.dtau)
 	pr.Model.Bend(s.Theta, s.Adjusted, dtheta, b.dtau, b.dx, b.dslope)
-	// de = −X(y) dθ − S G dy
+	// de = dr − X(y) dθ − S G dy
 	for i := range b.de {
-		b.de[i] = 0
+		b.de[i] = dr[i]
 		if l := pr.Latent[i]; l >= 0 {
-			b.de[i] = -float64(s.Slope[i] * dy[l])
+			b.de[i] -= float64(s.Slope[i] * dy[l])
 		}
 	}
 	for k, d := range dtheta {
