@@ -16,23 +16,30 @@ func TestLookupsByKeyUseTheKey(t *testing.T) {
 	defer s.Close()
 	edges := derivedTables[0]
 	for name, c := range map[string]struct{ statement, want string }{
-		"selectVersion":          {selectVersion, "laboratory=? AND kind=? AND code=? AND version=?"},
-		"selectNewest":           {selectNewest, "laboratory=? AND kind=? AND code=?"},
-		"selectNewestHash":       {selectNewestHash, "laboratory=? AND kind=? AND code=?"},
-		"selectVersions":         {selectVersions, "laboratory=? AND kind=? AND code=? AND version>?"},
-		"selectHistory":          {selectHistory, "laboratory=? AND kind=? AND code=?"},
-		"selectDecisions":        {selectDecisions + list(3, 2) + orderDecisions, "laboratory=? AND kind=? AND code=?"},
-		"selectHashes":           {s.engine.withWanted + selectHashes, "laboratory=? AND kind=? AND code=? AND version=?"},
-		"selectHistories":        {s.engine.withWanted + selectHistories, "laboratory=? AND kind=? AND code=?"},
-		"edges of versions":      {s.engine.withWanted + derivedOf(edges.table, edges.kind, edges.code, edges.version, ""), "laboratory=? AND from_kind=? AND from_code=? AND from_version=?"},
-		"selectInForce":          {selectInForce, "laboratory=? AND kind=? AND code=? AND version=?"},
-		"selectRecent":           {selectRecent, "versions_recorded (laboratory=? AND <expr>=? AND recorded_at<?"},
-		"selectRecentOfAll":      {selectRecentOfAll, "versions_position (laboratory=? AND position<?"},
-		"selectEdgesTo":          {selectEdgesTo, "laboratory=? AND to_laboratory=? AND to_kind=? AND to_code=?"},
-		"selectResultsOfScale":   {selectResultsOfScale, "results_scale (laboratory=? AND scale=? AND measured_at>?"},
-		"selectResultsOfSubject": {selectResultsOfSubject, "results_subject (laboratory=? AND subject=? AND measured_at>?"},
-		"selectNamed":            {selectNamed, "laboratory=? AND kind=? AND name=?"},
-		"selectReadings":         {selectReadings, "laboratory=? AND session=? AND number>?"},
+		"selectVersion":           {selectVersion, "laboratory=? AND kind=? AND code=? AND version=?"},
+		"selectNewest":            {selectNewest, "laboratory=? AND kind=? AND code=?"},
+		"selectNewestHash":        {selectNewestHash, "laboratory=? AND kind=? AND code=?"},
+		"selectVersions":          {selectVersions, "laboratory=? AND kind=? AND code=? AND version>?"},
+		"selectHistory":           {selectHistory, "laboratory=? AND kind=? AND code=?"},
+		"selectDecisions":         {selectDecisions + list(3, 2) + orderDecisions, "laboratory=? AND kind=? AND code=?"},
+		"selectHashes":            {s.engine.withWanted + selectHashes, "laboratory=? AND kind=? AND code=? AND version=?"},
+		"selectHistories":         {s.engine.withWanted + selectHistories, "laboratory=? AND kind=? AND code=?"},
+		"edges of versions":       {s.engine.withWanted + derivedOf(edges.table, edges.kind, edges.code, edges.version, ""), "laboratory=? AND from_kind=? AND from_code=? AND from_version=?"},
+		"selectInForce":           {selectInForce, "laboratory=? AND kind=? AND code=? AND version=?"},
+		"selectRecent":            {selectRecent, "versions_recorded (laboratory=? AND <expr>=? AND recorded_at<?"},
+		"selectRecentOfAll":       {selectRecentOfAll, "versions_position (laboratory=? AND position<?"},
+		"selectEdgesTo":           {selectEdgesTo, "laboratory=? AND to_laboratory=? AND to_kind=? AND to_code=?"},
+		"selectResultsOfScale":    {selectResultsOfScale, "results_scale (laboratory=? AND scale=? AND measured_at>?"},
+		"selectResultsOfSubject":  {selectResultsOfSubject, "results_subject (laboratory=? AND subject=? AND measured_at>?"},
+		"selectNamed":             {selectNamed, "laboratory=? AND kind=? AND name=?"},
+		"selectReadings":          {selectReadings, "laboratory=? AND session=? AND number>?"},
+		"selectBlocks":            {s.engine.withWanted + selectBlocks, "laboratory=? AND calibration=? AND version=?"},
+		"selectAnchors":           {s.engine.withWanted + selectAnchors, "laboratory=? AND from_kind=? AND from_code=? AND from_version=? AND part=?"},
+		"selectVersionsOf":        {s.engine.withWanted + selectVersionsOf, "laboratory=? AND kind=? AND code=? AND version=?"},
+		"selectDraftsOf":          {selectDraftsOf, "laboratory=? AND from_kind=? AND from_code=?"},
+		"selectReportsOfRevision": {selectReportsOfRevision, "laboratory=? AND to_laboratory=? AND to_kind=? AND to_code=?"},
+		"countJudged":             {s.engine.withWanted + countJudged, "laboratory=? AND to_laboratory=? AND to_kind=? AND to_code=?"},
+		"selectLinesOfReport":     {selectLinesOfReport, "laboratory=? AND report=? AND version=?"},
 	} {
 		plan := planOf(t, s, c.statement)
 		if !strings.Contains(plan, c.want) {
@@ -71,4 +78,20 @@ func planOf(t *testing.T, s *Store, statement string) string {
 	}
 	t.Fatalf("no plan for %s", statement)
 	return ""
+}
+
+// What rests on a version is walked from the to side, and each version found is
+// read by its key.
+func TestWalkUpwardsUsesTheIndexOfEdges(t *testing.T) {
+	s, err := Open(context.Background(), Options{Database: t.TempDir(), Migrate: true})
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer s.Close()
+	plan := planOf(t, s, strings.Replace(s.engine.withWanted, "wanted", "RECURSIVE wanted", 1)+selectAffected)
+	for _, want := range []string{"edges_to (laboratory=? AND to_laboratory=? AND to_kind=? AND to_code=?", "versions_1 (laboratory=? AND kind=? AND code=? AND version=?)", "PRIMARY KEY (laboratory=? AND kind=? AND code=?)"} {
+		if !strings.Contains(plan, want) {
+			t.Errorf("the plan does not search by %s:\n%s", want, plan)
+		}
+	}
 }

@@ -251,6 +251,9 @@ func (tx *Tx) session(ctx context.Context, code string) (*sessionRows, error) {
 		}
 	}
 	s.next = last + 1
+	if tx.sessions == nil {
+		tx.sessions = make(map[string]*sessionRows)
+	}
 	tx.sessions[code] = s
 	return s, nil
 }

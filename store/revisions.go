@@ -140,18 +140,22 @@ type AffectedVersion struct {
 	State State
 }
 
+// Joins are written crosswise with their conditions after: SQLite then takes the
+// tables in the order they stand, and without statistics it would not find it.
+// What was recorded too late is left out at the end, since whatever rests on it
+// is later still: the walk then needs nothing but the index of edges.
 const selectAffected = `), up (laboratory, kind, code, version) AS (
 		SELECT w.laboratory, w.kind, w.code, w.version FROM wanted w
 		UNION
-		SELECT e.laboratory, e.from_kind, e.from_code, e.from_version FROM up u
-		JOIN edges e ON e.laboratory = $2 AND e.to_laboratory = u.laboratory AND e.to_kind = u.kind AND e.to_code = u.code AND e.to_version = u.version
-		WHERE e.part IN ('anchor', 'member', 'line') AND e.recorded_at <= $3
+		SELECT e.laboratory, e.from_kind, e.from_code, e.from_version FROM up u CROSS JOIN edges e
+		WHERE e.laboratory = $2 AND e.to_laboratory = u.laboratory AND e.to_kind = u.kind AND e.to_code = u.code AND e.to_version = u.version
+			AND e.part IN ('anchor', 'member', 'line')
 	)
 	SELECT v.kind, v.code, v.version, v.position, v.hash, c.newest, c.state, c.in_force, c.held
-	FROM up u
-	JOIN versions v ON v.laboratory = u.laboratory AND v.kind = u.kind AND v.code = u.code AND v.version = u.version
-	JOIN currents c ON c.laboratory = v.laboratory AND c.kind = v.kind AND c.code = v.code
-	WHERE v.laboratory = $2 AND v.position > $4 ORDER BY v.position LIMIT $5`
+	FROM up u CROSS JOIN versions v CROSS JOIN currents c
+	WHERE u.laboratory = $2 AND v.laboratory = u.laboratory AND v.kind = u.kind AND v.code = u.code AND v.version = u.version
+		AND c.laboratory = v.laboratory AND c.kind = v.kind AND c.code = v.code AND v.recorded_at <= $3 AND v.position > $4
+	ORDER BY v.position LIMIT $5`
 
 // Affected calls row for everything that rests on the roots, at any depth, in
 // the order of the ledger, in which a version stands after all it rests on. The
@@ -213,14 +217,12 @@ type CalibrationBlock struct {
 
 const (
 	selectBlocks = `) SELECT s.calibration, s.version, s.parameters, s.results, r.session, r.scale, r.measured_at
-		FROM wanted w
-		JOIN sensitivities s ON s.laboratory = w.laboratory AND s.calibration = w.code AND s.version = w.version
+		FROM wanted w CROSS JOIN sensitivities s
 		LEFT JOIN results r ON r.laboratory = s.laboratory AND r.calibration = s.calibration AND r.version = s.version AND r.line = 0
-		WHERE s.laboratory = $2`
+		WHERE s.laboratory = w.laboratory AND s.calibration = w.code AND s.version = w.version`
 	selectAnchors = `) SELECT e.from_code, e.from_version, e.to_laboratory, e.to_code, e.to_version
-		FROM wanted w
-		JOIN edges e ON e.laboratory = w.laboratory AND e.from_kind = w.kind AND e.from_code = w.code AND e.from_version = w.version AND e.part = 'anchor'
-		WHERE e.laboratory = $2`
+		FROM wanted w CROSS JOIN edges e
+		WHERE e.laboratory = w.laboratory AND e.from_kind = w.kind AND e.from_code = w.code AND e.from_version = w.version AND e.part = 'anchor'`
 )
 
 // Blocks returns the derivatives and anchors of calibration versions of one
@@ -238,7 +240,7 @@ func (v *View) Blocks(ctx context.Context, laboratory string, calibrations []Ref
 		return Ref{Key: Key{Laboratory: laboratory, Kind: KindCalibration, Code: code}, Version: version}
 	}
 	blocks := make(map[Ref]CalibrationBlock, len(calibrations))
-	err = v.q.each(ctx, v.q.engine.withWanted+selectBlocks, []any{list, laboratory}, func(scan func(...any) error) error {
+	err = v.q.each(ctx, v.q.engine.withWanted+selectBlocks, []any{list}, func(scan func(...any) error) error {
 		var code string
 		var version int
 		var parameters, results []byte
@@ -261,7 +263,7 @@ func (v *View) Blocks(ctx context.Context, laboratory string, calibrations []Ref
 	if err != nil {
 		return nil, fmt.Errorf("read derivatives: %w", err)
 	}
-	err = v.q.each(ctx, v.q.engine.withWanted+selectAnchors, []any{list, laboratory}, func(scan func(...any) error) error {
+	err = v.q.each(ctx, v.q.engine.withWanted+selectAnchors, []any{list}, func(scan func(...any) error) error {
 		var code string
 		var version int
 		to := Ref{Key: Key{Kind: KindValue}}
@@ -429,10 +431,9 @@ type RevisionReport struct {
 }
 
 // An older version of a final value that the revision drafted again stands on a line of the report.
-const selectReportsOfRevision = `SELECT l.from_code, count(DISTINCT l.to_code) FROM edges e
-	JOIN edges l ON l.laboratory = e.laboratory AND l.to_laboratory = e.laboratory AND l.to_kind = e.from_kind AND l.to_code = e.from_code
-		AND l.from_kind = 'report' AND l.part = 'line' AND l.to_version < e.from_version
-	WHERE e.laboratory = $1 AND e.to_laboratory = $1 AND e.to_kind = 'revision' AND e.to_code = $2 AND e.from_kind = 'final' AND e.part = 'revision'
+const selectReportsOfRevision = `SELECT l.from_code, count(DISTINCT l.to_code) FROM edges e CROSS JOIN edges l
+	WHERE l.laboratory = e.laboratory AND l.to_laboratory = e.laboratory AND l.to_kind = e.from_kind AND l.to_code = e.from_code
+		AND l.from_kind = 'report' AND l.part = 'line' AND l.to_version < e.from_version AND e.laboratory = $1 AND e.to_laboratory = $1 AND e.to_kind = 'revision' AND e.to_code = $2 AND e.from_kind = 'final' AND e.part = 'revision'
 		AND l.from_code > $3 AND ($4 = '' OR l.from_code = $4)
 	GROUP BY l.from_code ORDER BY l.from_code LIMIT $5`
 
@@ -452,10 +453,9 @@ func (v *View) ReportsOfRevision(ctx context.Context, laboratory, revision, afte
 	return all, nil
 }
 
-const countJudged = `) SELECT count(*) FROM wanted w
-	JOIN edges e ON e.laboratory = $2 AND e.to_laboratory = w.laboratory AND e.to_kind = w.kind AND e.to_code = w.code AND e.to_version = w.version
-		AND e.from_kind = 'calibration' AND e.part = 'control'
-	JOIN currents c ON c.laboratory = e.laboratory AND c.kind = e.from_kind AND c.code = e.from_code AND c.in_force = e.from_version`
+const countJudged = `) SELECT count(*) FROM wanted w CROSS JOIN edges e CROSS JOIN currents c
+	WHERE e.laboratory = $2 AND e.to_laboratory = w.laboratory AND e.to_kind = w.kind AND e.to_code = w.code AND e.to_version = w.version
+		AND e.from_kind = 'calibration' AND e.part = 'control' AND c.laboratory = e.laboratory AND c.kind = e.from_kind AND c.code = e.from_code AND c.in_force = e.from_version`
 
 // Judged counts the calibrations in force of a laboratory whose controls were judged by
 // the values named: their results do not rest on them.

@@ -55,6 +55,21 @@ func (tx *Tx) Remember(ctx context.Context, person, key string, request Hash, an
 	return nil
 }
 
+const answerRemembered = `UPDATE idempotency SET answer = $5
+	WHERE laboratory = $1 AND person = $2 AND request_key = $3 AND request_hash = $4`
+
+// Answer replaces the answer that Remember kept before there was one.
+func (tx *Tx) Answer(ctx context.Context, person, key string, request Hash, answer []byte) error {
+	n, err := tx.q.exec(ctx, answerRemembered, tx.laboratory, person, key, request[:], append([]byte{}, answer...))
+	if err != nil {
+		return fmt.Errorf("answer idempotency key %q: %w", key, err)
+	}
+	if n == 0 {
+		return notFound("request under idempotency key %q", key)
+	}
+	return nil
+}
+
 // Forget removes answers older than IdempotencyPeriod and returns how many.
 func (tx *Tx) Forget(ctx context.Context) (int64, error) {
 	since := tx.now - Instant(IdempotencyPeriod.Microseconds())

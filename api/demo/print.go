@@ -8,6 +8,7 @@ import (
 	"slices"
 	"strings"
 
+	"deltamoor/api/exchange"
 	"deltamoor/api/registry"
 	"deltamoor/calib"
 	"deltamoor/store"
@@ -21,49 +22,52 @@ func Print(ctx context.Context, w io.Writer, reg *registry.Registry, s *Summary)
 	if err != nil {
 		return fmt.Errorf("trace %s: %w", store.FormatCode(s.Shown), err)
 	}
-	p := &page{w: w}
+	p := &page{exchange.NewTextPage(w)}
 	p.story(s)
 	for _, r := range s.Reports {
 		if slices.ContainsFunc(r.Lines, func(l registry.ReportedDelta) bool { return l.Code == s.Shown }) {
 			p.report(s, r)
 		}
 	}
-	p.line("")
+	p.Line("")
 	p.heading("Where one of these numbers comes from")
-	p.paragraph("", "Read downwards: each line rests on those further to the right below it. Every version named here is kept for ever; none is overwritten. "+
+	p.Paragraph("", "Read downwards: each line rests on those further to the right below it. Every version named here is kept for ever; none is overwritten. "+
 		"An anchor is a material of known value that pins the line of a session; a control is measured beside it and never in the line. "+
 		"\"Brings x % of the variance\" says how much of u² of the result that the trace follows comes from that anchor's value; the rest is the session's own. "+
 		"\"Weights replicate\" means that the noise of a reading was estimated from repeated portions of the anchors. "+
 		"What \"registry\" recorded are the published scales and values that every registry begins with. Times are UTC.")
-	p.line("")
-	if p.err != nil {
-		return p.err
+	p.Line("")
+	if p.Err() != nil {
+		return p.Err()
 	}
-	if err := WriteTrace(w, trace); err != nil {
+	if err := exchange.WriteTrace(w, trace); err != nil {
 		return err
 	}
-	p.line("")
+	p.Line("")
 	p.heading("Caution")
-	p.paragraph("", "The laboratory is invented; the hazards of such work are not. Reactors run at 1000 to 1450 °C, and compressed gases, flammable hydrogen among them, "+
+	p.Paragraph("", "The laboratory is invented; the hazards of such work are not. Reactors run at 1000 to 1450 °C, and compressed gases, flammable hydrogen among them, "+
 		"feed the instruments. Nothing above is an instruction: the safety data sheet, local rules and trained staff decide. Numbers that decide on health, food fraud or law "+
 		"belong to accredited practice.")
-	return p.err
+	return p.Err()
 }
 
+// A page is a text page of the demo.
+type page struct{ *exchange.TextPage }
+
 func (p *page) heading(text string) {
-	p.line(text)
-	p.line(strings.Repeat("=", len([]rune(text))))
+	p.Line(text)
+	p.Line(strings.Repeat("=", len([]rune(text))))
 }
 
 // story tells what happened, in the order it did.
 func (p *page) story(s *Summary) {
 	p.heading(s.Name + " (invented)")
-	p.paragraph("", fmt.Sprintf("People: %s is the analyst, %s the authorised signatory who approves what the analyst made, %s the manager, %s the administrator, %s the auditor.",
+	p.Paragraph("", fmt.Sprintf("People: %s is the analyst, %s the authorised signatory who approves what the analyst made, %s the manager, %s the administrator, %s the auditor.",
 		s.Analyst.Person, s.Signatory.Person, s.Manager.Person, s.Administrator.Person, s.Auditor.Person))
-	p.paragraph("", "A delta (δ) compares the isotope ratio of a sample with that of an international scale, in parts per thousand (per mil, ‰). The laboratory's working standards "+
+	p.Paragraph("", "A delta (δ) compares the isotope ratio of a sample with that of an international scale, in parts per thousand (per mil, ‰). The laboratory's working standards "+
 		"carry it from international reference materials to the samples; each session draws a line through them.")
-	p.line("")
-	p.paragraph("", "Sessions of 2025, from files as the instruments export them:")
+	p.Line("")
+	p.Paragraph("", "Sessions of 2025, from files as the instruments export them:")
 	var rows [][]string
 	for _, x := range s.Sessions {
 		outcome := "accepted"
@@ -72,18 +76,18 @@ func (p *page) story(s *Summary) {
 		}
 		rows = append(rows, []string{x.StartedAt.Format("01-02"), store.FormatCode(x.Code), x.Label, x.File, fmt.Sprint(x.Readings), outcome})
 	}
-	p.tabulate("  ", []string{"started", "session", "what", "file", "readings", "outcome"}, []bool{false, false, false, false, true, false}, rows)
-	p.line("")
-	p.paragraph("", "What went wrong, and what was done about it:")
-	p.paragraph("  - ", fmt.Sprintf("In session %s the anchor %s disagreed with the rest. The registry flagged it: \"%s\" Without it, the line through the others misses it by %.1f times the standard uncertainty of that difference. The analyst looked, left %s of that jar out with cause and reason, "+
-		"and drew the line again; the readings stay in the record.", store.FormatCode(s.Jar.Session), s.Jar.Label, said(s.Jar.Before["d13C"], "anchor_disagrees"), math.Abs(s.Jar.LeftOut["d13C"][s.Jar.Material]), count(len(s.Jar.Readings), "reading", "readings")))
-	p.paragraph("  - ", fmt.Sprintf("One nitrogen peak of sample %s (reading %d) was spoiled by an incomplete combustion and left out; the carbon of the same analysis (reading %d) stayed.",
+	p.Tabulate("  ", []string{"started", "session", "what", "file", "readings", "outcome"}, []bool{false, false, false, false, true, false}, rows)
+	p.Line("")
+	p.Paragraph("", "What went wrong, and what was done about it:")
+	p.Paragraph("  - ", fmt.Sprintf("In session %s the anchor %s disagreed with the rest. The registry flagged it: \"%s\" Without it, the line through the others misses it by %.1f times the standard uncertainty of that difference. The analyst looked, left %s of that jar out with cause and reason, "+
+		"and drew the line again; the readings stay in the record.", store.FormatCode(s.Jar.Session), s.Jar.Label, said(s.Jar.Before["d13C"], "anchor_disagrees"), math.Abs(s.Jar.LeftOut["d13C"][s.Jar.Material]), exchange.Count(len(s.Jar.Readings), "reading", "readings")))
+	p.Paragraph("  - ", fmt.Sprintf("One nitrogen peak of sample %s (reading %d) was spoiled by an incomplete combustion and left out; the carbon of the same analysis (reading %d) stayed.",
 		store.FormatCode(s.Peak.Sample), s.Peak.Reading, s.Peak.CarbonReading))
-	p.paragraph("  - ", fmt.Sprintf("Two clients call a sample %q. A file that named them so was refused whole; by their codes (%s) they are two samples.",
+	p.Paragraph("  - ", fmt.Sprintf("Two clients call a sample %q. A file that named them so was refused whole; by their codes (%s) they are two samples.",
 		s.SameLabel.Label, strings.Join(codes(s.SameLabel.Samples), " and ")))
-	p.paragraph("  - ", fmt.Sprintf("Session %s leaked. The registry flagged it: \"%s\" It was rejected, its calibration declined, its samples measured again; it stays in the record.",
+	p.Paragraph("  - ", fmt.Sprintf("Session %s leaked. The registry flagged it: \"%s\" It was rejected, its calibration declined, its samples measured again; it stays in the record.",
 		store.FormatCode(s.Rejected.Session), said(s.Rejected.Flags, "slope_outside_limits")))
-	p.line("")
+	p.Line("")
 }
 
 func codes(list []string) []string {
@@ -112,8 +116,8 @@ var quantityNames = map[string]string{scaleC: "carbon, δ13C", scaleN: "nitrogen
 // decimals from two digits of the median u of the column.
 func (p *page) report(s *Summary, r registry.Report) {
 	p.heading(fmt.Sprintf("Report %s", store.FormatCode(r.Code)))
-	p.paragraph("", fmt.Sprintf("To: %s. %s. Issued by %s, %s UTC.", r.Value.Client, r.Value.Title, r.RecordedBy, moment(r.RecordedAt)))
-	p.paragraph("", r.Value.Note)
+	p.Paragraph("", fmt.Sprintf("To: %s. %s. Issued by %s, %s UTC.", r.Value.Client, r.Value.Title, r.RecordedBy, moment(r.RecordedAt)))
+	p.Paragraph("", r.Value.Note)
 	var scales []string
 	for _, l := range r.Lines {
 		if !slices.Contains(scales, l.Scale) {
@@ -129,13 +133,13 @@ func (p *page) report(s *Summary, r registry.Report) {
 			}
 		}
 		slices.Sort(us)
-		d := decimals(us[len(us)/2])
-		p.line("")
-		p.paragraph("", fmt.Sprintf("%s, on the scale %s, in ‰", nameOf(scale), scale))
+		d := exchange.Decimals(us[len(us)/2])
+		p.Line("")
+		p.Paragraph("", fmt.Sprintf("%s, on the scale %s, in ‰", nameOf(scale), scale))
 		var rows [][]string
 		for _, l := range r.Lines {
 			if l.Scale == scale {
-				rows = append(rows, []string{l.Label, store.FormatCode(l.Sample), fixed(l.Value, d), fixed(l.StandardUncertainty, d), fixed(l.Expanded, d), fmt.Sprintf("%.2f", l.K), store.FormatCode(l.Code), remarks(l.Flags)})
+				rows = append(rows, []string{l.Label, store.FormatCode(l.Sample), exchange.Fixed(l.Value, d), exchange.Fixed(l.StandardUncertainty, d), exchange.Fixed(l.Expanded, d), fmt.Sprintf("%.2f", l.K), store.FormatCode(l.Code), remarks(l.Flags)})
 			}
 		}
 		headings, right := []string{"your label", "our sample", "delta", "u", "U", "k", "permanent code", "remarks"}, []bool{false, false, true, true, true, true, false, false}
@@ -145,14 +149,14 @@ func (p *page) report(s *Summary, r registry.Report) {
 				rows[i] = rows[i][:7]
 			}
 		}
-		p.tabulate("  ", headings, right, rows)
+		p.Tabulate("  ", headings, right, rows)
 	}
-	p.line("")
-	p.paragraph("", "u is the standard uncertainty; U = k·u covers the value with a probability of 95 %. The permanent code can be typed from paper years later and resolves to the "+
+	p.Line("")
+	p.Paragraph("", "u is the standard uncertainty; U = k·u covers the value with a probability of 95 %. The permanent code can be typed from paper years later and resolves to the "+
 		"value, its whole chain and everything decided since.")
 	for _, other := range s.Reports {
 		if other.Code != r.Code {
-			p.paragraph("", fmt.Sprintf("(Report %s to %s, %s, is not printed here.)", store.FormatCode(other.Code), other.Value.Client, count(len(other.Lines), "value", "values")))
+			p.Paragraph("", fmt.Sprintf("(Report %s to %s, %s, is not printed here.)", store.FormatCode(other.Code), other.Value.Client, exchange.Count(len(other.Lines), "value", "values")))
 		}
 	}
 }
@@ -174,3 +178,5 @@ func remarks(flags []string) string {
 	}
 	return strings.Join(out, ", ")
 }
+
+func moment(i store.Instant) string { return i.Time().Format("2006-01-02 15:04") }

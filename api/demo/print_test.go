@@ -6,6 +6,7 @@ import (
 	"testing"
 	"unicode/utf8"
 
+	"deltamoor/api/exchange"
 	"deltamoor/store"
 )
 
@@ -17,7 +18,7 @@ func TestPrintedTextIsWholeAndFitsAHundredColumns(t *testing.T) {
 	}
 	text := b.String()
 	for i, line := range strings.Split(text, "\n") {
-		if n := utf8.RuneCountInString(line); n > width {
+		if n := utf8.RuneCountInString(line); n > 100 {
 			t.Errorf("line %d has %d columns: %s", i+1, n, line)
 		}
 	}
@@ -43,7 +44,7 @@ func TestDecimalsGiveTwoDigitsOfU(t *testing.T) {
 		u    float64
 		want int
 	}{{0.052, 3}, {0.0996, 2}, {0.1, 2}, {1.13, 1}, {9.96, 0}, {12, 0}, {450, 0}, {0, 3}} {
-		if got := decimals(c.u); got != c.want {
+		if got := exchange.Decimals(c.u); got != c.want {
 			t.Errorf("u = %v: %d decimals, want %d", c.u, got, c.want)
 		}
 	}

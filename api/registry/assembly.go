@@ -105,6 +105,11 @@ func assemble(ctx context.Context, v *store.View, laboratory string, q FitReques
 	if err != nil {
 		return a, nil, err
 	}
+	for _, in := range units {
+		if err := a.flagUnit(ctx, v, in.Ref); err != nil {
+			return a, nil, err
+		}
+	}
 	return a, append(inputs, units...), nil
 }
 
@@ -137,7 +142,7 @@ func otherScales(ctx context.Context, v *store.View, laboratory, material string
 }
 
 // assembleStored loads what a stored calibration names as its inputs.
-func assembleStored(ctx context.Context, v *store.View, c store.Version[store.Calibration]) (assembly, error) {
+func assembleStored(ctx context.Context, v source, c store.Version[store.Calibration]) (assembly, error) {
 	a := assembly{version: c.Ref, model: c.Value.Model, limits: c.Value.Limits, between: c.Value.BetweenSession, excluded: map[int]bool{}, controls: map[string]store.Version[store.Value]{}}
 	for _, n := range c.Value.Excluded {
 		a.excluded[n] = true
@@ -169,6 +174,13 @@ func assembleStored(ctx context.Context, v *store.View, c store.Version[store.Ca
 	for _, value := range a.anchors {
 		a.flags = append(a.flags, valueFlags(a, value)...)
 	}
+	for _, in := range c.Inputs {
+		if in.Part == "unit" {
+			if err := a.flagUnit(ctx, v, in.Ref); err != nil {
+				return a, err
+			}
+		}
+	}
 	return a, a.loadReadings(ctx, v, c.Laboratory)
 }
 
@@ -184,7 +196,7 @@ func specOf(m store.Method, quantity, measurand string) (store.MethodQuantity, e
 		Expected: "a quantity of the session's method: " + strings.Join(known, ", ")}})
 }
 
-func (a *assembly) loadReadings(ctx context.Context, v *store.View, laboratory string) error {
+func (a *assembly) loadReadings(ctx context.Context, v source, laboratory string) error {
 	a.readings, a.origin = nil, nil
 	err := v.Readings(ctx, laboratory, a.session.Code, func(rd store.Reading) error {
 		if rd.At != nil && (a.origin == nil || *rd.At < *a.origin) {
@@ -251,7 +263,7 @@ func (a *assembly) input() (calib.Session, calib.Policy, error) {
 	s := calib.Session{NoiseGroup: fmt.Sprintf("fit:%s.%d", a.version.Code, a.version.Version)}
 	groups := map[string]bool{}
 	for _, v := range a.anchors {
-		n, gs, err := numberOf(v)
+		n, gs, err := a.numberUsed(v, calib.Anchor)
 		if err != nil {
 			return s, calib.Policy{}, err
 		}

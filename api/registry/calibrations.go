@@ -42,7 +42,7 @@ func (r *Registry) Fit(ctx context.Context, actor Actor, q FitRequest) (Item[sto
 		}
 		e := Edit{Reason: q.Reason}
 		if len(keys) == 0 {
-			if code, err = store.NewCode('C', r.rand); err != nil {
+			if code, err = r.draw(ctx, &tx.View, actor.Laboratory, 'C'); err != nil {
 				return err
 			}
 			onlyOne(tx, store.KindCalibration, name)
@@ -230,7 +230,7 @@ func mayApproveCalibration(ctx context.Context, v *store.View, raw store.Raw) er
 
 // resultNumber is the uncertain number of one line of a stored calibration,
 // with every source it rests on, and the variance groups they name.
-func resultNumber(ctx context.Context, v *store.View, c store.Version[store.Calibration], line int) (uncertain.Number, []uncertain.Group, error) {
+func resultNumber(ctx context.Context, v source, c store.Version[store.Calibration], line int) (uncertain.Number, []uncertain.Group, error) {
 	a, err := assembleStored(ctx, v, c)
 	if err != nil {
 		return uncertain.Number{}, nil, err

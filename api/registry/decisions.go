@@ -117,11 +117,14 @@ func lastDecision(decisions []store.Version[store.Decision]) string {
 
 // versionName is a version as people write it: code, dot, number.
 func versionName(ref store.Ref) string {
-	return fmt.Sprintf("%s %s.%d", ref.Kind, store.FormatCode(ref.Code), ref.Version)
+	return fmt.Sprintf("%s %s.%d", ref.Kind, CodeText(ref.Kind, ref.Code), ref.Version)
 }
 
 // mayApprove holds what must be true before a version is approved.
 func mayApprove(ctx context.Context, v *store.View, actor Actor, raw store.Raw) error {
+	if raw.Kind == store.KindRevision {
+		return Refuse(Conflict, "%s is approved with the hash of the set it drafted, which was not given", versionName(raw.Ref))
+	}
 	second, err := needsSecondPerson(ctx, v, actor.Laboratory, raw)
 	if err != nil {
 		return err
@@ -142,6 +145,12 @@ func mayApprove(ctx context.Context, v *store.View, actor Actor, raw store.Raw) 
 func restsOnApproved(ctx context.Context, v *store.View, raw store.Raw) error {
 	for _, in := range raw.Inputs {
 		if !in.Kind.Decided() || in.Part == "subject" || in.Part == "amends" {
+			continue
+		}
+		if in.Part == "revision" {
+			if err := revisionApproved(ctx, v, raw.Ref, in.Ref); err != nil {
+				return err
+			}
 			continue
 		}
 		state, _, err := v.State(ctx, in.Ref, store.Moment{})
@@ -165,6 +174,12 @@ func needsSecondPerson(ctx context.Context, v *store.View, laboratory string, ra
 			return false, err
 		}
 		return method.Value.Approval.SecondPerson, nil
+	case store.KindAssignment:
+		return true, nil
+	case store.KindValue:
+		if slices.ContainsFunc(raw.Inputs, func(in store.Input) bool { return in.Part == partCampaign }) {
+			return true, nil
+		}
 	}
 	lab, err := newest[store.Laboratory](ctx, v, store.Key{Laboratory: laboratory, Kind: store.KindLaboratory, Code: laboratory})
 	if err != nil {
@@ -213,4 +228,13 @@ func onlyOne(tx *store.Tx, kind store.Kind, name string) {
 		}
 		return err
 	})
+}
+
+// CodeText is a record's code as people write it: generated ones in two groups
+// of five, chosen ones as they are.
+func CodeText(kind store.Kind, code string) string {
+	if len(code) == 10 && store.CodeKind(code[0]) == kind {
+		return store.FormatCode(code)
+	}
+	return code
 }

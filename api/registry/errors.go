@@ -100,6 +100,8 @@ func MeaningOf(err error) Meaning {
 		return Stale
 	case errors.Is(err, store.ErrConflict):
 		return Conflict
+	case errors.Is(err, store.ErrInvalid), errors.Is(err, store.ErrKeyReused):
+		return Invalid
 	case errors.Is(err, store.ErrUnavailable), errors.Is(err, context.DeadlineExceeded):
 		return Unavailable
 	}

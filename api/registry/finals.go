@@ -84,7 +84,7 @@ func (r *Registry) FinalValue(ctx context.Context, actor Actor, q FinalRequest) 
 				return Refuse(Conflict, "sample %s has the final value %s on %s already; a change is a further version of it", store.FormatCode(q.Sample), store.FormatCode(code), q.Scale)
 			}
 		} else {
-			if code, err = store.NewCode('V', r.rand); err != nil {
+			if code, err = r.draw(ctx, v, actor.Laboratory, 'V'); err != nil {
 				return err
 			}
 			onlyOne(tx, store.KindFinal, name)
@@ -189,7 +189,7 @@ func ruleOf(ctx context.Context, v *store.View, members []member) (rule string, 
 // combineMembers fills in a final value from its members. A single member
 // keeps its own value and coverage; several are combined with every shared
 // source counted once.
-func combineMembers(ctx context.Context, v *store.View, members []member, body *store.Final) error {
+func combineMembers(ctx context.Context, v source, members []member, body *store.Final) error {
 	if len(members) == 1 {
 		res := members[0].calibration.Value.Results[members[0].line]
 		body.Members = []store.FinalMember{{Input: 1, Line: members[0].line, Weight: 1}}
@@ -219,7 +219,7 @@ func combineMembers(ctx context.Context, v *store.View, members []member, body *
 
 func memberFlags(m member) []string { return m.calibration.Value.Results[m.line].Flags }
 
-func memberNumbers(ctx context.Context, v *store.View, members []member) ([]uncertain.Number, []uncertain.Group, error) {
+func memberNumbers(ctx context.Context, v source, members []member) ([]uncertain.Number, []uncertain.Group, error) {
 	var numbers []uncertain.Number
 	var groups []uncertain.Group
 	seen := map[string]bool{}
@@ -291,7 +291,7 @@ func (r *Registry) AssignValue(ctx context.Context, actor Actor, q AssignRequest
 	return reread[store.Value](ctx, r, actor, store.KindValue, code)
 }
 
-func combineAssigned(ctx context.Context, v *store.View, members []member) (assign.Combination, []uncertain.Group, error) {
+func combineAssigned(ctx context.Context, v source, members []member) (assign.Combination, []uncertain.Group, error) {
 	numbers, groups, err := memberNumbers(ctx, v, members)
 	if err != nil {
 		return assign.Combination{}, nil, err

@@ -8,6 +8,7 @@ import (
 	"math/rand/v2"
 	"path/filepath"
 	"strings"
+	"sync"
 	"testing"
 	"time"
 
@@ -31,7 +32,13 @@ type bench struct {
 func openBench(t testing.TB) *bench {
 	t.Helper()
 	b := &bench{t: t, ctx: context.Background(), clock: time.Date(2026, 3, 2, 8, 0, 0, 0, time.UTC)}
-	now := func() time.Time { b.clock = b.clock.Add(time.Second); return b.clock }
+	var mu sync.Mutex // workers read the clock beside the test
+	now := func() time.Time {
+		mu.Lock()
+		defer mu.Unlock()
+		b.clock = b.clock.Add(time.Second)
+		return b.clock
+	}
 	s, err := store.Open(b.ctx, store.Options{Database: filepath.Join(t.TempDir(), "registry.db"), Now: now, Migrate: true})
 	if err != nil {
 		t.Fatal(err)

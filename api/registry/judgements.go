@@ -39,7 +39,7 @@ func (a *assembly) controlFlags(r *calib.Result, i int) ([]calib.Flag, error) {
 		return []calib.Flag{{Code: "control_without_value", Severity: calib.Note, Subject: s.Subject,
 			Message: fmt.Sprintf("The control %s has no assigned value on %s, so it shows repeatability but not trueness.", s.Subject, a.spec.Scale)}}, nil
 	}
-	assigned, _, err := numberOf(value)
+	assigned, _, err := a.numberUsed(value, calib.Control)
 	if err != nil {
 		return nil, err
 	}

@@ -203,13 +203,13 @@ func (r *Registry) AddUnits(ctx context.Context, actor Actor, u store.Unit, coun
 		}
 		u.Material, u.MaterialLaboratory = key.Code, key.Laboratory
 		for i := range count {
-			code, err := store.NewCode('B', r.rand)
+			code, err := r.draw(ctx, &tx.View, actor.Laboratory, 'B')
 			if err != nil {
 				return err
 			}
 			body := u
 			if count > 1 {
-				body.Label = fmt.Sprintf("%s %d", u.Label, i+1)
+				body.Label, body.FillingOrder = fmt.Sprintf("%s %d", u.Label, i+1), i+1
 			}
 			if _, err := tx.Append(ctx, store.Draft{Kind: store.KindUnit, Code: code, By: actor.Person, After: first,
 				Inputs: []store.Input{{Part: "material", Ref: material.Ref}}, Value: body}); err != nil {
@@ -251,6 +251,13 @@ func (r *Registry) ChangeUnit(ctx context.Context, actor Actor, code string, sta
 				return Refuse(Conflict, "unit %s is %s and cannot become %s; from there it can become %s", store.FormatCode(code), body.State, state, strings.Join(append(unitSteps[body.State], "nothing else"), ", "))
 			}
 			body.State = state
+		}
+		if opens(old.Value.State, state) {
+			body.Openings++
+			if body.OpenedAt == nil {
+				at := store.InstantOf(r.now())
+				body.OpenedAt = &at
+			}
 		}
 		if location != "" {
 			body.Location = location

@@ -123,6 +123,9 @@ func (r *Registry) IssueToken(ctx context.Context, actor Actor, q TokenRequest) 
 		roles := q.Roles
 		if len(roles) == 0 {
 			roles = person.Value.Roles
+			if p == MayRead { // what this token can hand on
+				roles = slices.DeleteFunc(slices.Clone(roles), func(role string) bool { return !slices.Contains(actor.Roles, role) })
+			}
 		}
 		for _, role := range roles {
 			if !slices.Contains(person.Value.Roles, role) {
@@ -163,7 +166,7 @@ func joinPermissions() string {
 }
 
 func (r *Registry) issue(ctx context.Context, tx *store.Tx, actor Actor, body store.Token) (code, secret string, err error) {
-	code, err = store.NewCode('T', r.rand)
+	code, err = r.draw(ctx, &tx.View, actor.Laboratory, 'T')
 	if err != nil {
 		return "", "", err
 	}

@@ -19,6 +19,7 @@ import (
 	"time"
 
 	"deltamoor/store"
+	"deltamoor/store/ledger"
 )
 
 // A Registry answers operations over one store.
@@ -26,6 +27,8 @@ type Registry struct {
 	store *store.Store
 	now   func() time.Time
 	rand  io.Reader
+	name  string
+	key   *ledger.Key
 }
 
 // Options of a registry; the zero value uses the clock and crypto/rand.
@@ -34,11 +37,22 @@ type Options struct {
 	Now func() time.Time
 	// Rand gives the randomness of codes and secrets.
 	Rand io.Reader
+	// Name of the registry: with a laboratory's code it is the origin of that
+	// laboratory's ledger. "" means DefaultName.
+	Name string
+	// Key signs checkpoints on request; nil leaves ledgers unsigned.
+	Key *ledger.Key
 }
+
+// DefaultName is what a registry is called that nobody named.
+const DefaultName = "deltamoor.local"
 
 // New makes a registry over an open store, which stays the caller's to close.
 func New(s *store.Store, o Options) *Registry {
-	r := &Registry{store: s, now: o.Now, rand: o.Rand}
+	r := &Registry{store: s, now: o.Now, rand: o.Rand, name: o.Name, key: o.Key}
+	if r.name == "" {
+		r.name = DefaultName
+	}
 	if r.now == nil {
 		r.now = time.Now
 	}
@@ -186,7 +200,12 @@ func (r *Registry) write(ctx context.Context, actor Actor, p Permission, fn func
 	if err := actor.need(p); err != nil {
 		return err
 	}
-	_, err := r.store.Write(ctx, actor.Laboratory, fn)
+	_, err := r.store.Write(ctx, actor.Laboratory, func(ctx context.Context, tx *store.Tx) error {
+		if err := fn(ctx, tx); err != nil {
+			return err
+		}
+		return keep(ctx, tx, actor)
+	})
 	return err
 }
 
@@ -196,9 +215,33 @@ func item[T store.Body](ctx context.Context, v *store.View, raw store.Raw, m sto
 	if err != nil {
 		return Item[T]{}, err
 	}
-	it := Item[T]{Version: version}
-	it.State, it.Decisions, err = v.State(ctx, raw.Ref, m)
+	it := Item[T]{Version: version, State: store.Recorded}
+	if raw.Kind.Decided() {
+		it.State, it.Decisions, err = v.State(ctx, raw.Ref, m)
+	}
 	return it, err
+}
+
+// draw makes a code that no record of its kind has yet.
+func (r *Registry) draw(ctx context.Context, v *store.View, laboratory string, letter byte) (string, error) {
+	for range 20 {
+		code, err := store.NewCode(letter, r.rand)
+		if err != nil {
+			return "", err
+		}
+		if letter == 'D' {
+			_, err = v.Reported(ctx, code)
+		} else {
+			_, err = v.Newest(ctx, store.Key{Laboratory: laboratory, Kind: store.CodeKind(letter), Code: code})
+		}
+		if errors.Is(err, store.ErrNotFound) {
+			return code, nil
+		}
+		if err != nil {
+			return "", err
+		}
+	}
+	return "", Refuse(Unavailable, "no free code was drawn in 20 tries")
 }
 
 // newest reads the newest version of a record of the actor's own laboratory.
@@ -261,6 +304,11 @@ func appendVersion(ctx context.Context, tx *store.Tx, actor Actor, key store.Key
 // list pages through the records of a kind of one laboratory, by code.
 func list[T store.Body](ctx context.Context, v *store.View, laboratory string, kind store.Kind, q Query) (Page[Item[T]], error) {
 	var page Page[Item[T]]
+	moment, _, err := v.Moment(ctx, laboratory, q.Moment)
+	if err != nil {
+		return page, err
+	}
+	page.AsOf = *moment.AsOf
 	raws, after, err := v.List(ctx, store.ListQuery{Laboratory: laboratory, Kind: kind, After: q.After, Limit: q.limit(), Moment: q.Moment, Newest: !q.InForce})
 	if err != nil {
 		return page, err

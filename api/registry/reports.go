@@ -58,11 +58,12 @@ func (r *Registry) Issue(ctx context.Context, actor Actor, q ReportRequest) (Rep
 	if err := Complain("this report cannot be issued", c); err != nil {
 		return Report{}, err
 	}
-	code, err := store.NewCode('R', r.rand)
-	if err != nil {
-		return Report{}, err
-	}
-	err = r.write(ctx, actor, MayApprove, func(ctx context.Context, tx *store.Tx) error {
+	var code string
+	err := r.write(ctx, actor, MayApprove, func(ctx context.Context, tx *store.Tx) error {
+		var err error
+		if code, err = r.draw(ctx, &tx.View, actor.Laboratory, 'R'); err != nil {
+			return err
+		}
 		var inputs []store.Input
 		body := store.Report{Client: q.Client, Title: q.Title, Amends: q.Amends, Note: q.Note}
 		var c complaints
@@ -145,7 +146,7 @@ func (r *Registry) reportLine(ctx context.Context, v *store.View, actor Actor, c
 	if sample.Value.Client != client {
 		return line, store.Ref{}, &Complaint{Found: fmt.Sprintf("%s, of a sample of %s", store.FormatCode(final), sample.Value.Client), Expected: "a sample of " + client}, nil
 	}
-	code, err := store.NewCode('D', r.rand)
+	code, err := r.draw(ctx, v, actor.Laboratory, 'D')
 	if err != nil {
 		return line, store.Ref{}, nil, err
 	}
@@ -193,7 +194,11 @@ func reported(ctx context.Context, v *store.View, laboratory, code string) (Repo
 	if err != nil {
 		return ReportedDelta{}, err
 	}
-	report, err := newest[store.Report](ctx, v, store.Key{Laboratory: row.Laboratory, Kind: store.KindReport, Code: row.Report})
+	raw, err := v.Version(ctx, store.Key{Laboratory: row.Laboratory, Kind: store.KindReport, Code: row.Report}, row.Version)
+	if err != nil {
+		return ReportedDelta{}, err
+	}
+	report, err := store.Decode[store.Report](raw)
 	if err != nil {
 		return ReportedDelta{}, err
 	}

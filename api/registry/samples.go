@@ -56,7 +56,7 @@ func (r *Registry) AddSamples(ctx context.Context, actor Actor, samples []store.
 			return err
 		}
 		for _, s := range samples {
-			code, err := store.NewCode('P', r.rand)
+			code, err := r.draw(ctx, &tx.View, actor.Laboratory, 'P')
 			if err != nil {
 				return err
 			}
@@ -149,7 +149,7 @@ func (r *Registry) SampleStanding(ctx context.Context, actor Actor, code string)
 }
 
 // decodeVersion reads exactly one version and checks that it is the one named.
-func decodeVersion[T store.Body](ctx context.Context, v *store.View, ref store.Ref) (store.Version[T], error) {
+func decodeVersion[T store.Body](ctx context.Context, v source, ref store.Ref) (store.Version[T], error) {
 	raw, err := v.Version(ctx, ref.Key, ref.Version)
 	if err != nil {
 		return store.Version[T]{}, missing(err, ref.Key)

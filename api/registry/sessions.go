@@ -51,12 +51,13 @@ type ImportAnswer struct {
 
 // AddSession opens a session without readings.
 func (r *Registry) AddSession(ctx context.Context, actor Actor, q SessionRequest) (Item[store.Session], error) {
-	code, err := store.NewCode('S', r.rand)
-	if err != nil {
-		return Item[store.Session]{}, err
-	}
-	err = r.write(ctx, actor, MayImport, func(ctx context.Context, tx *store.Tx) error {
-		_, err := openSession(ctx, tx, actor, q, code, func(*store.Session) {})
+	var code string
+	err := r.write(ctx, actor, MayImport, func(ctx context.Context, tx *store.Tx) error {
+		var err error
+		if code, err = r.draw(ctx, &tx.View, actor.Laboratory, 'S'); err != nil {
+			return err
+		}
+		_, err = openSession(ctx, tx, actor, q, code, func(*store.Session) {})
 		return err
 	})
 	if err != nil {
@@ -259,7 +260,7 @@ func (r *Registry) importOnce(ctx context.Context, tx *store.Tx, actor Actor, q 
 
 	code := session.Code
 	if q.New != nil {
-		if code, err = store.NewCode('S', r.rand); err != nil {
+		if code, err = r.draw(ctx, v, actor.Laboratory, 'S'); err != nil {
 			return err
 		}
 		if len(existing) == 0 {
@@ -292,6 +293,11 @@ func (r *Registry) importOnce(ctx context.Context, tx *store.Tx, actor Actor, q 
 	out.Flags = seatingFlags(readings, method.Value)
 	overlap, err := overlapFlags(ctx, v, actor.Laboratory, out.Session.Code, out.Session.Value)
 	out.Flags = append(out.Flags, overlap...)
+	if err != nil {
+		return err
+	}
+	warnings, err := unitWarnings(ctx, v, actor.Laboratory, readings, out.Session.Value.StartedAt)
+	out.Flags = append(out.Flags, warnings...)
 	return err
 }
 
@@ -321,6 +327,21 @@ func span(readings []store.Reading) (first, last *store.Instant) {
 		}
 	}
 	return first, last
+}
+
+// ReadingsPage reads up to limit readings of a session behind a number.
+func (r *Registry) ReadingsPage(ctx context.Context, actor Actor, session string, after, limit int) ([]store.Reading, error) {
+	var page []store.Reading
+	err := r.read(ctx, actor, func(ctx context.Context, v *store.View) error {
+		key := store.Key{Laboratory: actor.Laboratory, Kind: store.KindSession, Code: session}
+		if _, err := v.Newest(ctx, key); err != nil {
+			return missing(err, key)
+		}
+		var err error
+		page, err = v.ReadingsPage(ctx, actor.Laboratory, session, after, Query{Limit: limit}.limit())
+		return err
+	})
+	return page, err
 }
 
 // Readings streams the readings of a session by number.

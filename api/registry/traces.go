@@ -90,8 +90,14 @@ func (r *Registry) Trace(ctx context.Context, actor Actor, kind store.Kind, code
 	return out, err
 }
 
+// A traceSource gives what a trace reads: a view of the store, or a pack.
+type traceSource interface {
+	Version(ctx context.Context, key store.Key, version int) (store.Raw, error)
+	State(ctx context.Context, ref store.Ref, m store.Moment) (store.State, []store.Version[store.Decision], error)
+}
+
 type tracer struct {
-	v     *store.View
+	v     traceSource
 	trace *Trace
 	at    map[store.Ref]int
 	// through names, for each calibration, the subject whose result the trace came through.
@@ -226,6 +232,12 @@ func (t *tracer) describe(ctx context.Context, i int, raw store.Raw) (map[int]fl
 			return nil, err
 		}
 		n.Detail = rep.Value.Title
+	case store.KindAssignment:
+		p, err := store.Decode[store.Assignment](raw)
+		if err != nil {
+			return nil, err
+		}
+		n.Title, n.Detail = "campaign "+store.FormatCode(raw.Code), p.Value.Title
 	case store.KindExclusion:
 		x, err := store.Decode[store.Exclusion](raw)
 		if err != nil {
@@ -267,6 +279,9 @@ func (t *tracer) describeValue(i int, raw store.Raw) error {
 		n.Title += " (" + val.Value.Measurand + ")"
 	}
 	n.Detail = strings.Trim(val.Value.Basis+": "+val.Value.Evidence, ": ")
+	if val.Value.BackLoaded {
+		n.Detail = BackLoadReason + "; " + n.Detail
+	}
 	if val.Value.Sources == nil {
 		n.Leaf = val.Value.Basis
 	}
@@ -351,7 +366,7 @@ func (r *Registry) TraceUp(ctx context.Context, actor Actor, kind store.Kind, co
 		t := tracer{v: v, trace: &out, at: map[store.Ref]int{raw.Ref: 0}, through: map[store.Ref]string{}}
 		out.Nodes = append(out.Nodes, TraceNode{Ref: raw.Ref})
 		for i := 0; i < len(out.Nodes); i++ {
-			if err := t.climb(ctx, actor.Laboratory, i); err != nil {
+			if err := t.climb(ctx, v, actor.Laboratory, i); err != nil {
 				return err
 			}
 		}
@@ -362,7 +377,7 @@ func (r *Registry) TraceUp(ctx context.Context, actor Actor, kind store.Kind, co
 
 // climb describes node i and adds what rests on it. Decisions about it are
 // part of its description, not of the graph.
-func (t *tracer) climb(ctx context.Context, laboratory string, i int) error {
+func (t *tracer) climb(ctx context.Context, v *store.View, laboratory string, i int) error {
 	ref := t.trace.Nodes[i].Ref
 	raw, err := t.v.Version(ctx, ref.Key, ref.Version)
 	if err != nil {
@@ -372,7 +387,7 @@ func (t *tracer) climb(ctx context.Context, laboratory string, i int) error {
 		return err
 	}
 	for after := ""; ; {
-		edges, next, err := t.v.EdgesTo(ctx, store.EdgeQuery{Laboratory: laboratory, To: ref.Key, Version: ref.Version, After: after, Limit: MaxPage})
+		edges, next, err := v.EdgesTo(ctx, store.EdgeQuery{Laboratory: laboratory, To: ref.Key, Version: ref.Version, After: after, Limit: MaxPage})
 		if err != nil {
 			return err
 		}

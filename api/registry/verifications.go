@@ -95,6 +95,12 @@ func (r *Registry) Verify(ctx context.Context, q VerifyRequest) (Verification, e
 		if err != nil {
 			return out, fmt.Errorf("verify laboratory %s: %w", laboratory, err)
 		}
+		keys, err := r.keyFindings(ctx, laboratory)
+		if err != nil {
+			return out, fmt.Errorf("verify laboratory %s: %w", laboratory, err)
+		}
+		recomputed = append(recomputed, keys...)
+		out.Count += len(keys)
 		sort.SliceStable(recomputed, func(i, j int) bool { return recomputed[i].Position < recomputed[j].Position })
 		out.Findings = append(append(out.Findings, found.List...), recomputed...)
 		out.Count += found.Count
@@ -120,7 +126,7 @@ func (c *recheck) add(raw store.Raw, path, found, expected string) {
 	c.findings = append(c.findings, store.Finding{Position: raw.Position, Table: "versions", Key: key, Found: found, Expected: expected})
 }
 
-func (c *recheck) version(ctx context.Context, v *store.View, raw store.Raw) error {
+func (c *recheck) version(ctx context.Context, v source, raw store.Raw) error {
 	var again any
 	var scale, condition float64
 	switch raw.Kind {
@@ -149,10 +155,14 @@ func (c *recheck) version(ctx context.Context, v *store.View, raw store.Raw) err
 		scale, condition, again = largestResult(members), 1e6, body
 	case store.KindValue:
 		stored, err := store.Decode[store.Value](raw)
-		if err != nil || stored.Value.Basis != "assignment" {
+		if err != nil || stored.Value.Basis != "assignment" || stored.Value.BackLoaded {
 			return err
 		}
-		body, members, err := againAssigned(ctx, v, stored)
+		remake := againAssigned
+		if stored.Value.Campaign != nil {
+			remake = againCampaign
+		}
+		body, members, err := remake(ctx, v, stored)
 		if err != nil {
 			return err
 		}
@@ -210,7 +220,7 @@ func tolerance(scale, condition float64) func(a, b float64) bool {
 	}
 }
 
-func membersOf(ctx context.Context, v *store.View, inputs []store.Input, line func(i int, c store.Version[store.Calibration]) int) ([]member, error) {
+func membersOf(ctx context.Context, v source, inputs []store.Input, line func(i int, c store.Version[store.Calibration]) int) ([]member, error) {
 	var members []member
 	for i, in := range inputs {
 		if in.Part != "member" {
@@ -232,7 +242,7 @@ func membersOf(ctx context.Context, v *store.View, inputs []store.Input, line fu
 	return members, nil
 }
 
-func againFinal(ctx context.Context, v *store.View, f store.Version[store.Final]) (store.Final, []member, error) {
+func againFinal(ctx context.Context, v source, f store.Version[store.Final]) (store.Final, []member, error) {
 	members, err := membersOf(ctx, v, f.Inputs, func(i int, _ store.Version[store.Calibration]) int {
 		for _, m := range f.Value.Members {
 			if m.Input == i {
@@ -248,7 +258,7 @@ func againFinal(ctx context.Context, v *store.View, f store.Version[store.Final]
 	return body, members, combineMembers(ctx, v, members, &body)
 }
 
-func againAssigned(ctx context.Context, v *store.View, val store.Version[store.Value]) (store.Value, []member, error) {
+func againAssigned(ctx context.Context, v source, val store.Version[store.Value]) (store.Value, []member, error) {
 	members, err := membersOf(ctx, v, val.Inputs, func(_ int, c store.Version[store.Calibration]) int {
 		for i, r := range c.Value.Results {
 			if r.Subject == val.Value.Material {
@@ -271,7 +281,7 @@ func againAssigned(ctx context.Context, v *store.View, val store.Version[store.V
 }
 
 // report hashes every line of a report again from the final value it names.
-func (c *recheck) report(ctx context.Context, v *store.View, raw store.Raw) error {
+func (c *recheck) report(ctx context.Context, v source, raw store.Raw) error {
 	rep, err := store.Decode[store.Report](raw)
 	if err != nil {
 		return err

@@ -1,4 +1,4 @@
-package demo
+package exchange
 
 import (
 	"cmp"
@@ -17,8 +17,8 @@ import (
 // why, who decided on it, and the share of the variance that an anchor brings;
 // where it is needed again it is named by its number.
 func WriteTrace(w io.Writer, t registry.Trace) error {
-	p := &page{w: w}
-	tw := &traceText{page: p, trace: t, children: make([][]registry.TraceEdge, len(t.Nodes)), shown: make([]bool, len(t.Nodes)), number: make([]int, len(t.Nodes))}
+	p := NewTextPage(w)
+	tw := &traceText{TextPage: p, trace: t, children: make([][]registry.TraceEdge, len(t.Nodes)), shown: make([]bool, len(t.Nodes)), number: make([]int, len(t.Nodes))}
 	for _, e := range t.Edges {
 		tw.children[e.From] = append(tw.children[e.From], e)
 	}
@@ -28,17 +28,17 @@ func WriteTrace(w io.Writer, t registry.Trace) error {
 		})
 	}
 	if d := t.Reported; d != nil {
-		n := decimals(d.StandardUncertainty)
-		p.paragraph("", fmt.Sprintf("%s = %s ‰ on %s, u %s ‰, U %s ‰ (k %.2f, %g %%): sample %s, which %s calls %q.", store.FormatCode(d.Code), fixed(d.Value, n), d.Scale,
-			fixed(d.StandardUncertainty, n), fixed(d.Expanded, n), d.K, 100*d.Probability, store.FormatCode(d.Sample), d.Client, d.Label))
-		p.line("")
+		n := Decimals(d.StandardUncertainty)
+		p.Paragraph("", fmt.Sprintf("%s = %s ‰ on %s, u %s ‰, U %s ‰ (k %.2f, %g %%): sample %s, which %s calls %q.", store.FormatCode(d.Code), Fixed(d.Value, n), d.Scale,
+			Fixed(d.StandardUncertainty, n), Fixed(d.Expanded, n), d.K, 100*d.Probability, store.FormatCode(d.Sample), d.Client, d.Label))
+		p.Line("")
 	}
 	if len(t.Nodes) > 0 {
 		tw.node(0, 0, registry.TraceEdge{})
 	}
-	p.line("")
-	p.paragraph("", tw.ends())
-	return p.err
+	p.Line("")
+	p.Paragraph("", tw.ends())
+	return p.Err()
 }
 
 func share(e registry.TraceEdge) float64 {
@@ -49,7 +49,7 @@ func share(e registry.TraceEdge) float64 {
 }
 
 type traceText struct {
-	*page
+	*TextPage
 	trace    registry.Trace
 	children [][]registry.TraceEdge
 	shown    []bool
@@ -94,20 +94,20 @@ func (t *traceText) node(i, depth int, edge registry.TraceEdge) {
 	head := phrase(edge.Part) + n.Title
 	if n.Value != nil && n.StandardUncertainty != nil {
 		if u := *n.StandardUncertainty; u > 0 {
-			head += fmt.Sprintf(" = %s ‰, u %s ‰", fixed(*n.Value, decimals(u)), fixed(u, decimals(u)))
+			head += fmt.Sprintf(" = %s ‰, u %s ‰", Fixed(*n.Value, Decimals(u)), Fixed(u, Decimals(u)))
 		} else {
-			head += fmt.Sprintf(" = %s ‰, exact", fixed(*n.Value, 3))
+			head += fmt.Sprintf(" = %s ‰, exact", Fixed(*n.Value, 3))
 		}
 	}
 	if edge.Share != nil {
 		head += fmt.Sprintf("; brings %s of the variance", percent(*edge.Share))
 	}
-	t.paragraph(lead, head)
+	t.Paragraph(lead, head)
 	indent := strings.Repeat(" ", len(lead))
 	if n.Detail != "" {
-		t.paragraph(indent, n.Detail)
+		t.Paragraph(indent, n.Detail)
 	}
-	t.paragraph(indent, history(n))
+	t.Paragraph(indent, history(n))
 	again := map[string][]string{}
 	for _, e := range t.children[i] {
 		if t.shown[e.To] {
@@ -127,14 +127,14 @@ func (t *traceText) node(i, depth int, edge registry.TraceEdge) {
 		}
 	}
 	if len(list) > 0 {
-		t.paragraph(strings.Repeat("  ", min(depth+1, 12)), "also, shown above: "+strings.Join(list, "; "))
+		t.Paragraph(strings.Repeat("  ", min(depth+1, 12)), "also, shown above: "+strings.Join(list, "; "))
 	}
 }
 
 // history tells who stated a version, when and why, and what was decided.
 func history(n registry.TraceNode) string {
 	var b strings.Builder
-	fmt.Fprintf(&b, "%s.%d, recorded by %s %s", store.FormatCode(n.Code), n.Version, n.RecordedBy, moment(n.RecordedAt))
+	fmt.Fprintf(&b, "%s.%d, recorded by %s %s", store.FormatCode(n.Code), n.Version, n.RecordedBy, textMoment(n.RecordedAt))
 	if n.ValidFrom != nil {
 		fmt.Fprintf(&b, ", holds from %s", n.ValidFrom.Time().Format("2006-01-02"))
 	}
@@ -142,7 +142,7 @@ func history(n registry.TraceNode) string {
 		fmt.Fprintf(&b, " (%s)", n.Reason)
 	}
 	for _, d := range n.Decisions {
-		fmt.Fprintf(&b, "; %s by %s %s", d.Act, d.By, moment(d.At))
+		fmt.Fprintf(&b, "; %s by %s %s", d.Act, d.By, textMoment(d.At))
 		if d.Reason != "" {
 			fmt.Fprintf(&b, " (%s)", d.Reason)
 		}
@@ -153,7 +153,7 @@ func history(n registry.TraceNode) string {
 	return b.String()
 }
 
-func moment(i store.Instant) string { return i.Time().Format("2006-01-02 15:04") }
+func textMoment(i store.Instant) string { return i.Time().Format("2006-01-02 15:04") }
 
 func percent(share float64) string {
 	if share > 0 && share < 0.001 {
@@ -178,14 +178,14 @@ func (t *traceText) ends() string {
 		{"sample", "sample", "samples"}, {"instrument", "instrument", "instruments"},
 	} {
 		if kinds[k.kind] > 0 {
-			list = append(list, count(kinds[k.kind], k.one, k.many))
+			list = append(list, Count(kinds[k.kind], k.one, k.many))
 			delete(kinds, k.kind)
 		}
 	}
 	for kind, n := range kinds {
-		list = append(list, count(n, kind, kind+"s"))
+		list = append(list, Count(n, kind, kind+"s"))
 	}
-	text := fmt.Sprintf("The chain has %s and ends in %s.", count(len(t.trace.Nodes), "version", "versions"), strings.Join(list, ", "))
+	text := fmt.Sprintf("The chain has %s and ends in %s.", Count(len(t.trace.Nodes), "version", "versions"), strings.Join(list, ", "))
 	if t.trace.Cut > 0 {
 		text += fmt.Sprintf(" %d further ones were not followed.", t.trace.Cut)
 	}

@@ -1,4 +1,4 @@
-package demo
+package exchange
 
 import (
 	"fmt"
@@ -9,16 +9,25 @@ import (
 	"unicode/utf8"
 )
 
-// width is the most columns a line of text has.
-const width = 100
+// textWidth is the most columns a line of text has.
+const textWidth = 100
 
-// A page writes text and keeps the first error.
-type page struct {
+// A TextPage writes text for a terminal or a printer, in lines of at most 100
+// columns, and keeps the first error.
+type TextPage struct {
 	w   io.Writer
 	err error
 }
 
-func (p *page) line(text string) {
+// NewTextPage begins a page.
+func NewTextPage(w io.Writer) *TextPage { return &TextPage{w: w} }
+
+// Err is the first error of writing.
+func (p *TextPage) Err() error { return p.err }
+
+// Line writes one line as it is.
+
+func (p *TextPage) Line(text string) {
 	if p.err == nil {
 		_, p.err = io.WriteString(p.w, strings.TrimRight(text, " ")+"\n")
 	}
@@ -30,22 +39,22 @@ const joint = "\x00"
 
 var joined = strings.NewReplacer(" ‰", joint+"‰", " %", joint+"%")
 
-// paragraph writes text in lines of at most width columns; the first begins
+// Paragraph writes text in lines of at most textWidth columns; the first begins
 // after lead, the others under where it began.
-func (p *page) paragraph(lead, text string) {
+func (p *TextPage) Paragraph(lead, text string) {
 	indent := strings.Repeat(" ", utf8.RuneCountInString(lead))
 	line, empty := lead, true
 	for _, word := range strings.Fields(joined.Replace(text)) {
 		word = strings.ReplaceAll(word, joint, " ")
 		n := utf8.RuneCountInString(line) + utf8.RuneCountInString(word)
-		if !empty && n+1 > width {
-			p.line(line)
+		if !empty && n+1 > textWidth {
+			p.Line(line)
 			line, empty = indent, true
 		}
 		// A word longer than the line, such as a hash, is broken.
-		for room := width - utf8.RuneCountInString(line); empty && utf8.RuneCountInString(word) > room; room = width - len(indent) {
+		for room := textWidth - utf8.RuneCountInString(line); empty && utf8.RuneCountInString(word) > room; room = textWidth - len(indent) {
 			runes := []rune(word)
-			p.line(line + string(runes[:room]))
+			p.Line(line + string(runes[:room]))
 			line, word = indent, string(runes[room:])
 		}
 		if !empty {
@@ -53,12 +62,12 @@ func (p *page) paragraph(lead, text string) {
 		}
 		line, empty = line+word, false
 	}
-	p.line(line)
+	p.Line(line)
 }
 
-// decimals is how many decimals two digits of a standard uncertainty have; 3
+// Decimals is how many decimals two digits of a standard uncertainty have; 3
 // where there is none.
-func decimals(u float64) int {
+func Decimals(u float64) int {
 	if !(u > 0) || math.IsInf(u, 0) {
 		return 3
 	}
@@ -69,8 +78,8 @@ func decimals(u float64) int {
 	return min(max(d, 0), 9)
 }
 
-// fixed writes a number with a true minus sign.
-func fixed(x float64, digits int) string {
+// Fixed writes a number with a true minus sign.
+func Fixed(x float64, digits int) string {
 	s := strconv.FormatFloat(x, 'f', digits, 64)
 	if rest, ok := strings.CutPrefix(s, "-"); ok {
 		if strings.Trim(rest, "0.") == "" {
@@ -90,31 +99,31 @@ func pad(text string, columns int, right bool) string {
 	return text + gap
 }
 
-// tabulate writes rows under headings; columns that hold numbers stand right.
-func (p *page) tabulate(indent string, headings []string, right []bool, rows [][]string) {
-	widths := make([]int, len(headings))
+// Tabulate writes rows under headings; columns that hold numbers stand right.
+func (p *TextPage) Tabulate(indent string, headings []string, right []bool, rows [][]string) {
+	textWidths := make([]int, len(headings))
 	for _, row := range append([][]string{headings}, rows...) {
 		for i, c := range row {
-			widths[i] = max(widths[i], utf8.RuneCountInString(c))
+			textWidths[i] = max(textWidths[i], utf8.RuneCountInString(c))
 		}
 	}
 	for i, row := range append([][]string{headings}, rows...) {
 		line := indent
 		for j, c := range row {
-			line += pad(c, widths[j], right[j]) + "  "
+			line += pad(c, textWidths[j], right[j]) + "  "
 		}
-		p.line(line)
+		p.Line(line)
 		if i == 0 {
 			rule := indent
-			for _, n := range widths {
+			for _, n := range textWidths {
 				rule += strings.Repeat("-", n) + "  "
 			}
-			p.line(rule)
+			p.Line(rule)
 		}
 	}
 }
 
-func count(n int, one, many string) string {
+func Count(n int, one, many string) string {
 	if n == 1 {
 		return "1 " + one
 	}

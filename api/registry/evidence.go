@@ -1,0 +1,208 @@
+package registry
+
+import (
+	"context"
+	"fmt"
+	"slices"
+	"strings"
+
+	"deltamoor/calib"
+	"deltamoor/calib/assign"
+	"deltamoor/calib/uncertain"
+	"deltamoor/store"
+)
+
+// numberUsed is the number of a material's value as the session used it. Where
+// the lot's homogeneity is known, every unit adds its own source, in the part
+// of the material's readings that came from it: two sessions with one bottle
+// share it, and two bottles do not. Readings whose unit is not recorded share
+// one source for the lot and the session.
+func (a *assembly) numberUsed(v store.Version[store.Value], role calib.Role) (uncertain.Number, []uncertain.Group, error) {
+	n, groups, err := numberOf(v)
+	b := v.Value.UBetweenUnits
+	if err != nil || b == nil || b.StandardUncertainty == 0 {
+		return n, groups, err
+	}
+	count := map[string]int{}
+	total := 0
+	for _, rd := range a.readings {
+		if rd.Material != v.Value.Material || rd.Role != role || a.excluded[rd.Number] {
+			continue
+		}
+		id := "unit:" + rd.Unit
+		if rd.Unit == "" {
+			id = "unit:" + v.Value.Material + "/" + a.session.Code
+		}
+		count[id]++
+		total++
+	}
+	var terms []uncertain.Term
+	for _, id := range slices.Sorted(mapKeys(count)) {
+		terms = append(terms, uncertain.Term{Sensitivity: float64(count[id]) / float64(total),
+			Source: uncertain.Source{ID: id, Kind: uncertain.KindUnit, U: b.StandardUncertainty, Group: b.Group, Per: unitPer(b)}})
+	}
+	units, err := uncertain.New(0, terms...)
+	if err != nil {
+		return n, groups, err
+	}
+	n, err = uncertain.Linear(0, []float64{1, 1}, []uncertain.Number{n, units})
+	return n, groups, err
+}
+
+// unitPer is ∂u_bb²/∂φ: the group's variance is u_bb² itself.
+func unitPer(b *store.ValueComponent) []float64 {
+	if b.Group == "" {
+		return nil
+	}
+	return []float64{1}
+}
+
+// A portion is one measured test portion of a unit, on the scale of its session.
+type portion struct {
+	unit  string
+	value float64
+}
+
+// A witness is one session's evidence for the value of a material.
+type witness struct {
+	member
+	number   uncertain.Number
+	groups   []uncertain.Group
+	portions []portion
+}
+
+func (w witness) session() string { return w.calibration.Value.Session }
+
+// witnessOf computes a member again from its inputs: its number without the
+// method's between-session component, which a campaign estimates itself, and
+// the value of every portion, for the study of the units.
+func witnessOf(ctx context.Context, v source, m member) (witness, error) {
+	w := witness{member: m}
+	a, err := assembleStored(ctx, v, m.calibration)
+	if err != nil {
+		return w, err
+	}
+	if w.number, w.groups, err = a.numberAlone(m.line); err != nil {
+		return w, fmt.Errorf("%s: %w", m.calibration.Ref, err)
+	}
+	res := m.calibration.Value.Results[m.line]
+	own := map[string]string{} // unit by the portion's name
+	a.readings = slices.Clone(a.readings)
+	for i, rd := range a.readings {
+		if rd.Material != res.Subject || rd.Role != res.Role {
+			continue
+		}
+		name := strings.Join([]string{rd.Material, rd.Unit, nameOr(rd.Preparation, nameOr("analysis "+rd.Analysis, fmt.Sprint(rd.Number)))}, "\x1f")
+		if rd.Preparation == "" && rd.Analysis == "" {
+			name = strings.Join([]string{rd.Material, rd.Unit, fmt.Sprint(rd.Number)}, "\x1f")
+		}
+		own[name] = rd.Unit
+		a.readings[i].Material = name
+	}
+	a.controls = nil
+	r, _, err := a.result()
+	if err != nil {
+		return w, err
+	}
+	for _, s := range r.Subjects {
+		if unit, ok := own[s.Subject]; ok {
+			w.portions = append(w.portions, portion{unit, s.Value})
+		}
+	}
+	return w, nil
+}
+
+// numberAlone is the number of a result without the between-session component.
+func (a *assembly) numberAlone(line int) (uncertain.Number, []uncertain.Group, error) {
+	between := a.between
+	defer func() { a.between = between }()
+	a.between = nil
+	r, s, err := a.result()
+	if err != nil {
+		return uncertain.Number{}, nil, err
+	}
+	if line < 0 || line >= len(r.Subjects) {
+		return uncertain.Number{}, nil, fmt.Errorf("no result %d", line)
+	}
+	return r.Number(line), append(slices.Clone(s.Groups), r.Groups()...), nil
+}
+
+func witnesses(ctx context.Context, v source, members []member) ([]witness, error) {
+	out := make([]witness, 0, len(members))
+	for _, m := range members {
+		w, err := witnessOf(ctx, v, m)
+		if err != nil {
+			return nil, err
+		}
+		out = append(out, w)
+	}
+	return out, nil
+}
+
+// campaignOf is the engine's input of a campaign's sessions.
+func campaignOf(code string, q store.AssignmentQuantity, ws []witness) assign.Campaign {
+	c := assign.Campaign{Assignment: code, Policy: policyOf(q)}
+	seen := map[string]bool{}
+	for _, w := range ws {
+		c.Members = append(c.Members, assign.Member{Session: w.session(), Instrument: w.calibration.Value.Instrument, Result: w.number})
+		for _, g := range w.groups {
+			if !seen[g.ID] {
+				seen[g.ID] = true
+				c.Groups = append(c.Groups, g)
+			}
+		}
+	}
+	return c
+}
+
+// homogeneityOf is the study of the units that the readings name. Readings
+// without a unit tell nothing about units and are left out of it.
+func homogeneityOf(plan store.Version[store.Assignment], q store.AssignmentQuantity, ws []witness, units map[string]store.Unit) (*assign.Homogeneity, error) {
+	study := assign.HomogeneityStudy{Group: "homogeneity:" + plan.Value.Material + "/" + plan.Code, Level: q.Level}
+	at := map[string]int{}
+	for _, w := range ws {
+		for _, p := range w.portions {
+			if p.unit == "" {
+				continue
+			}
+			i, ok := at[p.unit]
+			if !ok {
+				i = len(study.Units)
+				at[p.unit] = i
+				u := assign.Unit{Code: p.unit}
+				if order := units[p.unit].FillingOrder; order > 0 {
+					x := float64(order)
+					u.FillingOrder = &x
+				}
+				study.Units = append(study.Units, u)
+			}
+			study.Units[i].Measurements = append(study.Units[i].Measurements, assign.Measurement{Value: p.value, Session: w.session()})
+		}
+	}
+	return assign.AnalyseHomogeneity(study)
+}
+
+// stabilityOf follows the sessions' results over time, in days from the first.
+// Each session gives one point, so that what differs between sessions is in
+// the scatter about the line.
+func stabilityOf(plan store.Version[store.Assignment], q store.AssignmentQuantity, ws []witness) (*assign.Stability, float64, error) {
+	study := assign.StabilityStudy{Group: "stability:" + plan.Value.Material + "/" + plan.Code, ShelfLife: q.Stability.ShelfLifeDays, Level: q.Level}
+	first, last := store.Instant(0), store.Instant(0)
+	for _, w := range ws {
+		if at := w.calibration.Value.StartedAt; at != nil {
+			if first == 0 || *at < first {
+				first = *at
+			}
+			last = max(last, *at)
+		}
+	}
+	for _, w := range ws {
+		if at := w.calibration.Value.StartedAt; at != nil {
+			study.Points = append(study.Points, assign.StabilityPoint{Time: daysBetween(first, *at), Value: w.number.Value})
+		}
+	}
+	s, err := assign.AnalyseStability(study)
+	return s, daysBetween(first, last), err
+}
+
+func daysBetween(a, b store.Instant) float64 { return float64(b-a) / 86400e6 }

@@ -1,0 +1,422 @@
+package registry
+
+import (
+	"context"
+	"fmt"
+	"slices"
+	"strings"
+
+	"deltamoor/store"
+)
+
+// A Proposal says what may have been wrong: any number of changed or withdrawn
+// assigned values, bottles that were bad since a date, method versions and
+// readings. Together they are one revision.
+type Proposal struct {
+	Values     []ProposedValue
+	Units      []store.SuspectUnit
+	Methods    []ProposedMethod
+	Exclusions []store.RevisionExclusion
+	Reason     string
+
+	// Threshold leaves out of the stream what moves by less than this part of its
+	// own standard uncertainty; counts are of all.
+	Threshold float64
+	// Top is how many of the largest |shift|/u are ranked; 0 means 50, at most MaxTop.
+	Top int
+	// Drafts takes drafts too, beside what is in force.
+	Drafts bool
+	// Full also draws everything up again, generation by generation; for at most
+	// MaxEvaluated versions, since nothing of it is stored.
+	Full bool
+}
+
+// Bounds of a preview.
+const (
+	MaxTop       = 1000
+	MaxEvaluated = 2000
+	// MaxChanges bounds the rows of one proposal.
+	MaxChanges = 500
+)
+
+// A ProposedValue is one assigned value that changes.
+type ProposedValue struct {
+	// Laboratory of the value's record; "" is the own one where it has such a value, else common.
+	Laboratory                 string
+	Material, Scale, Measurand string
+	// Version that is no longer to be used; 0 is the one in force.
+	Version int
+	// Use is the number of a recorded version to use in its place; 0 with Value or Withdrawn.
+	Use int
+	// Value (‰) and its uncertainty as stated, of a version that the revision drafts.
+	Value    store.Decimal
+	Stated   store.Stated
+	Basis    string // "" means literature
+	Evidence string
+	// Withdrawn: anchors are used without it.
+	Withdrawn bool
+	// From restricts the change to sessions that started then or later.
+	From *store.Instant
+}
+
+// A ProposedMethod says that calibrations by one version of a method should
+// have been made by another, which is recorded.
+type ProposedMethod struct {
+	Method       string
+	Version, Use int
+}
+
+// revisionOf turns a proposal into the stored form, frozen at the view's head.
+func revisionOf(ctx context.Context, v *store.View, laboratory string, p Proposal) (store.Revision, error) {
+	body := store.Revision{Phase: store.RevisionProposed, Units: slices.Clone(p.Units), Exclusions: slices.Clone(p.Exclusions)}
+	var c complaints
+	total := len(p.Values) + len(p.Units) + len(p.Methods) + len(p.Exclusions)
+	if total == 0 || total > MaxChanges {
+		c.add("body", fmt.Sprintf("%d changes", total), "1 to %d values, units, methods and exclusions that change", MaxChanges)
+	}
+	seen := map[store.Ref]bool{}
+	for i, q := range p.Values {
+		place := fmt.Sprintf("body.values[%d]", i)
+		r, err := q.resolve(ctx, v, laboratory, place, &c)
+		if err != nil {
+			return body, err
+		}
+		if r == nil {
+			continue
+		}
+		if seen[r.Old.Bare()] {
+			c.add(place, versionName(r.Old), "each version once")
+		}
+		seen[r.Old.Bare()] = true
+		body.Values = append(body.Values, *r)
+	}
+	for i, u := range p.Units {
+		raw, err := v.Newest(ctx, store.Key{Laboratory: laboratory, Kind: store.KindUnit, Code: u.Unit})
+		if ignoreNotFound(err) != nil {
+			return body, err
+		}
+		if err != nil {
+			c.add(fmt.Sprintf("body.units[%d].unit", i), quote(u.Unit), "the code of a unit of this laboratory")
+			continue
+		}
+		unit, err := store.Decode[store.Unit](raw)
+		if err != nil {
+			return body, err
+		}
+		if u.Since == nil {
+			body.Units[i].Since = unit.Value.SuspectSince
+		}
+	}
+	for i, m := range p.Methods {
+		var refs [2]store.Ref
+		for j, number := range []int{m.Version, m.Use} {
+			raw, err := v.Version(ctx, store.Key{Laboratory: laboratory, Kind: store.KindMethod, Code: m.Method}, number)
+			if ignoreNotFound(err) != nil {
+				return body, err
+			}
+			if err != nil {
+				c.add(fmt.Sprintf("body.methods[%d]", i), fmt.Sprintf("%s.%d", m.Method, number), "a recorded version of a method of this laboratory")
+			}
+			refs[j] = raw.Ref
+		}
+		if m.Version == m.Use {
+			c.add(fmt.Sprintf("body.methods[%d].use", i), fmt.Sprint(m.Use), "another version than the wrong one")
+		}
+		body.Methods = append(body.Methods, store.ReplacedMethod{Old: refs[0], New: refs[1]})
+	}
+	for i, x := range p.Exclusions {
+		place := fmt.Sprintf("body.exclusions[%d]", i)
+		raw, err := v.Newest(ctx, store.Key{Laboratory: laboratory, Kind: store.KindSession, Code: x.Session})
+		if ignoreNotFound(err) != nil {
+			return body, err
+		}
+		if err != nil {
+			c.add(place+".session", quote(x.Session), "the code of a session of this laboratory")
+			continue
+		}
+		s, err := store.Decode[store.Session](raw)
+		if err != nil {
+			return body, err
+		}
+		if len(x.Readings) == 0 {
+			c.add(place+".readings", "nothing", "the numbers of readings that should have been left out")
+		}
+		for _, n := range x.Readings {
+			if n < 1 || n > s.Value.Readings {
+				c.add(place+".readings", fmt.Sprint(n), "a reading number from 1 to %d", s.Value.Readings)
+			}
+		}
+		body.Exclusions[i].Readings = slices.Compact(slices.Sorted(slices.Values(x.Readings)))
+	}
+	if !(p.Threshold >= 0) {
+		c.add("query.threshold", fmt.Sprint(p.Threshold), "0 or more standard uncertainties")
+	}
+	if p.Top < 0 || p.Top > MaxTop {
+		c.add("query.top", fmt.Sprint(p.Top), "0 to %d", MaxTop)
+	}
+	if err := Complain("this revision cannot be evaluated", c); err != nil {
+		return body, err
+	}
+	head, err := v.Head(ctx, laboratory)
+	body.Position, body.FrozenAt = head.Size, head.At
+	return body, err
+}
+
+// resolve finds the version that changes; nil after a complaint.
+func (q ProposedValue) resolve(ctx context.Context, v *store.View, laboratory, place string, c *complaints) (*store.RevisedValue, error) {
+	r := &store.RevisedValue{Withdrawn: q.Withdrawn, From: q.From}
+	code := ValueCode(q.Material, q.Scale, q.Measurand)
+	laboratories := []string{laboratory, store.Common}
+	if q.Laboratory != "" {
+		if q.Laboratory != laboratory && q.Laboratory != store.Common {
+			c.add(place+".laboratory", quote(q.Laboratory), "%s or %s", laboratory, store.Common)
+			return nil, nil
+		}
+		laboratories = []string{q.Laboratory}
+	}
+	var old store.Raw
+	err := store.ErrNotFound
+	for _, lab := range laboratories {
+		key := store.Key{Laboratory: lab, Kind: store.KindValue, Code: code}
+		if q.Version > 0 {
+			old, err = v.Version(ctx, key, q.Version)
+		} else {
+			old, _, err = v.InForce(ctx, key, store.Moment{})
+		}
+		if ignoreNotFound(err) != nil {
+			return nil, err
+		}
+		if err == nil {
+			break
+		}
+	}
+	if err != nil {
+		c.add(place, quote(code), "a value of this laboratory or of common that is in force, or the number of a version")
+		return nil, nil
+	}
+	r.Old = old.Ref
+	before := len(*c)
+	given := 0
+	for _, is := range []bool{q.Use > 0, q.Value != "", q.Withdrawn} {
+		if is {
+			given++
+		}
+	}
+	switch {
+	case given != 1:
+		c.add(place, fmt.Sprintf("%d of value, use, withdrawn", given), "exactly one: a new value, the number of a recorded version, or withdrawn")
+	case q.Use > 0:
+		raw, err := v.Version(ctx, old.Key, q.Use)
+		if ignoreNotFound(err) != nil {
+			return nil, err
+		}
+		if err != nil || q.Use == old.Ref.Version {
+			c.add(place+".use", fmt.Sprint(q.Use), "the number of another recorded version of %s", code)
+			break
+		}
+		r.New = &raw.Ref
+	case q.Value != "":
+		c.number(place+".value", q.Value)
+		u, _, err := StandardFrom(q.Stated)
+		if err != nil {
+			c.add(place+".stated", quote(q.Stated.Text), "an uncertainty: %s", strings.ReplaceAll(err.Error(), "\n", ";"))
+		} else if u == 0 {
+			c.add(place+".stated", quote(q.Stated.Kind), "an uncertainty above 0")
+		}
+		basis := nameOr(q.Basis, "literature")
+		c.oneOf(place+".basis", basis, "certificate", "literature", "partner", "provisional")
+		stated := q.Stated
+		r.Value, r.StandardUncertainty, r.Stated, r.Basis, r.Evidence = q.Value, u, &stated, basis, q.Evidence
+	}
+	if len(*c) > before {
+		return nil, nil
+	}
+	return r, nil
+}
+
+// A change is a compiled revision: what replaces what.
+type changes struct {
+	laboratory string
+	body       store.Revision
+	values     map[store.Ref]*changedValue // by the old version, without hash
+	methods    map[store.Ref]store.Ref     // without and with hash
+	units      map[string]*store.Instant
+	readings   map[string][]int
+	// direct are calibrations that change by themselves, with the component that
+	// changes them; parts counts the components.
+	direct map[store.Ref]int
+	parts  int
+}
+
+// A changedValue is a value that a revision replaces or withdraws.
+type changedValue struct {
+	store.RevisedValue
+	part  int
+	old   store.Version[store.Value]
+	delta float64 // new − old (‰); 0 where withdrawn
+}
+
+// draft is the version that the revision states of a value it changes itself.
+func (c *changedValue) draft(laboratory, by, reason string) store.Draft {
+	body := c.old.Value
+	_, rule, _ := StandardFrom(*c.Stated) // resolved when it was proposed
+	body.Value, body.StandardUncertainty, body.Stated, body.Rule = c.Value, c.StandardUncertainty, c.Stated, rule
+	body.Basis, body.Evidence, body.Provisional = c.Basis, c.Evidence, c.Basis == "provisional"
+	body.Exact, body.DegreesOfFreedom, body.Document, body.Sources, body.Groups, body.Campaign = false, nil, nil, nil, nil, nil
+	body.UBetweenUnits, body.ULongTerm, body.Status, body.Note = nil, nil, "", ""
+	var inputs []store.Input
+	for _, in := range c.old.Inputs {
+		if in.Part == "material" || in.Part == "scale" {
+			inputs = append(inputs, in)
+		}
+	}
+	return store.Draft{Kind: store.KindValue, Code: c.old.Code, By: by, Reason: reason, ValidFrom: c.validFrom(), Inputs: inputs, Value: body}
+}
+
+// validFrom is since when the changed value holds.
+func (c *changedValue) validFrom() *store.Instant {
+	if c.From != nil {
+		return c.From
+	}
+	return c.old.ValidFrom
+}
+
+// applies tells whether the change concerns a session that started then.
+func (c *changedValue) applies(started *store.Instant) bool { return since(c.From, started) }
+
+func since(from, started *store.Instant) bool {
+	return from == nil || started != nil && *started >= *from
+}
+
+// compile loads what a revision names and finds the calibrations it changes
+// directly: by a bottle, a method version or a reading.
+func compile(ctx context.Context, v *store.View, laboratory string, body store.Revision) (*changes, error) {
+	c := &changes{laboratory: laboratory, body: body, values: map[store.Ref]*changedValue{}, methods: map[store.Ref]store.Ref{},
+		units: map[string]*store.Instant{}, readings: map[string][]int{}, direct: map[store.Ref]int{}}
+	records := map[string]bool{}
+	for _, r := range body.Values {
+		old, err := decodeVersion[store.Value](ctx, v, r.Old)
+		if err != nil {
+			return nil, err
+		}
+		change := &changedValue{RevisedValue: r, part: c.next(), old: old}
+		number, _, err := numberOf(old)
+		if err != nil {
+			return nil, err
+		}
+		now := r.Value
+		if r.New != nil {
+			version, err := decodeVersion[store.Value](ctx, v, *r.New)
+			if err != nil {
+				return nil, err
+			}
+			now = version.Value.Value
+		}
+		if !r.Withdrawn {
+			x, ok := new(complaints).number("value", now)
+			if !ok {
+				return nil, fmt.Errorf("%s: changed value %q is not a number", r.Old, now)
+			}
+			change.delta = x - number.Value
+		}
+		if r.New == nil && !r.Withdrawn {
+			id := fmt.Sprintf("%s %v", old.Code, instantText(change.validFrom()))
+			if records[id] {
+				return nil, Refuse(Invalid, "two new values of %s would hold from the same moment: state since when each holds", old.Code)
+			}
+			records[id] = true
+		}
+		c.values[r.Old.Bare()] = change
+	}
+	for _, u := range body.Units {
+		c.units[u.Unit] = u.Since
+		part := c.next()
+		for after := ""; ; {
+			uses, err := v.Uses(ctx, laboratory, u.Unit, after, MaxPage)
+			if err != nil {
+				return nil, err
+			}
+			for _, use := range uses {
+				started, err := startOf(ctx, v, laboratory, use.Session)
+				if err != nil {
+					return nil, err
+				}
+				if !since(u.Since, started) {
+					continue
+				}
+				if err := c.start(ctx, v, store.Key{Laboratory: laboratory, Kind: store.KindSession, Code: use.Session}, 0, "session", part); err != nil {
+					return nil, err
+				}
+			}
+			if len(uses) < MaxPage {
+				break
+			}
+			after = uses[len(uses)-1].Session
+		}
+	}
+	for _, m := range body.Methods {
+		c.methods[m.Old.Bare()] = m.New
+		if err := c.start(ctx, v, m.Old.Key, m.Old.Version, "method", c.next()); err != nil {
+			return nil, err
+		}
+	}
+	for _, x := range body.Exclusions {
+		c.readings[x.Session] = append(c.readings[x.Session], x.Readings...)
+		if err := c.start(ctx, v, store.Key{Laboratory: laboratory, Kind: store.KindSession, Code: x.Session}, 0, "session", c.next()); err != nil {
+			return nil, err
+		}
+	}
+	return c, nil
+}
+
+func instantText(at *store.Instant) string {
+	if at == nil {
+		return ""
+	}
+	return at.String()
+}
+
+func startOf(ctx context.Context, v *store.View, laboratory, session string) (*store.Instant, error) {
+	raw, err := v.Newest(ctx, store.Key{Laboratory: laboratory, Kind: store.KindSession, Code: session})
+	if err != nil {
+		return nil, err
+	}
+	s, err := store.Decode[store.Session](raw)
+	return s.Value.StartedAt, err
+}
+
+func (c *changes) next() int {
+	c.parts++
+	return c.parts - 1
+}
+
+// start adds the calibrations that name a record in some part.
+func (c *changes) start(ctx context.Context, v *store.View, to store.Key, version int, part string, component int) error {
+	for after := ""; ; {
+		edges, next, err := v.EdgesTo(ctx, store.EdgeQuery{Laboratory: c.laboratory, To: to, Version: version, FromKind: store.KindCalibration, After: after, Limit: MaxPage, AsOf: &c.body.FrozenAt})
+		if err != nil {
+			return err
+		}
+		for _, e := range edges {
+			if _, known := c.direct[e.From]; e.Part == part && !known {
+				c.direct[e.From] = component
+			}
+		}
+		if after = next; after == "" {
+			return nil
+		}
+	}
+}
+
+// roots are what everything affected rests on.
+func (c *changes) roots() []store.Ref {
+	var roots []store.Ref
+	for ref := range c.values {
+		roots = append(roots, ref)
+	}
+	for ref := range c.direct {
+		roots = append(roots, ref)
+	}
+	slices.SortFunc(roots, func(a, b store.Ref) int { return strings.Compare(a.String(), b.String()) })
+	return roots
+}
