@@ -1,0 +1,145 @@
+package rest
+
+import (
+	"context"
+	"fmt"
+	"time"
+
+	"deltamoor/api/registry"
+	"deltamoor/store"
+)
+
+// A ReportSummary is a version of a report, without its lines' values.
+type ReportSummary struct {
+	Recorded
+	Client string   `json:"client"`
+	Title  string   `json:"title"`
+	Amends string   `json:"amends,omitempty" doc:"Code of the report that this one replaces."`
+	Note   string   `json:"note,omitempty"`
+	Codes  []string `json:"codes" doc:"The permanent codes of its lines, in order."`
+}
+
+// A Report is an issued report with its lines.
+type Report struct {
+	ReportSummary
+	Lines []Reported `json:"lines"`
+}
+
+// A Reported is a reported delta: what a permanent code stands for.
+type Reported struct {
+	Code       string    `json:"code" example:"D7K3M-9Q2XG"`
+	Laboratory string    `json:"laboratory"`
+	Report     string    `json:"report"`
+	Line       int       `json:"line" doc:"Index in the report, from 0."`
+	Final      Input     `json:"final" doc:"The version of the final value that was reported."`
+	FinalState string    `json:"final_state" doc:"What became of that version since."`
+	Sample     string    `json:"sample"`
+	Client     string    `json:"client"`
+	Label      string    `json:"label" doc:"The client's own name of the sample."`
+	Quantity   string    `json:"quantity"`
+	Scale      string    `json:"scale"`
+	Measurand  string    `json:"measurand"`
+	Value      float64   `json:"value" doc:"‰"`
+	U          float64   `json:"u" doc:"Standard uncertainty, k = 1 (‰)."`
+	K          float64   `json:"k"`
+	Expanded   float64   `json:"U" doc:"Expanded uncertainty k·u (‰)."`
+	P          float64   `json:"p"`
+	NuEff      *float64  `json:"nu_eff" doc:"null where infinite."`
+	Flags      []string  `json:"flags"`
+	IssuedAt   time.Time `json:"issued_at"`
+	IssuedBy   string    `json:"issued_by"`
+	Hash       string    `json:"hash" doc:"SHA-256 of the line's canonical bytes, as the report holds it."`
+}
+
+func showReported(d registry.ReportedDelta) Reported {
+	return Reported{Code: store.FormatCode(d.Code), Laboratory: d.Laboratory, Report: store.FormatCode(d.Report), Line: d.Line,
+		Final:      Input{Part: "line", Laboratory: d.Final.Laboratory, Kind: string(d.Final.Kind), Code: store.FormatCode(d.Final.Code), Version: d.Final.Version, Hash: d.Final.Hash.String()},
+		FinalState: string(d.FinalState), Sample: store.FormatCode(d.Sample), Client: d.Client, Label: d.Label, Quantity: d.Quantity, Scale: d.Scale, Measurand: d.Measurand,
+		Value: d.Value, U: d.StandardUncertainty, K: d.K, Expanded: d.Expanded, P: d.Probability, NuEff: d.EffectiveDF, Flags: append([]string{}, d.Flags...),
+		IssuedAt: d.IssuedAt.Time(), IssuedBy: d.IssuedBy, Hash: d.Hash.String()}
+}
+
+func showReportSummary(it registry.Item[store.Report]) ReportSummary {
+	r := it.Value
+	return ReportSummary{Recorded: recorded(it), Client: r.Client, Title: r.Title, Amends: showCode(store.KindReport, r.Amends), Note: r.Note,
+		Codes: convert(r.Lines, func(l store.ReportHash) string { return store.FormatCode(l.Code) })}
+}
+
+var reportKind = kindOfRecord[store.Report, ReportSummary]{kind: store.KindReport, show: showReportSummary, made: true,
+	csv: table[ReportSummary]{columns("client", "title", "amends", "lines"), func(r ReportSummary) []string {
+		return r.row(r.Client, r.Title, r.Amends, fmt.Sprint(len(r.Codes)))
+	}}}
+
+var reportedTable = table[Reported]{[]string{"code", "report", "line", "client", "label", "sample", "quantity", "scale", "measurand", "value", "u", "k", "U", "p", "nu_eff",
+	"flags", "final", "final_version", "final_state", "issued_at", "issued_by", "hash"}, func(r Reported) []string {
+	return []string{r.Code, r.Report, whole(&r.Line), r.Client, r.Label, r.Sample, r.Quantity, r.Scale, r.Measurand, number(r.Value), number(r.U), number(r.K), number(r.Expanded),
+		number(r.P), optional(r.NuEff), spaced(r.Flags), r.Final.Code, whole(&r.Final.Version), r.FinalState, clock(&r.IssuedAt), r.IssuedBy, r.Hash}
+}}
+
+// A NewReport issues final values.
+type NewReport struct {
+	Client string   `json:"client" maxLength:"200"`
+	Title  string   `json:"title" maxLength:"200"`
+	Finals []string `json:"finals" minItems:"1" maxItems:"5000" doc:"Codes of approved final values, in the order of the report."`
+	Amends string   `json:"amends,omitempty" maxLength:"40" doc:"Code of a report that this one replaces."`
+	Reason string   `json:"reason,omitempty" maxLength:"4000" doc:"Asked for when amending."`
+	Note   string   `json:"note,omitempty" maxLength:"4000"`
+}
+
+func (f *face) issue(ctx context.Context, actor registry.Actor, in *struct{ Body NewReport }) (*one[Report], error) {
+	b := in.Body
+	q := registry.ReportRequest{Client: b.Client, Title: b.Title, Reason: b.Reason, Note: b.Note}
+	for i, text := range b.Finals {
+		code, err := parseCode(fmt.Sprintf("body.finals[%d]", i), text, store.KindFinal)
+		if err != nil {
+			return nil, err
+		}
+		q.Finals = append(q.Finals, code)
+	}
+	if b.Amends != "" {
+		var err error
+		if q.Amends, err = parseCode("body.amends", b.Amends, store.KindReport); err != nil {
+			return nil, err
+		}
+	}
+	r, err := f.registry.Issue(ctx, actor, q)
+	if err != nil {
+		return nil, err
+	}
+	return reportAnswer(r), nil
+}
+
+func reportAnswer(r registry.Report) *one[Report] {
+	out := Report{showReportSummary(r.Item), convert(r.Lines, showReported)}
+	return &one[Report]{ETag: quoteTag(r.Tag()), Location: "/v1/reports/" + out.Code, Body: out}
+}
+
+func (f *face) report(ctx context.Context, actor registry.Actor, in *struct {
+	CodeParam
+	FormatParam
+}) (*answer, error) {
+	code, err := reportKind.code(in.Code)
+	if err != nil {
+		return nil, err
+	}
+	r, err := f.registry.Report(ctx, actor, code)
+	if err != nil {
+		return nil, err
+	}
+	if in.format == "csv" {
+		return csvAnswer(f, convert(r.Lines, showReported), reportedTable), nil
+	}
+	return jsonAnswer(reportAnswer(r).Body, 200, map[string]string{"ETag": quoteTag(r.Tag())})
+}
+
+func (f *face) reported(ctx context.Context, actor registry.Actor, in *struct{ CodeParam }) (*plain[Reported], error) {
+	code, err := parseCode("path.code", in.Code, kindReported)
+	if err != nil {
+		return nil, err
+	}
+	d, err := f.registry.Reported(ctx, actor, code)
+	if err != nil {
+		return nil, err
+	}
+	return &plain[Reported]{showReported(d)}, nil
+}

@@ -1,0 +1,184 @@
+package rest
+
+import (
+	"net/http"
+	"reflect"
+
+	"deltamoor/store"
+)
+
+const (
+	get  = http.MethodGet
+	post = http.MethodPost
+)
+
+// routes is the one table of the API: every operation with its address, what
+// describes it, and what answers it.
+func (f *face) routes() {
+	o := f.operation
+
+	handle(f, o(get, "/scales", "listScales", "scales", "List scales", listing[Scale]), f.scales)
+	handle(f, o(get, "/scales/{code}", "getScale", "scales", "Read a scale"), recordOf(f, scaleKind))
+	handle(f, o(get, "/scales/{code}/versions", "listScaleVersions", "scales", "List the definition history of a scale", listing[Scale]), versionsOf(f, scaleKind))
+	handle(f, o(get, "/scales/{code}/versions/{version}", "getScaleVersion", "scales", "Read one version of a scale"), versionOf(f, scaleKind))
+
+	materialKind := kindOfRecord[store.Material, Material]{kind: store.KindMaterial, show: showMaterial, csv: materialTable}
+	handle(f, o(get, "/materials", "listMaterials", "materials", "List reference materials", listing[Material]), f.materials)
+	handle(f, o(post, "/materials", "addMaterial", "materials", "Register a reference material", creates), f.addMaterial)
+	handle(f, o(get, "/materials/{code}", "getMaterial", "materials", "Read a material by its code, name or alias"), f.material)
+	handle(f, o(get, "/materials/{code}/versions", "listMaterialVersions", "materials", "List the versions of a material", listing[Material]), versionsOf(f, materialKind))
+	handle(f, o(post, "/materials/{code}/versions", "changeMaterial", "materials", "State a further version of a material", creates, conditional), f.changeMaterial)
+	handle(f, o(get, "/materials/{code}/versions/{version}", "getMaterialVersion", "materials", "Read one version of a material"), versionOf(f, materialKind))
+
+	handle(f, o(get, "/materials/{code}/units", "listMaterialUnits", "materials", "List the units of a material", listing[Unit]), f.materialUnits)
+	handle(f, o(post, "/materials/{code}/units", "addUnits", "materials", "Register units of a material", creates), f.addUnits)
+	handle(f, o(get, "/units", "listUnits", "materials", "List units", listing[Unit]), f.units)
+	handle(f, o(get, "/units/{code}", "getUnit", "materials", "Read a unit"), recordOf(f, unitKind))
+	handle(f, o(get, "/units/{code}/versions", "listUnitVersions", "materials", "List the states of a unit", listing[Unit]), versionsOf(f, unitKind))
+	handle(f, o(post, "/units/{code}/versions", "changeUnit", "materials", "State a further version of a unit", creates, conditional), f.changeUnit)
+	handle(f, o(get, "/units/{code}/versions/{version}", "getUnitVersion", "materials", "Read one version of a unit"), versionOf(f, unitKind))
+	handle(f, o(get, "/units/{code}/trace", "traceUnit", "trust", "Trace a unit", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, unitKind))
+
+	handle(f, o(post, "/units/{code}/quarantine", "quarantineUnit", "materials", "Take a unit out of use, in doubt since its last good moment", creates, conditional), f.quarantine)
+	handle(f, o(get, "/units/{code}/affected", "listAffected", "materials", "List the sessions that used a unit since a moment, with what rests on them"), f.affected)
+	handle(f, o(get, "/materials/{code}/stock", "getStock", "materials", "Read what is left of a material, who used it, and when it runs out"), f.stock)
+	handle(f, o(get, "/materials/{code}/labels", "getLabels", "materials", "Print labels of units as a sheet", also("image/svg+xml", "One sheet, in true size.")), f.labels)
+	handle(f, o(get, "/materials/{code}/certificate", "getCertificate", "materials", "Read the certificate of a material's values", answers[Certificate],
+		also("text/html", "A fragment for printing."), also("application/xml", "A digital calibration certificate, schema 3.2.0.")), f.certificate)
+	handle(f, o(get, "/due", "listDue", "materials", "List what falls due: expiry, checks, successors, units beyond their limits", answers[List[DueItem]], also("text/csv", "The list.")), f.due)
+
+	const value = "/materials/{code}/values/{scale}/{measurand}"
+	handle(f, o(post, "/values/import", "backLoadValues", "materials", "Bring values assigned before: all or none, as drafts", creates, long,
+		file(reflect.TypeFor[BackLoad](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes)), f.backLoad)
+	handle(f, o(get, "/materials/{code}/values", "listValues", "materials", "List the assigned values of a material", listing[Value]), f.materialValues)
+	handle(f, o(post, "/materials/{code}/values", "addValue", "materials", "State an assigned value: a draft", creates), f.addValue)
+	handle(f, o(get, value, "getValue", "materials", "Read the value in force"), f.value)
+	handle(f, o(get, value+"/versions", "listValueVersions", "materials", "List the versions of a value", listing[Value]), f.valueVersions)
+	handle(f, o(post, value+"/versions", "changeValue", "materials", "State a further version of a value: a draft", creates, conditional), f.changeValue)
+	handle(f, o(get, value+"/versions/{version}", "getValueVersion", "materials", "Read one version of a value"), f.valueVersion)
+	handle(f, o(post, value+"/assignments", "assignValue", "materials", "State a value from the sessions that measured the material: a draft", creates, conditional), f.assignValue)
+	handle(f, o(get, value+"/decisions", "listValueDecisions", "materials", "List the decisions on a value", listing[VersionDecision]), f.valueDecisions)
+	handle(f, o(post, value+"/decisions", "decideValue", "materials", "Submit, approve, decline or withdraw a value", creates, conditional), f.decideValue)
+	handle(f, o(get, value+"/trace", "traceValue", "trust", "Trace a value", answers[Trace], also("text/plain", "Indented lines.")), f.traceValue)
+
+	handle(f, o(get, "/assignments", "listAssignments", "materials", "List value-assignment campaigns", listing[Assignment]), recordsOf(f, assignmentKind))
+	handle(f, o(post, "/assignments", "planAssignment", "materials", "Plan a campaign: a draft", creates), f.planAssignment)
+	handle(f, o(get, "/assignments/{code}", "getAssignment", "materials", "Read a campaign's plan"), recordOf(f, assignmentKind))
+	handle(f, o(get, "/assignments/{code}/versions", "listAssignmentVersions", "materials", "List the versions of a plan", listing[Assignment]), versionsOf(f, assignmentKind))
+	handle(f, o(post, "/assignments/{code}/versions", "changeAssignment", "materials", "Plan a campaign anew, before its approval: a draft", creates, conditional), f.changeAssignment)
+	handle(f, o(get, "/assignments/{code}/versions/{version}", "getAssignmentVersion", "materials", "Read one version of a plan"), versionOf(f, assignmentKind))
+	handle(f, o(get, "/assignments/{code}/decisions", "listAssignmentDecisions", "materials", "List the decisions on a plan", listing[VersionDecision]), decisionsOn(f, assignmentKind))
+	handle(f, o(post, "/assignments/{code}/decisions", "decideAssignment", "materials", "Submit, approve, decline or withdraw a plan", creates, conditional), decisionOn(f, assignmentKind))
+	handle(f, o(get, "/assignments/{code}/prospects", "getProspects", "materials", "Read the uncertainty to be expected of a plan, and what buys the most"), f.prospects)
+	handle(f, o(get, "/assignments/{code}/analysis", "analyseAssignment", "materials", "Read where a campaign stands", long), f.analyseAssignment)
+	handle(f, o(post, "/assignments/{code}/values", "concludeAssignment", "materials", "Draw up a value of an approved campaign: a draft", creates, conditional, long), f.concludeAssignment)
+	handle(f, o(get, "/assignments/{code}/trace", "traceAssignment", "trust", "Trace a plan", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, assignmentKind))
+
+	handle(f, o(get, "/instruments", "listInstruments", "sessions", "List instruments", listing[Instrument]), recordsOf(f, instrumentKind))
+	handle(f, o(post, "/instruments", "addInstrument", "sessions", "Register an instrument", creates), f.addInstrument)
+	handle(f, o(get, "/instruments/{code}", "getInstrument", "sessions", "Read an instrument"), recordOf(f, instrumentKind))
+	handle(f, o(get, "/instruments/{code}/versions", "listInstrumentVersions", "sessions", "List the versions of an instrument", listing[Instrument]), versionsOf(f, instrumentKind))
+	handle(f, o(post, "/instruments/{code}/versions", "changeInstrument", "sessions", "State a further version of an instrument", creates, conditional), f.changeInstrument)
+	handle(f, o(get, "/instruments/{code}/versions/{version}", "getInstrumentVersion", "sessions", "Read one version of an instrument"), versionOf(f, instrumentKind))
+
+	handle(f, o(get, "/methods", "listMethods", "sessions", "List methods", listing[Method]), recordsOf(f, methodKind))
+	handle(f, o(post, "/methods", "addMethod", "sessions", "State a method: a draft", creates), f.addMethod)
+	handle(f, o(get, "/methods/{code}", "getMethod", "sessions", "Read the method in force"), recordOf(f, methodKind))
+	handle(f, o(get, "/methods/{code}/versions", "listMethodVersions", "sessions", "List the versions of a method", listing[Method]), versionsOf(f, methodKind))
+	handle(f, o(post, "/methods/{code}/versions", "changeMethod", "sessions", "State a further version of a method: a draft", creates, conditional), f.changeMethod)
+	handle(f, o(get, "/methods/{code}/versions/{version}", "getMethodVersion", "sessions", "Read one version of a method"), versionOf(f, methodKind))
+	handle(f, o(get, "/methods/{code}/decisions", "listMethodDecisions", "sessions", "List the decisions on a method", listing[VersionDecision]), decisionsOn(f, methodKind))
+	handle(f, o(post, "/methods/{code}/decisions", "decideMethod", "sessions", "Submit, approve, decline or withdraw a method", creates, conditional), decisionOn(f, methodKind))
+
+	handle(f, o(get, "/sessions", "listSessions", "sessions", "List sessions", listing[Session]), recordsOf(f, sessionKind))
+	handle(f, o(post, "/sessions", "addSession", "sessions", "Open a session without readings", creates), f.addSession)
+	handle(f, o(post, "/sessions/import", "importSession", "sessions", "Open a session and bring its readings in one act", creates, long, previewed[Imported],
+		file(reflect.TypeFor[NewReadings](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes)), f.importSession)
+	handle(f, o(get, "/sessions/{code}", "getSession", "sessions", "Read a session"), recordOf(f, sessionKind))
+	handle(f, o(get, "/sessions/{code}/versions", "listSessionVersions", "sessions", "List the versions of a session", listing[Session]), versionsOf(f, sessionKind))
+	handle(f, o(get, "/sessions/{code}/versions/{version}", "getSessionVersion", "sessions", "Read one version of a session"), versionOf(f, sessionKind))
+	handle(f, o(get, "/sessions/{code}/trace", "traceSession", "trust", "Trace a session", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, sessionKind))
+	handle(f, o(get, "/sessions/{code}/readings", "listReadings", "sessions", "List the readings of a session", listing[Reading]), f.readings)
+	handle(f, o(post, "/sessions/{code}/readings", "importReadings", "sessions", "Bring the readings of a session: all rows or none", creates, long, previewed[Imported],
+		file(reflect.TypeFor[NewReadings](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes)), f.importReadings)
+	handle(f, o(get, "/sessions/{code}/exclusions", "listExclusions", "sessions", "List the acts of exclusion in a session", answers[Exclusions], also("text/csv", "The acts.")), f.exclusions)
+	handle(f, o(post, "/sessions/{code}/exclusions", "exclude", "sessions", "Exclude readings, or readmit them", creates, conditional), f.exclude)
+	handle(f, o(get, "/sessions/{code}/outcomes", "listOutcomes", "sessions", "List the outcomes of a session", answers[List[Outcome]], also("text/csv", "The outcomes.")), f.outcomes)
+	handle(f, o(post, "/sessions/{code}/outcomes", "stateOutcome", "sessions", "State the outcome of a session for a quantity", creates, conditional), f.stateOutcome)
+	handle(f, o(get, "/sessions/{code}/outcomes/{quantity}", "getOutcome", "sessions", "Read the outcome for a quantity"), f.outcome)
+	handle(f, o(get, "/sessions/{code}/outcomes/{quantity}/versions", "listOutcomeVersions", "sessions", "List the versions of an outcome", listing[Outcome]), f.outcomeVersions)
+	handle(f, o(get, "/sessions/{code}/outcomes/{quantity}/versions/{version}", "getOutcomeVersion", "sessions", "Read one version of an outcome"), f.outcomeVersion)
+
+	handle(f, o(get, "/sessions/{code}/calibrations", "listCalibrations", "calibrations", "List the calibrations of a session", listing[Calibration]), f.calibrations)
+	handle(f, o(post, "/sessions/{code}/calibrations", "fitSession", "calibrations", "Fit a quantity of a session: a draft", creates, previewed[Calibration]), f.fitSession)
+	handle(f, o(get, "/calibrations/{code}", "getCalibration", "calibrations", "Read a calibration"), recordOf(f, calibrationKind))
+	handle(f, o(get, "/calibrations/{code}/versions", "listCalibrationVersions", "calibrations", "List the versions of a calibration", listing[Calibration]), versionsOf(f, calibrationKind))
+	handle(f, o(get, "/calibrations/{code}/versions/{version}", "getCalibrationVersion", "calibrations", "Read one version of a calibration"), versionOf(f, calibrationKind))
+	handle(f, o(get, "/calibrations/{code}/results", "listResults", "calibrations", "List the results of a calibration", listing[Result]), f.results)
+	handle(f, o(get, "/calibrations/{code}/decisions", "listCalibrationDecisions", "calibrations", "List the decisions on a calibration", listing[VersionDecision]), decisionsOn(f, calibrationKind))
+	handle(f, o(post, "/calibrations/{code}/decisions", "decideCalibration", "calibrations", "Submit, approve, decline or withdraw a calibration", creates, conditional), decisionOn(f, calibrationKind))
+	handle(f, o(get, "/calibrations/{code}/trace", "traceCalibration", "trust", "Trace a calibration", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, calibrationKind))
+	handle(f, o(post, "/calculations/fit", "calculateFit", "calibrations", "Fit without storing anything", fitBody), f.calculateFit)
+
+	handle(f, o(get, "/samples", "listSamples", "samples", "List samples", listing[Sample]), recordsOf(f, sampleKind))
+	handle(f, o(post, "/samples", "addSamples", "samples", "Put samples on the list: all or none", creates, long,
+		file(reflect.TypeFor[NewSamples](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes)), f.addSamples)
+	handle(f, o(get, "/samples/{code}", "getSample", "samples", "Read a sample and where it stands"), f.sample)
+	handle(f, o(get, "/samples/{code}/versions", "listSampleVersions", "samples", "List the versions of a sample", listing[Sample]), versionsOf(f, sampleKind))
+	handle(f, o(get, "/samples/{code}/versions/{version}", "getSampleVersion", "samples", "Read one version of a sample"), versionOf(f, sampleKind))
+
+	handle(f, o(get, "/finals", "listFinals", "samples", "List final values", listing[Final]), recordsOf(f, finalKind))
+	handle(f, o(post, "/finals", "addFinal", "samples", "Draw up the final value of a sample: a draft", creates), f.addFinal)
+	handle(f, o(get, "/finals/{code}", "getFinal", "samples", "Read a final value"), recordOf(f, finalKind))
+	handle(f, o(get, "/finals/{code}/versions", "listFinalVersions", "samples", "List the versions of a final value", listing[Final]), versionsOf(f, finalKind))
+	handle(f, o(post, "/finals/{code}/versions", "changeFinal", "samples", "Draw a final value up again: a draft", creates, conditional), f.changeFinal)
+	handle(f, o(get, "/finals/{code}/versions/{version}", "getFinalVersion", "samples", "Read one version of a final value"), versionOf(f, finalKind))
+	handle(f, o(get, "/finals/{code}/decisions", "listFinalDecisions", "samples", "List the decisions on a final value", listing[VersionDecision]), decisionsOn(f, finalKind))
+	handle(f, o(post, "/finals/{code}/decisions", "decideFinal", "samples", "Submit, approve, decline or withdraw a final value", creates, conditional), decisionOn(f, finalKind))
+	handle(f, o(get, "/finals/{code}/trace", "traceFinal", "trust", "Trace a final value", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, finalKind))
+
+	handle(f, o(get, "/reports", "listReports", "samples", "List reports", listing[ReportSummary]), recordsOf(f, reportKind))
+	handle(f, o(post, "/reports", "issueReport", "samples", "Issue final values: each line gets its permanent code", creates), f.issue)
+	handle(f, o(get, "/reports/{code}", "getReport", "samples", "Read a report with its lines", answers[Report], also("text/csv", "The lines.")), f.report)
+	handle(f, o(get, "/reports/{code}/versions", "listReportVersions", "samples", "List the versions of a report", listing[ReportSummary]), versionsOf(f, reportKind))
+	handle(f, o(get, "/reports/{code}/versions/{version}", "getReportVersion", "samples", "Read one version of a report"), versionOf(f, reportKind))
+	handle(f, o(get, "/reports/{code}/decisions", "listReportDecisions", "samples", "List the decisions on a report", listing[VersionDecision]), decisionsOn(f, reportKind))
+	handle(f, o(post, "/reports/{code}/decisions", "decideReport", "samples", "Withdraw a report", creates, conditional), decisionOn(f, reportKind))
+	handle(f, o(get, "/reported/{code}", "getReported", "samples", "Read a reported delta by its permanent code"), f.reported)
+	handle(f, o(get, "/reported/{code}/trace", "traceReported", "trust", "Trace a reported delta to where its chain ends", answers[Trace], also("text/plain", "Indented lines.")), f.traceReported)
+
+	handle(f, o(get, "/revisions", "listRevisions", "trust", "List revisions", listing[Revision]), recordsOf(f, revisionKind))
+	handle(f, o(post, "/revisions", "addRevision", "trust", "Say what may have been wrong: what moves, and with preview=false everything drawn up again as a job", creates, long, previewed[RevisionPreview], accepted202[RevisionMade]), f.addRevision)
+	handle(f, o(get, "/revisions/{code}", "getRevision", "trust", "Read a revision"), recordOf(f, revisionKind))
+	handle(f, o(get, "/revisions/{code}/versions", "listRevisionVersions", "trust", "List the versions of a revision", listing[Revision]), versionsOf(f, revisionKind))
+	handle(f, o(get, "/revisions/{code}/versions/{version}", "getRevisionVersion", "trust", "Read one version of a revision"), versionOf(f, revisionKind))
+	handle(f, o(get, "/revisions/{code}/decisions", "listRevisionDecisions", "trust", "List the decisions on a revision", listing[VersionDecision]), decisionsOn(f, revisionKind))
+	handle(f, o(post, "/revisions/{code}/decisions", "decideRevision", "trust", "Approve the set of a revision by its hash, or decline it", creates, conditional), f.decideRevision)
+	handle(f, o(get, "/revisions/{code}/sets", "listRevisionSets", "trust", "List the reports that a revision moves, and what became of them", listing[RevisionSet]), f.revisionSets)
+	handle(f, o(post, "/revisions/{code}/closings", "closeRevision", "trust", "Say what becomes of one report: re-issue, annotate, no action", creates), f.closeRevision)
+	handle(f, o(get, "/revisions/{code}/sets/{report}/lines", "listRevisionLines", "trust", "List the lines of a report before and after a revision", listing[Notice]), f.revisionNotice)
+	handle(f, o(get, "/jobs/{code}", "getJob", "trust", "Read the progress of long work"), f.job)
+
+	handle(f, o(get, "/laboratories", "listLaboratories", "people", "List the laboratories of who asks", listing[Laboratory]), f.laboratories)
+	handle(f, o(get, "/laboratories/{code}", "getLaboratory", "people", "Read a laboratory"), f.laboratory)
+	handle(f, o(get, "/people", "listPeople", "people", "List people", listing[Person]), f.people)
+	handle(f, o(post, "/people", "addPerson", "people", "Register a person", creates), f.addPerson)
+	handle(f, o(get, "/people/{code}", "getPerson", "people", "Read a person"), recordOf(f, personKind))
+	handle(f, o(get, "/people/{code}/versions", "listPersonVersions", "people", "List the versions of a person", listing[Person]), versionsOf(f, personKind))
+	handle(f, o(post, "/people/{code}/versions", "changePerson", "people", "State a further version of a person", creates, conditional), f.changePerson)
+	handle(f, o(get, "/people/{code}/versions/{version}", "getPersonVersion", "people", "Read one version of a person"), versionOf(f, personKind))
+	handle(f, o(get, "/tokens", "listTokens", "people", "List tokens", listing[Token]), f.tokens)
+	handle(f, o(post, "/tokens", "addToken", "people", "Make a token; its secret is shown once", creates, secret), f.addToken)
+	handle(f, o(get, "/tokens/{code}", "getToken", "people", "Read a token"), f.oneToken)
+	handle(f, o(get, "/tokens/{code}/versions", "listTokenVersions", "people", "List the versions of a token", listing[Token]), f.tokenVersions)
+	handle(f, o(post, "/tokens/{code}/versions", "revokeToken", "people", "Revoke a token", creates, conditional), f.revokeToken)
+	handle(f, o(get, "/tokens/{code}/versions/{version}", "getTokenVersion", "people", "Read one version of a token"), f.tokenVersion)
+
+	handle(f, o(post, "/verification", "verify", "trust", "Recompute everything the laboratory holds", long), f.verifyAll)
+	handle(f, o(get, "/uploads/{sha256}", "getUpload", "trust", "The bytes as they came", long, also(mediaBytes, "The bytes.")), f.upload)
+	handle(f, o(get, "/ledger", "getLedger", "trust", "Size and root of the ledger"), f.ledgerHead)
+	handle(f, o(get, "/ledger/entries", "listEntries", "trust", "List the entries of the ledger", listing[Entry]), f.ledgerEntries)
+	handle(f, o(get, "/ledger/entries/{position}/inclusion", "proveInclusion", "trust", "Prove that an entry is in the ledger"), f.inclusion)
+	handle(f, o(get, "/ledger/consistency", "proveConsistency", "trust", "Prove that an earlier ledger is a prefix of a later one"), f.consistency)
+	handle(f, o(get, "/ledger/checkpoint", "getCheckpoint", "trust", "The newest signed checkpoint", also("text/plain", "A signed note.")), f.checkpoint)
+}
