@@ -193,7 +193,7 @@ func relist(t testing.TB, files []zipFile) []zipFile {
 				t.Fatal(err)
 			}
 		} else {
-			named = append(named, namedFile{f.name, f.data})
+			named = append(named, namedFile(f))
 		}
 	}
 	text, err := manifestText(m, named)
@@ -202,7 +202,7 @@ func relist(t testing.TB, files []zipFile) []zipFile {
 	}
 	out := []zipFile{}
 	for _, f := range named {
-		out = append(out, zipFile{f.name, f.data})
+		out = append(out, zipFile(f))
 	}
 	return append(out, zipFile{packManifest, text})
 }

@@ -85,7 +85,7 @@ var certificatePage = template.Must(template.New("certificate").Funcs(template.F
 {{range .Certificate.Values}}<tr><th scope="row">{{.Scale}}</th><td>{{.Measurand}}</td><td>{{.ValueText}}</td><td>{{.ExpandedText}}</td><td>{{printf "%.2f" .K}}</td><td>{{number .P}}</td><td>{{stated .ValidFrom}}</td><td>{{stated .ExpiresAt}}</td><td>{{basis .}}</td></tr>
 {{end}}</tbody></table>
 {{range .Certificate.Values}}<section><h2>{{.Scale}} ({{.Measurand}})</h2>
-<p>Value {{.Value}} ‰, u = {{number .U}} ‰ (k = 1), U = {{number .Expanded}} ‰ (k = {{number .K}}, p = {{number .P}}{{if known .NuEff}}, u is known{{else}}, effective degrees of freedom {{nu .NuEff}}{{end}}). Version {{.Code}}.{{.Version}}, SHA-256 {{.Hash}}.</p>
+<p>Value {{.Value}} ‰{{if eq .U 0.0}} ({{if .Exact}}exact by definition{{else}}no uncertainty is stated{{end}}){{else}}, u = {{number .U}} ‰ (k = 1), U = {{number .Expanded}} ‰ (k = {{number .K}}, p = {{number .P}}{{if known .NuEff}}, u is known{{else}}, effective degrees of freedom {{nu .NuEff}}{{end}}){{end}}. Version {{.Code}}.{{.Version}}, SHA-256 {{.Hash}}.</p>
 {{if .Budget}}<table class="budget"><caption>Budget</caption><thead><tr><th scope="col">Part</th><th scope="col">u (‰)</th><th scope="col">Share of u²</th></tr></thead><tbody>
 {{range .Budget}}<tr><th scope="row">{{.Line}}</th><td>{{number .StandardUncertainty}}</td><td>{{printf "%.3f" .Share}}</td></tr>
 {{end}}</tbody></table>

@@ -9,6 +9,7 @@ import (
 	"io"
 	"iter"
 	"strings"
+	"unicode/utf8"
 )
 
 // A cell is what stands in one place of a table.
@@ -186,12 +187,6 @@ func guarded(field string) bool {
 }
 
 func startsFormula(field string) bool {
-	for _, r := range field {
-		switch r {
-		case '=', '+', '-', '@', '\t', '\r', '\n', '＝', '＋', '－', '＠':
-			return true
-		}
-		break
-	}
-	return false
+	first, _ := utf8.DecodeRuneInString(field)
+	return strings.ContainsRune("=+-@\t\r\n＝＋－＠", first)
 }

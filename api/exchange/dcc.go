@@ -260,7 +260,11 @@ func dccValue(v registry.CertificateValue) (dccMeasured, error) {
 		return m, err
 	}
 	if v.U == 0 {
-		if value, err = hybrid("assigned value, exact by definition", string(v.Value), nil); err != nil {
+		name := "assigned value, no uncertainty stated"
+		if v.Exact {
+			name = "assigned value, exact by definition"
+		}
+		if value, err = hybrid(name, string(v.Value), nil); err != nil {
 			return m, err
 		}
 	}
@@ -271,8 +275,10 @@ func dccValue(v registry.CertificateValue) (dccMeasured, error) {
 		budget.Quantities = append(budget.Quantities, q)
 		return err
 	}
-	if err := add("standard uncertainty", v.U); err != nil {
-		return m, err
+	if v.U > 0 {
+		if err := add("standard uncertainty", v.U); err != nil {
+			return m, err
+		}
 	}
 	for _, line := range v.Budget {
 		if err := add(line.Line, line.StandardUncertainty); err != nil {
@@ -282,7 +288,9 @@ func dccValue(v registry.CertificateValue) (dccMeasured, error) {
 	if v.NuEff != nil {
 		budget.Quantities = append(budget.Quantities, dccQuantity{Name: english("effective degrees of freedom"), Plain: &dsiReal{Value: FormatNumber(*v.NuEff), Unit: dsiOne}})
 	}
-	m.Results = append(m.Results, budget)
+	if len(budget.Quantities) > 0 {
+		m.Results = append(m.Results, budget)
+	}
 	m.Meta = append(m.Meta, dccMeta{Name: english("version of the value"), References: []string{fmt.Sprintf("%s.%d", v.Code, v.Version), plainText("SHA-256 " + v.Hash.String())}})
 	if len(v.Anchors) > 0 {
 		trace := dccMeta{Name: english("traceable through")}

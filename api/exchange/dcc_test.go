@@ -36,7 +36,8 @@ func certificate() registry.Certificate {
 				Anchors: []registry.CertificateAnchor{{Material: "USGS40", Version: "USGS40/d13C-VPDB/total.1", Value: "-26.39", U: 0.04, Basis: "certificate"}}},
 			{Code: "PEAT-LO/d15N-AIR/total", Version: 1, Scale: "d15N-AIR", Measurand: "total", Quantity: "d15N", Value: "+0.4", Number: 0.4, U: 0.1, K: 1.96, Expanded: 0.196, P: 0.95,
 				ValueText: "0.40", ExpandedText: "0.20", Basis: "provisional", Evidence: "notebook 4, page 12", BackLoaded: true, ValidFrom: instantOn(1)},
-			{Code: "PEAT-LO/d2H-X/total", Version: 1, Scale: "d2H-X", Measurand: "total", Quantity: "d2H", Value: "-428", Number: -428, K: 1.96, P: 0.95, ValueText: "-428", ExpandedText: "0", Basis: "definition"},
+			{Code: "PEAT-LO/d2H-X/total", Version: 1, Scale: "d2H-X", Measurand: "total", Quantity: "d2H", Value: "-428", Number: -428, K: 1.96, P: 0.95, ValueText: "-428", ExpandedText: "exact", Exact: true, Basis: "definition"},
+			{Code: "PEAT-LO/d34S-X/total", Version: 1, Scale: "d34S-X", Measurand: "total", Quantity: "d34S", Value: "21.0", Number: 21, K: 1.96, P: 0.95, ValueText: "21.0", ExpandedText: "none stated", Basis: "literature"},
 		},
 		Signatures: []registry.CertificateSignature{{Person: "mara", Name: "Mara Ø", Meaning: "made", Of: "PEAT-LO/d13C-VPDB/total.2", At: *instantOn(20)}, {Person: "sig", Name: "Sig", Meaning: "approved", At: *instantOn(21)}}}
 }
@@ -180,7 +181,7 @@ func TestCertificatePageSaysWhatTheXMLSays(t *testing.T) {
 	}
 	text := page.String()
 	for _, want := range []string{"Peat &lt;low&gt; &amp; dry", "<td>-28.012</td><td>0.046</td>", "-28.012340 ‰", "U = 0.04559 ‰ (k = 2.35, p = 0.95, effective degrees of freedom 7.25)",
-		"H319 Causes serious eye irritation.", "The safety data sheet decides.", "assigned before deltamoor", "USGS40/d13C-VPDB/total.1", "A1234-567Y8", "2026-03-30", "Mara Ø", "0.5 mg", "u is known"} {
+		"H319 Causes serious eye irritation.", "The safety data sheet decides.", "assigned before deltamoor", "USGS40/d13C-VPDB/total.1", "A1234-567Y8", "2026-03-30", "Mara Ø", "0.5 mg", "u is known", "-428 ‰ (exact by definition)", "21.0 ‰ (no uncertainty is stated)", "<td>none stated</td>"} {
 		if !strings.Contains(text, want) {
 			t.Errorf("the page lacks %q", want)
 		}
