@@ -81,7 +81,7 @@ type StudyPlan struct {
 // AssignmentLimits are what the data must satisfy; 0 is not asked for.
 type AssignmentLimits struct {
 	Expanded      float64 `json:"U,omitempty"`              // U of the certificate at most, ‰
-	Agreement     float64 `json:"agreement_p,omitempty"`    // p of the sessions' agreement at least
+	Agreement     float64 `json:"agreement_p,omitempty"`    // p of Q at least: agreement as if nothing differed between sessions
 	SessionEffect float64 `json:"session_effect,omitempty"` // |effect/u(effect)| of any session at most
 }
 

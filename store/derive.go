@@ -50,9 +50,7 @@ func Fold(name string) string {
 // final value that a report names.
 func derive(raw Raw, finalValue func(Input) (Version[Final], error)) (derived, error) {
 	rows := make(derived, 2)
-	for _, e := range edgesOf(raw) {
-		rows["edges"] = append(rows["edges"], e)
-	}
+	rows["edges"] = append(rows["edges"], edgesOf(raw)...)
 	var err error
 	switch raw.Kind {
 	case KindMaterial, KindSample, KindScale, KindInstrument, KindMethod, KindPerson, KindUnit, KindSession, KindCalibration, KindFinal:

@@ -110,7 +110,8 @@ func TestLeaseHasOneHolderAtATime(t *testing.T) {
 			})
 			return got
 		}
-		if !take("a") || !take("a") || take("b") {
+		taken, renewed := take("a"), take("a")
+		if !taken || !renewed || take("b") {
 			t.Error("a takes and renews, b does not get it")
 		}
 		write(t, s, lab, func(ctx context.Context, tx *store.Tx) error { return tx.DropLease(ctx, "checkpoint", "b") })

@@ -32,6 +32,7 @@ func Build(ctx context.Context, reg *registry.Registry, clock *Clock, seed uint6
 		{"measure solids", b.measureSolids},
 		{"measure waters", b.measureWaters},
 		{"report", b.report},
+		{"run a campaign", b.campaign},
 		{"revoke the first token", b.revoke},
 	} {
 		if err := step.do(ctx); err != nil {

@@ -27,6 +27,7 @@ type Summary struct {
 	Peak      BadPeak
 	SameLabel SameLabel
 	Rejected  Rejection
+	Campaign  Campaign
 
 	truth truth
 }

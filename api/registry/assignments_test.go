@@ -288,6 +288,16 @@ func TestSessionsShareTheBottleTheyUsedAndNoOther(t *testing.T) {
 		t.Errorf("different bottles, recorded or not, differ in covariance by %v", got)
 	}
 	b.verified()
+	// The campaign's value recomputes from a pack alone, without the store.
+	pack, err := b.Pack(b.ctx, b.auditor, codes[0])
+	b.must(err)
+	checked := registry.VerifyPack(b.ctx, pack, registry.PackCheckRequest{})
+	for _, f := range checked.Findings {
+		t.Errorf("pack: %s", f)
+	}
+	if checked.Recomputed < 8 || checked.Equal != checked.Recomputed {
+		t.Errorf("pack: %d of %d equal, want the four campaign sessions, the value, the session, the final value and the line", checked.Equal, checked.Recomputed)
+	}
 }
 
 func TestCandidateThatAnchorsItsOwnCampaignIsRefusedWithThePath(t *testing.T) {

@@ -46,9 +46,11 @@ type CertificateValue struct {
 	Hash                       store.Hash
 	Scale, Measurand, Quantity string
 
-	Value    store.Decimal
-	Number   float64
+	Value  store.Decimal
+	Number float64
+	// U is 0 with Exact, and where no uncertainty is stated.
 	U        float64
+	Exact    bool
 	K        float64
 	Expanded float64
 	P        float64
@@ -215,7 +217,7 @@ func (c *Certificate) value(ctx context.Context, v *store.View, it Item[store.Va
 		return err
 	}
 	out := CertificateValue{Code: it.Code, Version: it.Ref.Version, Hash: it.Hash, Scale: val.Scale, Measurand: val.Measurand, Quantity: s.Value.Quantity,
-		Value: val.Value, Number: x, U: val.StandardUncertainty, Basis: val.Basis, Evidence: val.Evidence, BackLoaded: val.BackLoaded, ValidFrom: it.ValidFrom, ExpiresAt: val.ExpiresAt}
+		Value: val.Value, Number: x, U: val.StandardUncertainty, Exact: val.Exact, Basis: val.Basis, Evidence: val.Evidence, BackLoaded: val.BackLoaded, ValidFrom: it.ValidFrom, ExpiresAt: val.ExpiresAt}
 	if r := val.Campaign; r != nil {
 		out.K, out.Expanded, out.P, out.NuEff = r.K, r.Expanded, r.Probability, r.EffectiveDF
 		out.Budget, out.Sessions, out.Estimator, out.Deviation, out.DriftPerDay = r.Budget, len(r.Sessions), r.Estimator, r.Deviation, r.DriftPerDay
@@ -242,6 +244,12 @@ func (c *Certificate) value(ctx context.Context, v *store.View, it Item[store.Va
 		out.K, out.Expanded, out.P, out.NuEff = e.CoverageFactor, e.U, e.Probability, val.DegreesOfFreedom
 	}
 	out.ValueText, out.ExpandedText = RoundTogether(x, out.Expanded)
+	if out.U == 0 { // the digits are those that were stated
+		out.ValueText, out.ExpandedText = string(val.Value), "none stated"
+		if out.Exact {
+			out.ExpandedText = "exact"
+		}
+	}
 	for _, in := range it.Inputs {
 		switch in.Part {
 		case partCampaign:

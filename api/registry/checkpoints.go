@@ -4,6 +4,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"slices"
 	"strings"
 
 	"deltamoor/store"
@@ -284,4 +285,18 @@ func shortVerifier(verifier string) string {
 		}
 	}
 	return verifier
+}
+
+// outsideOf chooses, of checkpoints kept outside, those of one laboratory's
+// ledger, and those that are of none of the laboratories, so that they are told.
+func (r *Registry) outsideOf(laboratory string, laboratories []string, notes [][]byte) [][]byte {
+	var out [][]byte
+	for _, note := range notes {
+		origin, _, _ := strings.Cut(string(note), "\n")
+		known := slices.ContainsFunc(laboratories, func(other string) bool { return r.Origin(other) == origin })
+		if !known || origin == r.Origin(laboratory) {
+			out = append(out, note)
+		}
+	}
+	return out
 }

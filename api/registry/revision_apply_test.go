@@ -412,3 +412,48 @@ func TestWorkerTakesUpWhatIsProposed(t *testing.T) {
 		t.Errorf("after the worker: %+v", got.Value)
 	}
 }
+
+func TestWrongMethodVersionIsDrawnUpByTheRightOne(t *testing.T) {
+	c := openChain(t, 3, 0.05, calib.WeightsDeclared)
+	right := chainMethod(calib.WeightsReplicate)
+	right.Quantities[0].Model.Drift = calib.DriftLinear
+	_, err := c.StateMethod(c.ctx, c.manager, "C-solid", right, registry.Edit{After: 1, Reason: "drift was left out"})
+	c.must(err)
+	_, err = c.Decide(c.ctx, c.signatory, store.KindMethod, "C-solid", registry.DecisionRequest{Act: "approved", Version: 2})
+	c.must(err)
+	p := registry.Proposal{Full: true, Methods: []registry.ProposedMethod{{Method: "C-solid", Version: 1, Use: 2}}}
+	got, summary := c.preview(p)
+	want := bruteForce(c.everything(), func(raw store.Raw) bool { return raw.Kind == store.KindCalibration })
+	if diff := cmp.Diff(want, keysOf(got)); diff != "" {
+		t.Errorf("affected (-brute force +statement):\n%s", diff)
+	}
+	if summary.Reported.Moved != 4 {
+		t.Errorf("%d deltas move, want the chain's 3 and the branch's", summary.Reported.Moved)
+	}
+	code := c.propose(p).Code
+	c.work("one")
+	set := c.revision(code).Value.Drafted
+	if set.Calibrations != 7 || set.Finals != 4 || len(set.Untold) != 0 {
+		t.Fatalf("drafted %+v, want 7 calibrations and 4 final values", set)
+	}
+	_, err = c.ApproveRevision(c.ctx, c.signatory, code, set.Hash, registry.DecisionRequest{Version: 2})
+	c.must(err)
+	c.work("two")
+	for _, raw := range c.everything() {
+		if raw.Kind != store.KindCalibration || raw.Ref.Version != 2 {
+			continue
+		}
+		now, err := registry.One[store.Calibration](c.ctx, c.Registry, c.auditor, store.KindCalibration, raw.Code, 0, store.Moment{})
+		c.must(err)
+		if now.Version.Ref != raw.Ref || now.Value.Model != right.Quantities[0].Model {
+			t.Errorf("%s is in force with the model %+v, want %s by the right method", now.Version.Ref, now.Value.Model, raw.Ref)
+		}
+	}
+	a := got[c.other.Lines[0].Code]
+	d, err := c.RevisionNotice(c.ctx, c.auditor, code, c.other.Code)
+	c.must(err)
+	// This delta rests on no revised value: its prediction is the refit itself.
+	if x := d[0].NewValue - d[0].Value; math.Abs(x-a.Shift) > 1e-12 || x == 0 {
+		t.Errorf("the branch's delta moves by %v, predicted %v", x, a.Shift)
+	}
+}

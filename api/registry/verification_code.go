@@ -14,9 +14,10 @@ import (
 type ChainVerification struct {
 	// Nodes are the versions of the chain, the start first, generations in order.
 	Nodes []NodeVerification
-	// Ledgers are the heads that the versions' entries were proved against.
+	// Ledgers are the heads that the versions' entries were proved against;
+	// Checkpoints of each is 1 where its newest signed checkpoint leads to that head.
 	Ledgers []LaboratoryVerification
-	// Findings are the differences of all nodes, in the order of nodes.
+	// Findings are the differences: those of ledgers, then those of nodes in their order.
 	Findings []store.Finding
 	// Recomputed counts calibrations, final values, assigned values and report
 	// lines computed again, Equal those whose every bit was the same.
@@ -273,8 +274,50 @@ func (c *chain) head(ctx context.Context, laboratory string) (*chainHead, error)
 	}
 	h := &chainHead{root, size, c.v.TreeHashReader(ctx, laboratory)}
 	c.heads[laboratory] = h
-	c.out.Ledgers = append(c.out.Ledgers, LaboratoryVerification{Laboratory: laboratory, Entries: size, Root: root})
+	l := LaboratoryVerification{Laboratory: laboratory, Entries: size, Root: root}
+	if l.Checkpoints, err = c.anchor(ctx, laboratory, h); err != nil {
+		return nil, err
+	}
+	c.out.Ledgers = append(c.out.Ledgers, l)
 	return h, nil
+}
+
+// anchor holds a ledger's root, which is read off stored nodes, against the
+// newest signed checkpoint: 1 where that leads to it, 0 where there is none or
+// it does not, which is a finding.
+func (c *chain) anchor(ctx context.Context, laboratory string, h *chainHead) (int, error) {
+	last, err := c.v.LastCheckpoint(ctx, laboratory)
+	if errors.Is(err, store.ErrNotFound) {
+		return 0, nil
+	}
+	if err != nil {
+		return 0, err
+	}
+	keys, err := keysOf(ctx, c.v, laboratory)
+	if err == nil {
+		var signed ledger.Signed
+		if signed, err = ledger.Open(last.Note, each(keys, func(k store.Version[store.SigningKey]) string { return k.Value.Verifier })...); err == nil {
+			err = h.continues(signed)
+		}
+	}
+	if err == nil {
+		return 1, nil
+	}
+	if ctx.Err() != nil || MeaningOf(err) == Unavailable {
+		return 0, err
+	}
+	c.out.Findings = append(c.out.Findings, store.Finding{Position: -1, Table: "checkpoints", Key: fmt.Sprintf("%s/%d/%s", laboratory, last.Size, last.Signer),
+		Found: err.Error(), Expected: fmt.Sprintf("a signed checkpoint that leads to the root %s of %d entries", store.Hash(h.root), h.size)})
+	return 0, nil
+}
+
+// continues proves that the head has grown out of what was signed (RFC 6962, 2.1.2).
+func (h *chainHead) continues(signed ledger.Signed) error {
+	proof, err := ledger.ProveConsistency(h.size, signed.Size, h.reader)
+	if err != nil {
+		return err
+	}
+	return ledger.CheckConsistency(proof, h.size, h.root, signed.Size, signed.Root)
 }
 
 // bound verifies what a version holds by hash outside its own body: the

@@ -69,7 +69,7 @@ func (r *Registry) Verify(ctx context.Context, q VerifyRequest) (Verification, e
 	var mu sync.Mutex
 	for _, laboratory := range laboratories {
 		var recomputed []store.Finding
-		found, err := r.store.Verify(ctx, laboratory, store.VerifyOptions{Workers: q.Workers, Progress: q.Progress, Outside: q.Outside, Verifiers: q.Verifiers,
+		found, err := r.store.Verify(ctx, laboratory, store.VerifyOptions{Workers: q.Workers, Progress: q.Progress, Outside: r.outsideOf(laboratory, laboratories, q.Outside), Verifiers: q.Verifiers,
 			Visit: func(ctx context.Context, raw store.Raw) error {
 				var c recheck
 				err := r.store.Read(ctx, func(ctx context.Context, v *store.View) error {

@@ -34,7 +34,6 @@ type Chain struct {
 	chosen        map[string]Distribution
 	groups        []uncertain.Group
 	fits          []fitNode
-	linear        []float64
 }
 
 // A node is a constant, parts of sources, and parts of other quantities; or a

@@ -317,7 +317,7 @@ func TestKeyKeepsItsSecret(t *testing.T) {
 	if err != nil || back != k {
 		t.Errorf("key read back: %v", err)
 	}
-	for _, text := range []string{fmt.Sprint(k), fmt.Sprintf("%+v", k), fmt.Sprintf("%#v", k), fmt.Sprintf("%s", k)} {
+	for _, text := range []string{fmt.Sprint(k), fmt.Sprintf("%+v", k), fmt.Sprintf("%#v", k), k.String()} {
 		if strings.Contains(text, "0123") || strings.Contains(text, hex.EncodeToString([]byte("0123"))) || strings.Contains(text, "48 49") {
 			t.Errorf("printing the key shows it: %s", text)
 		}
