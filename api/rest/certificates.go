@@ -49,9 +49,9 @@ type CertificateValue struct {
 	Measurand    string              `json:"measurand"`
 	Quantity     string              `json:"quantity"`
 	Value        Decimal             `json:"value"`
-	U            float64             `json:"u"`
+	U            *float64            `json:"u" doc:"Null where no uncertainty is stated."`
 	K            float64             `json:"k"`
-	Expanded     float64             `json:"U"`
+	Expanded     *float64            `json:"U"`
 	P            float64             `json:"p"`
 	NuEff        *float64            `json:"nu_eff" doc:"Null where u is known."`
 	ValueText    string              `json:"value_text" doc:"Rounded together with U, to two digits of U."`
@@ -98,13 +98,16 @@ func showCertificate(c registry.Certificate) Certificate {
 		Hazards: convert(c.Hazards, func(h registry.HazardStatement) HazardStatement { return HazardStatement(h) }), Caution: c.Caution, IssuedAt: c.IssuedAt.Time(),
 		Values: convert(c.Values, func(v registry.CertificateValue) CertificateValue {
 			out := CertificateValue{Version: versionText(store.KindValue, v.Code, v.Version), Hash: v.Hash.String(), Scale: v.Scale, Measurand: v.Measurand, Quantity: v.Quantity, Value: Decimal(v.Value),
-				U: v.U, K: v.K, Expanded: v.Expanded, P: v.P, NuEff: v.NuEff, ValueText: v.ValueText, ExpandedText: v.ExpandedText, Basis: v.Basis, Evidence: v.Evidence, BackLoaded: v.BackLoaded,
+				K: v.K, P: v.P, NuEff: v.NuEff, ValueText: v.ValueText, ExpandedText: v.ExpandedText, Basis: v.Basis, Evidence: v.Evidence, BackLoaded: v.BackLoaded,
 				ValidFrom: timePointer(v.ValidFrom), ExpiresAt: timePointer(v.ExpiresAt), DriftPerDay: v.DriftPerDay, Sessions: v.Sessions, First: timePointer(v.First), Last: timePointer(v.Last),
 				Estimator: v.Estimator, Deviation: v.Deviation, Homogeneity: v.Homogeneity, Stability: v.Stability,
 				Budget: convert(v.Budget, func(b store.CampaignBudget) CampaignBudget { return CampaignBudget(b) }),
 				Anchors: convert(v.Anchors, func(a registry.CertificateAnchor) CertificateAnchor {
 					return CertificateAnchor{a.Material, a.Version, Decimal(a.Value), a.U, a.Basis}
 				})}
+			if v.U > 0 || v.Exact {
+				out.U, out.Expanded = &v.U, &v.Expanded
+			}
 			if v.Campaign != "" {
 				out.Campaign = store.FormatCode(v.Campaign)
 			}

@@ -1,156 +1,172 @@
 package main
 
 import (
-	"bytes"
-	"context"
-	"encoding/json"
 	"fmt"
-	"io"
 	"os"
 	"os/exec"
 	"path/filepath"
-	"regexp"
 	"slices"
 	"strings"
 	"testing"
 	"time"
+
+	"deltamoor/store/storetest"
 )
 
-// readmeBlocks are the fenced blocks of README.md that follow <!-- mark -->.
-func readmeBlocks(t *testing.T, mark string) []string {
+// readmeBlocks are the fenced sh blocks of README.md that follow a mark such as
+// <!-- walk -->.
+func readmeBlocks(t *testing.T, name string) []string {
 	t.Helper()
-	text, err := os.ReadFile(filepath.Join("..", "..", "README.md"))
+	text, err := os.ReadFile(filepath.Join(moduleRoot(t), "README.md"))
 	if err != nil {
 		t.Fatal(err)
 	}
-	blocks := regexp.MustCompile("(?s)<!-- "+regexp.QuoteMeta(mark)+" -->\n```sh\n(.*?)```").FindAllStringSubmatch(string(text), -1)
+	var blocks []string
+	for _, after := range strings.Split(string(text), "<!-- "+name+" -->\n")[1:] {
+		body, ok := strings.CutPrefix(after, "```sh\n")
+		block, _, closed := strings.Cut(body, "\n```\n")
+		if !ok || !closed {
+			t.Fatalf("README.md: found no fenced sh block after <!-- %s -->", name)
+		}
+		blocks = append(blocks, block+"\n")
+	}
 	if len(blocks) == 0 {
-		t.Fatalf("README.md has no block marked %q", mark)
+		t.Fatalf("README.md: found no block marked <!-- %s -->", name)
 	}
-	out := make([]string, len(blocks))
-	for i, b := range blocks {
-		out[i] = b[1]
-	}
-	return out
+	return blocks
 }
 
-// needs skips, or fails where DELTAMOOR_TEST_REQUIRE asks for it, when a program is not installed.
-func needs(t *testing.T, program string) {
-	t.Helper()
-	if _, err := exec.LookPath(program); err == nil {
-		return
-	}
-	if slices.Contains(strings.Split(os.Getenv("DELTAMOOR_TEST_REQUIRE"), ","), program) {
-		t.Fatalf("%s is required and not installed", program)
-	}
-	t.Skipf("%s is not installed: the walk of README.md is not walked", program)
-}
-
-// A running is a server in this process, on a free port of the loopback.
-type running struct {
-	url  string
-	stop func() int
-}
-
-// startServe runs `serve` on a data folder until stop is called.
-func startServe(t *testing.T, folder string) running {
-	t.Helper()
-	ctx, cancel := context.WithCancel(context.Background())
-	reader, writer := io.Pipe()
-	status := make(chan int, 1)
-	go func() {
-		status <- run(ctx, []string{"serve", "--data", folder, "--listen", "127.0.0.1:0"}, nil, strings.NewReader(""), writer, io.Discard)
-		writer.Close()
-	}()
-	line := make([]byte, 200)
-	n, err := reader.Read(line)
-	if err != nil {
-		t.Fatalf("serve ended before it answered: %v", err)
-	}
-	go io.Copy(io.Discard, reader)
-	url := regexp.MustCompile(`http://[0-9.:]+`).FindString(string(line[:n]))
-	if url == "" {
-		t.Fatalf("serve said %q, not where it answers", line[:n])
-	}
-	stop := func() int {
-		cancel()
-		select {
-		case s := <-status:
-			return s
-		case <-time.After(20 * time.Second):
-			t.Error("serve did not end within 20 s of being told")
-			return -1
-		}
-	}
-	return running{url, stop}
-}
-
-// initFolder makes a registry and answers with its first token.
-func initFolder(t *testing.T, folder string) string {
-	t.Helper()
-	var out, errs bytes.Buffer
-	if s := run(context.Background(), []string{"init", "--data", folder, "--laboratory", "FJO", "--name", "Fjordane isotope bench", "--person", "mara", "--person-name", "Mara Lind", "--json"},
-		nil, strings.NewReader(""), &out, &errs); s != statusDone {
-		t.Fatalf("init: status %d, %s", s, errs.String())
-	}
-	var answer struct{ Token string }
-	if err := json.Unmarshal(out.Bytes(), &answer); err != nil || answer.Token == "" {
-		t.Fatalf("init answered %s: %v", out.String(), err)
-	}
-	return answer.Token
-}
-
+// TestReadmeWalkEndsInATrace runs what README.md tells people to type, on an
+// empty registry and a running server.
 func TestReadmeWalkEndsInATrace(t *testing.T) {
-	needs(t, "curl")
-	needs(t, "bash")
-	folder := filepath.Join(t.TempDir(), "lab")
-	token := initFolder(t, folder)
-	server := startServe(t, folder)
-	walk := exec.Command("bash", "-euo", "pipefail", "-c", readmeBlocks(t, "walk")[0])
-	walk.Dir = t.TempDir()
-	walk.Env = append(os.Environ(), "URL="+server.url, "TOKEN="+token)
-	out, err := walk.CombinedOutput()
-	if err != nil {
-		t.Fatalf("the walk of README.md: %v\n%s", err, out)
-	}
-	for _, want := range []string{"d13C-VPDB-LSVEC", "USGS40", "NBS 19", "ivo", "run.csv"} {
-		if !bytes.Contains(out, []byte(want)) {
-			t.Errorf("the trace does not speak of %s:\n%s", want, out)
+	for _, program := range []string{"bash", "curl"} {
+		if _, err := exec.LookPath(program); err != nil {
+			if slices.Contains(strings.Split(os.Getenv(storetest.RequireVariable), ","), program) {
+				t.Fatalf("%s asks for %s: %v", storetest.RequireVariable, program, err)
+			}
+			t.Skipf("THE WALK OF README.md IS SKIPPED: %v", err)
 		}
 	}
-	if s := server.stop(); s != statusDone {
-		t.Errorf("serve ended with status %d", s)
+	walk := readmeBlocks(t, "walk")
+	if len(walk) != 1 {
+		t.Fatalf("README.md: found %d blocks marked <!-- walk -->, expected 1", len(walk))
 	}
-	var report, errs bytes.Buffer
-	if s := run(context.Background(), []string{"verify", "--data", folder}, nil, strings.NewReader(""), &report, &errs); s != statusDone {
-		t.Errorf("verify after the walk: status %d\n%s%s", s, report.String(), errs.String())
+	program := filepath.Join(t.TempDir(), "deltamoor")
+	if out, err := exec.Command("go", "build", "-o", program, ".").CombinedOutput(); err != nil {
+		t.Fatalf("go build: %v\n%s", err, out)
+	}
+	data := filepath.Join(t.TempDir(), "lab")
+	token := initRegistry(t, "--data", data)
+	s := serving(t, "--data", data)
+
+	begun := time.Now()
+	command := exec.Command("bash", "-euo", "pipefail", "-c", walk[0])
+	command.Dir = t.TempDir()
+	command.Env = append(cleanEnvironment(), "DELTAMOOR="+program, "URL="+s.url, "TOKEN="+token)
+	var stderr strings.Builder
+	command.Stderr = &stderr
+	out, err := command.Output()
+	t.Logf("%d lines in %v", strings.Count(walk[0], "\n"), time.Since(begun).Round(time.Millisecond))
+	if err != nil {
+		t.Fatalf("%v\n%s\n%s\n%s", err, stderr.String(), out, s.log)
+	}
+	// A trace names the reported delta, the session it comes from and where the chain ends.
+	for _, want := range []string{"‰", "calibration of d13C in session S", "anchored by the value of", "scale d13C-VPDB-LSVEC"} {
+		if !strings.Contains(string(out), want) && !strings.Contains(strings.ReplaceAll(string(out), "anchor: value of", "anchored by the value of"), want) {
+			t.Errorf("the output has no %q:\n%s", want, out)
+		}
+	}
+	if status, stdout, _ := call(t.Context(), nil, "", "verify", "--data", data); status != statusDone {
+		t.Errorf("verify after the walk: status %d\n%s", status, stdout)
 	}
 }
 
+// TestReadmeCommandsExist parses every call of the program in blocks marked
+// <!-- commands -->: the subcommand, its flags and its arguments.
 func TestReadmeCommandsExist(t *testing.T) {
-	p := &program{stdin: strings.NewReader(""), stdout: io.Discard, stderr: io.Discard}
+	checked := 0
 	for _, block := range readmeBlocks(t, "commands") {
-		for line := range strings.Lines(block) {
-			words := strings.Fields(line)
-			if len(words) == 0 || words[0] != "./deltamoor" {
-				continue
-			}
-			cmd, rest, err := p.root().Find(words[1:])
+		for _, line := range strings.Split(strings.ReplaceAll(block, "\\\n", " "), "\n") {
+			args, err := splitWords(line)
 			if err != nil {
-				t.Errorf("%s: %v", strings.TrimSpace(line), err)
+				t.Errorf("%s: %v", line, err)
+			}
+			for len(args) > 0 && strings.Contains(args[0], "=") { // NAME=value before the command
+				args = args[1:]
+			}
+			switch {
+			case len(args) > 0 && filepath.Base(args[0]) == "deltamoor":
+				args = args[1:]
+			case len(args) > 2 && args[0] == "go" && args[1] == "run" && args[2] == "./cmd/deltamoor":
+				args = args[3:]
+			default:
 				continue
 			}
-			var flags []string
-			for _, w := range rest {
-				if strings.HasPrefix(w, "--") {
-					flags = append(flags, w)
-				}
+			if err := parses(args); err != nil {
+				t.Errorf("%s: %v", line, err)
 			}
-			for _, f := range flags {
-				if name := strings.TrimPrefix(f, "--"); cmd.Flags().Lookup(name) == nil && cmd.InheritedFlags().Lookup(name) == nil {
-					t.Errorf("%s: %s has no flag %s", strings.TrimSpace(line), cmd.Name(), fmt.Sprint(f))
-				}
-			}
+			checked++
 		}
 	}
+	if checked == 0 {
+		t.Error("found no call of the program")
+	}
+	for _, wrong := range [][]string{{"frobnicate"}, {"serve", "--port", "1"}, {"trace"}, {"verify", "a", "b"}, {"user", "remove"}} {
+		if parses(wrong) == nil {
+			t.Errorf("%v passes for a call of the program", wrong)
+		}
+	}
+}
+
+// parses tells whether a command line is understood, without doing anything.
+func parses(args []string) error {
+	p := &program{}
+	cmd, rest, err := p.root().Find(args)
+	if err != nil {
+		return err
+	}
+	if err := cmd.ParseFlags(rest); err != nil {
+		return err
+	}
+	if err := cmd.ValidateArgs(cmd.Flags().Args()); err != nil {
+		return err
+	}
+	return cmd.ValidateRequiredFlags()
+}
+
+// splitWords splits a line as a shell does, as far as the README needs it:
+// quotes, and a comment or redirection ends the command.
+func splitWords(line string) ([]string, error) {
+	var words []string
+	var word strings.Builder
+	inside, quote := false, rune(0)
+	end := func() {
+		if inside {
+			words = append(words, word.String())
+			word.Reset()
+			inside = false
+		}
+	}
+	for _, r := range line {
+		switch {
+		case quote != 0 && r == quote:
+			quote = 0
+		case quote != 0:
+			word.WriteRune(r)
+		case r == '"' || r == '\'':
+			quote, inside = r, true
+		case r == ' ' || r == '\t':
+			end()
+		case !inside && strings.ContainsRune("#><|&;", r):
+			return words, nil
+		default:
+			inside = true
+			word.WriteRune(r)
+		}
+	}
+	end()
+	if quote != 0 {
+		return words, fmt.Errorf("quote %c is not closed", quote)
+	}
+	return words, nil
 }

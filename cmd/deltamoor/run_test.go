@@ -25,7 +25,8 @@ func TestMain(m *testing.M) {
 // `status N deltamoor …` is exec with the exit status that is expected.
 func TestScripts(t *testing.T) {
 	testscript.Run(t, testscript.Params{
-		Dir: filepath.Join("testdata", "script"),
+		Dir:           filepath.Join("testdata", "script"),
+		UpdateScripts: *update,
 		Setup: func(env *testscript.Env) error {
 			// What the machine's own configuration says is no part of a test.
 			env.Vars = withoutVariables(env.Vars, variablePrefix)

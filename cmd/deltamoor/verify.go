@@ -21,12 +21,18 @@ recompute the chain of that one number, and prove that each of its versions is
 in the ledger. Each difference is named by table and key, with what was found
 and what is expected. Exit status 1 means that something was found.
 
+With the name of a file that "deltamoor export" wrote, check that evidence pack
+instead, without any database: every hash, proof and signature, and every number
+computed again. Name the laboratory's public key with --key, else the pack is
+held against itself alone.
+
 A ledger cannot show by itself that its newest entries were cut off. A signed
 checkpoint that was kept elsewhere can: name its file with --checkpoint.
 
 Reading asks for the right to open the database, and for no token.`
 	cmd.Example = `  deltamoor verify
   deltamoor verify D7K3M-9Q2XG
+  deltamoor verify evidence.zip --checkpoint kept-elsewhere.txt
   deltamoor verify --laboratory FJO --checkpoint kept-elsewhere.txt`
 	var laboratory string
 	var workers int
@@ -38,7 +44,7 @@ Reading asks for the right to open the database, and for no token.`
 	cmd.Flags().StringArrayVar(&keys, "key", nil, "public `key` to trust beside those recorded; may be repeated")
 	settingFlags(cmd, "data", "database")
 	cmd.Args = func(cmd *cobra.Command, args []string) error {
-		if len(args) == 0 {
+		if len(args) == 0 || len(args) == 1 && isPackFile(args[0]) {
 			return nil
 		}
 		for _, name := range []string{"workers", "checkpoint", "key"} {
@@ -60,6 +66,9 @@ Reading asks for the right to open the database, and for no token.`
 				return err
 			}
 			q.Outside = append(q.Outside, note)
+		}
+		if len(args) == 1 && isPackFile(args[0]) {
+			return p.verifyPack(ctx, args[0], registry.PackCheckRequest{Verifiers: q.Verifiers, Outside: q.Outside})
 		}
 		o, err := p.openRegistry(ctx, cmd, toRead)
 		if err != nil {
