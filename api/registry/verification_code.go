@@ -233,7 +233,7 @@ func (c *chain) check(ctx context.Context, n *NodeVerification, raw store.Raw, l
 // prove holds a version against its ledger entry, and the entry against the
 // root of the ledger.
 func (c *chain) prove(ctx context.Context, n *NodeVerification, raw store.Raw) (bool, error) {
-	key := fmt.Sprintf("%s/%d", raw.Laboratory, raw.Position)
+	key := fmt.Sprintf("%s position %d", raw.Laboratory, raw.Position)
 	head, err := c.head(ctx, raw.Laboratory)
 	if err != nil {
 		return false, n.broken(ctx, err, "tree_hashes", "the nodes of the ledger of "+raw.Laboratory)
@@ -306,7 +306,7 @@ func (c *chain) anchor(ctx context.Context, laboratory string, h *chainHead) (in
 	if ctx.Err() != nil || MeaningOf(err) == Unavailable {
 		return 0, err
 	}
-	c.out.Findings = append(c.out.Findings, store.Finding{Position: -1, Table: "checkpoints", Key: fmt.Sprintf("%s/%d/%s", laboratory, last.Size, last.Signer),
+	c.out.Findings = append(c.out.Findings, store.Finding{Position: -1, Table: "checkpoints", Key: fmt.Sprintf("%s size %d %s", laboratory, last.Size, last.Signer),
 		Found: err.Error(), Expected: fmt.Sprintf("a signed checkpoint that leads to the root %s of %d entries", store.Hash(h.root), h.size)})
 	return 0, nil
 }
@@ -377,7 +377,7 @@ func (c *chain) readings(ctx context.Context, n *NodeVerification, s store.Versi
 			if i < len(found) {
 				have = "rows with hash " + found[i].String()
 			}
-			n.find("readings", fmt.Sprintf("%s readings %d to %d", key, 64*i+1, min(64*(i+1), s.Value.Readings)), have, want.String())
+			n.find("readings", fmt.Sprintf("%s numbers %d to %d", key, 64*i+1, min(64*(i+1), s.Value.Readings)), have, want.String())
 		}
 	}
 	return nil

@@ -82,26 +82,31 @@ func (o *opened) sign(ctx context.Context, log *slog.Logger, readKey func() (*le
 			}
 			return
 		}
-		known, err := o.laboratories(ctx)
-		if err != nil {
-			complain(ctx, log, "sign ledgers", "", err)
-			return
-		}
-		if len(known) == 0 { // not initialised
-			return
-		}
-		for _, laboratory := range append(known, store.Common) {
-			grown, err := o.unsigned(ctx, laboratory)
-			if err == nil && (grown >= signEntries || grown > 0 && time.Since(signed[laboratory]) >= signPeriod) {
-				if _, err = o.SignCheckpoint(ctx, laboratory, *key); err == nil {
-					signed[laboratory] = time.Now()
-				}
-			}
-			if err != nil {
-				complain(ctx, log, "sign the ledger", laboratory, err)
-			}
-		}
+		o.signHeads(ctx, log, *key, signed)
 	})
+}
+
+// signHeads signs the heads that are due once.
+func (o *opened) signHeads(ctx context.Context, log *slog.Logger, key ledger.Key, signed map[string]time.Time) {
+	known, err := o.laboratories(ctx)
+	if err != nil {
+		complain(ctx, log, "sign ledgers", "", err)
+		return
+	}
+	if len(known) == 0 { // not initialised
+		return
+	}
+	for _, laboratory := range append(known, store.Common) {
+		grown, err := o.unsigned(ctx, laboratory)
+		if err == nil && (grown >= signEntries || grown > 0 && time.Since(signed[laboratory]) >= signPeriod) {
+			if _, err = o.SignCheckpoint(ctx, laboratory, key); err == nil {
+				signed[laboratory] = time.Now()
+			}
+		}
+		if err != nil {
+			complain(ctx, log, "sign the ledger", laboratory, err)
+		}
+	}
 }
 
 // unsigned counts the entries since the last checkpoint.

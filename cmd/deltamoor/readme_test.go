@@ -70,9 +70,9 @@ func TestReadmeWalkEndsInATrace(t *testing.T) {
 	if err != nil {
 		t.Fatalf("%v\n%s\n%s\n%s", err, stderr.String(), out, s.log)
 	}
-	// A trace names the reported delta, the session it comes from and where the chain ends.
-	for _, want := range []string{"‰", "calibration of d13C in session S", "anchored by the value of", "scale d13C-VPDB-LSVEC"} {
-		if !strings.Contains(string(out), want) && !strings.Contains(strings.ReplaceAll(string(out), "anchor: value of", "anchored by the value of"), want) {
+	// A trace goes from the reported delta through its session and the anchors' values to a scale.
+	for _, want := range []string{"‰", "calibration of ", " in session S", "value of USGS40 on d13C-VPDB-LSVEC", "scale d13C-VPDB-LSVEC"} {
+		if !strings.Contains(string(out), want) {
 			t.Errorf("the output has no %q:\n%s", want, out)
 		}
 	}

@@ -188,7 +188,7 @@ func (p *program) verifyChain(ctx context.Context, o *opened, laboratory, text s
 	if p.json {
 		answer := verifyAnswer{Clean: v.Clean(), Ledgers: []ledgerAnswer{}, Recomputed: v.Recomputed, Equal: v.Equal, Proved: &v.Proved, Findings: findingAnswers(v.Findings), Cut: v.Cut}
 		for _, l := range v.Ledgers {
-			answer.Ledgers = append(answer.Ledgers, ledgerAnswer{Laboratory: l.Laboratory, Entries: l.Entries, Root: store.Hash(l.Root).String()})
+			answer.Ledgers = append(answer.Ledgers, ledgerAnswer{l.Laboratory, l.Entries, store.Hash(l.Root).String(), &l.Checkpoints})
 		}
 		for _, n := range v.Nodes {
 			answer.Versions = append(answer.Versions, nodeAnswer{n.Laboratory, string(n.Kind), codeOf(n.Kind, n.Code), n.Version, n.Hash.String(), n.Position, n.Recomputed, n.Equal, n.Proved, len(n.Findings)})
@@ -203,9 +203,9 @@ func (p *program) verifyChain(ctx context.Context, o *opened, laboratory, text s
 		return err
 	}
 	fmt.Fprintln(p.stdout)
-	heads := newTable("ledger", ">entries", "root")
+	heads := newTable("ledger", ">entries", ">checkpoints", "root")
 	for _, l := range v.Ledgers {
-		heads.add(l.Laboratory, fmt.Sprint(l.Entries), store.Hash(l.Root).String())
+		heads.add(l.Laboratory, fmt.Sprint(l.Entries), fmt.Sprint(l.Checkpoints), store.Hash(l.Root).String())
 	}
 	if err := heads.print(p.stdout); err != nil {
 		return err
