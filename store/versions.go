@@ -54,8 +54,21 @@ func (v *View) Head(ctx context.Context, laboratory string) (Head, error) {
 }
 
 // selectLaboratories is the one statement that looks across laboratories: it
-// tells their names and nothing else.
-const selectLaboratories = `SELECT laboratory FROM ledger_heads ORDER BY laboratory`
+// tells their names and nothing else. It reads history beside the heads, which
+// are derived: a head taken away must not hide its laboratory from verify. Each
+// name is found by one step along the key, however many rows it has.
+const selectLaboratories = `WITH RECURSIVE
+		bound(laboratory) AS (
+			SELECT min(laboratory) FROM entries
+			UNION ALL
+			SELECT (SELECT min(e.laboratory) FROM entries e WHERE e.laboratory > b.laboratory) FROM bound b WHERE b.laboratory IS NOT NULL),
+		stated(laboratory) AS (
+			SELECT min(laboratory) FROM versions
+			UNION ALL
+			SELECT (SELECT min(v.laboratory) FROM versions v WHERE v.laboratory > s.laboratory) FROM stated s WHERE s.laboratory IS NOT NULL)
+	SELECT laboratory FROM bound WHERE laboratory IS NOT NULL
+	UNION SELECT laboratory FROM stated WHERE laboratory IS NOT NULL
+	UNION SELECT laboratory FROM ledger_heads ORDER BY laboratory`
 
 // Laboratories returns the names of all laboratories that have a ledger, common
 // included.

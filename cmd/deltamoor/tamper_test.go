@@ -310,3 +310,18 @@ func TestTamperingCoversEveryTableOfHistory(t *testing.T) {
 		t.Errorf("%v are no tables of history", covered)
 	}
 }
+
+// The list of laboratories must not rest on a derived row alone.
+func TestVerifySeesALaboratoryWhoseHeadWasTakenAway(t *testing.T) {
+	x := buildTampered(t)
+	status, answer := verifyJSON(t, "--data", x.edit(t, `DELETE FROM ledger_heads WHERE laboratory = '$LAB'`))
+	if status != statusRefused || answer.Clean {
+		t.Fatalf("verify without the head of %s: status %d, clean %v", x.lab, status, answer.Clean)
+	}
+	for _, l := range answer.Ledgers {
+		if l.Laboratory == x.lab {
+			return
+		}
+	}
+	t.Errorf("laboratory %s was passed over: %+v", x.lab, answer.Ledgers)
+}
