@@ -28,7 +28,9 @@ var permissions = map[string]registry.Permission{
 	"addPerson": registry.MayAdminister, "changePerson": registry.MayAdminister, "listTokens": registry.MayAdminister,
 	// Everybody may make, see and end tokens of their own; of others only administrators.
 	"addToken": registry.MayRead, "revokeToken": registry.MayAdminister, "getToken": registry.MayAdminister, "listTokenVersions": registry.MayAdminister, "getTokenVersion": registry.MayAdminister,
-	"verify": registry.MayRead, "calculateFit": registry.MayRead,
+	"verify": registry.MayRead, "calculateFit": registry.MayRead, "calculateConversion": registry.MayRead,
+	"addRelation": registry.MayManage, "changeRelation": registry.MayManage, "decideRelation": registry.MayApprove, "convertValue": registry.MayManage, "convertFinal": registry.MayFit,
+	"addFactor": registry.MayFit, "decideFactor": registry.MayApprove,
 }
 
 // TestAccessOfEveryRoleToEveryRoute asks every operation of the description as
@@ -144,7 +146,7 @@ func (b *bench) unchangedOf(laboratory, what string, f func()) {
 // fill puts the journey's codes into a path, and adds required parameters.
 func (b *bench) fill(j journey, path string, op *operation) string {
 	b.t.Helper()
-	code := map[string]string{"scales": "d13C-VPDB-LSVEC", "materials": "FJO-GLY", "units": j.unit, "instruments": "EA1", "methods": "C-solid", "sessions": j.session,
+	code := map[string]string{"scales": "d13C-VPDB-LSVEC", "relations": "C-OWN", "materials": "FJO-GLY", "units": j.unit, "instruments": "EA1", "methods": "C-solid", "sessions": j.session,
 		"calibrations": j.calibration, "samples": j.sample, "finals": j.final, "reports": j.report, "reported": j.reported, "laboratories": "TST", "people": "ana", "tokens": j.token, "assignments": j.assignment, "revisions": j.revision, "jobs": j.job}
 	noun := strings.Split(path, "/")[2]
 	out := strings.NewReplacer("{code}", code[noun], "{scale}", "d13C-VPDB-LSVEC", "{measurand}", "total", "{quantity}", "d13C", "{version}", "1", "{sha256}", j.upload, "{position}", "2", "{report}", j.report).Replace(path)
@@ -179,6 +181,9 @@ func body(operationID string, j journey) string {
 		"quarantineUnit":     map[string]any{"reason": "r", "since": "2025-01-01T00:00:00Z"},
 		"backLoadValues": map[string]any{"values": []any{map[string]any{"material": "FJO-GLY", "scale": "d13C-VPDB-LSVEC", "value": 1, "stated": map[string]any{"text": "0.1", "kind": "standard"},
 			"basis": "literature", "evidence": "e", "valid_from": "2025-01-01T00:00:00Z"}}},
+		"addRelation": relation("NEW"), "changeRelation": with(relation(""), "reason", "r"),
+		"convertValue": map[string]any{"relation": "C-OWN", "valid_from": "2025-01-01T00:00:00Z"}, "convertFinal": map[string]any{"relation": "C-OWN"},
+		"calculateConversion": map[string]any{"relation": "C-OWN", "scale": "d13C-VPDB", "value": -26}, "addFactor": hydrogenFactor(),
 		"addInstrument": map[string]any{"code": "NEW", "name": "x"}, "changeInstrument": map[string]any{"reason": "r", "name": "x"},
 		"addMethod":      map[string]any{"code": "NEW", "title": "x", "quantities": []any{map[string]any{"quantity": "d13C", "scale": "d13C-VPDB"}}},
 		"changeMethod":   map[string]any{"reason": "r", "title": "x", "quantities": []any{map[string]any{"quantity": "d13C", "scale": "d13C-VPDB"}}},

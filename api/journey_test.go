@@ -71,6 +71,9 @@ func (b *bench) travel() journey {
 	b.decide(registry.Signatory, value, "approved")
 
 	b.post(registry.Manager, "/v1/instruments", map[string]any{"code": "EA1", "name": "first instrument"})
+	b.post(registry.Signatory, "/v1/instruments/EA1/h3-factors", hydrogenFactor())
+	b.post(registry.Manager, "/v1/relations", relation("C-OWN"))
+	b.decide(registry.Signatory, "/v1/relations/C-OWN", "approved")
 	b.post(registry.Manager, "/v1/methods", carbonMethod())
 	b.decide(registry.Signatory, "/v1/methods/C-solid", "approved")
 
@@ -165,6 +168,8 @@ func (b *bench) everything(j journey) {
 		"/v1/materials", "/v1/materials?laboratory=common&limit=3", "/v1/materials/USGS41", "/v1/materials/FJO-GLY", "/v1/materials/FJO-GLY/versions", "/v1/materials/FJO-GLY/versions/1",
 		"/v1/materials/FJO-GLY/units", "/v1/materials/FJO-GLY/values", "/v1/units", "/v1/units/" + j.unit, "/v1/units/" + j.unit + "/versions", "/v1/units/" + j.unit + "/versions/1", "/v1/units/" + j.unit + "/trace",
 		value, value + "/versions", value + "/versions/1", value + "/decisions", value + "/trace",
+		"/v1/relations", "/v1/relations/C-OWN", "/v1/relations/C-OWN/versions", "/v1/relations/C-OWN/versions/1", "/v1/relations/C-OWN/decisions",
+		"/v1/instruments/EA1/h3-factors", "/v1/instruments/EA1/h3-factors?format=csv", "/v1/instruments/EA1/h3-factors/1", "/v1/instruments/EA1/h3-factors/decisions",
 		"/v1/instruments", "/v1/instruments/EA1", "/v1/instruments/EA1/versions", "/v1/instruments/EA1/versions/1",
 		"/v1/methods", "/v1/methods/C-solid", "/v1/methods/C-solid/versions", "/v1/methods/C-solid/versions/1", "/v1/methods/C-solid/decisions",
 		"/v1/sessions", session, session + "/versions", session + "/versions/1", session + "/trace", session + "/readings", session + "/readings?limit=3", session + "/exclusions",
@@ -193,6 +198,14 @@ func (b *bench) everything(j journey) {
 	b.post(registry.Manager, "/v1/instruments/EA1/versions", map[string]any{"reason": "moved", "name": "first instrument", "location": "room 14"}, "If-Match", b.newestTag("/v1/instruments/EA1"))
 	b.post(registry.Analyst, "/v1/units/"+j.unit+"/versions", map[string]any{"reason": "opened", "state": "open"}, "If-Match", b.newestTag("/v1/units/"+j.unit))
 	b.post(registry.Manager, value+"/versions", `{"reason":"a digit","value":-26.391,"stated":{"text":"0.08","kind":"expanded","k":2},"basis":"certificate","valid_from":"2025-01-01T00:00:00Z"}`, "If-Match", b.newestTag(value))
+	b.post(registry.Manager, "/v1/relations/C-OWN/versions", with(relation(""), "reason", "a digit"), "If-Match", b.newestTag("/v1/relations/C-OWN"))
+	b.post(registry.Manager, value+"/conversions", map[string]any{"relation": "C-OWN", "valid_from": "2025-01-01T00:00:00Z"})
+	b.post(registry.Analyst, final+"/conversions", map[string]any{"relation": "C-OWN"})
+	converted := b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/calculations/conversion", body: map[string]any{"relation": "d18O-VPDB-VSMOW", "scale": "d18O-VPDB", "value": -2.2}})
+	if got := converted.at(b.t, "value").(float64); got < 28.6519 || got > 28.6521 { // 1.03092 × −2.2 + 30.92 (Brand et al. 2014)
+		b.t.Errorf("−2.2 ‰ on VPDB is %v on VSMOW", got)
+	}
+	b.post(registry.Signatory, "/v1/instruments/EA1/h3-factors/decisions", map[string]any{"decision": "approved", "version": 1}, "If-Match", b.get(registry.Auditor, "/v1/instruments/EA1/h3-factors/1").Header.Get("ETag"))
 	method := carbonMethod()
 	delete(method, "code")
 	method["reason"] = "title"
@@ -221,6 +234,25 @@ func (b *bench) everything(j journey) {
 
 	empty := b.post(registry.Analyst, "/v1/sessions", map[string]any{"instrument": "EA1", "method": "C-solid", "label": "second"})
 	b.post(registry.Analyst, "/v1/sessions/"+empty.text(b.t, "code")+"/readings?name=second.csv", strings.Replace(carbonCSV(j.sample), "2026-03-02", "2026-03-03", -1), "Content-Type", csvType)
+}
+
+// hydrogenFactor are pulses on ratio = 282 + 5·I with a scatter.
+func hydrogenFactor() map[string]any {
+	var pulses []any
+	for i, r := range []float64{287.01, 291.98, 297.02, 302, 306.99} {
+		pulses = append(pulses, map[string]any{"intensity": i + 1, "ratio": r})
+	}
+	return map[string]any{"origin": "pulses", "determined_at": "2026-03-02T06:00:00Z", "ratio_unit": "ppm", "intensity_unit": "nA", "shape": "flat", "pulses": pulses}
+}
+
+// relation is an invented conversion between the two realisations of the carbon scale.
+func relation(code string) map[string]any {
+	m := map[string]any{"sort": "conversion", "title": "between the realisations", "from": "d13C-VPDB", "to": "d13C-VPDB-LSVEC", "factor": 1.005, "offset": 0.01,
+		"covariance": []any{[]any{1e-6, 0}, []any{0, 1e-4}}, "evidence": "invented for this test", "valid_from": "2024-01-01T00:00:00Z"}
+	if code != "" {
+		m["code"] = code
+	}
+	return m
 }
 
 // lineFit is a line through three anchors with declared weights.

@@ -270,6 +270,10 @@ type MethodQuantity struct {
 	// BetweenSession (‰) is added to every result, with its evidence.
 	BetweenSession *Component     `json:"between_session,omitempty"`
 	Roles          []MaterialRole `json:"roles,omitempty"`
+	// What is done to the readings before the fit; nil for nothing.
+	H3      *H3Rule    `json:"h3,omitempty"`
+	Blank   *BlankRule `json:"blank,omitempty"`
+	Repeats *Repeats   `json:"repeats,omitempty"`
 }
 
 // A Component is an uncertainty component of a method, with where it comes from.
@@ -300,6 +304,8 @@ type Limits struct {
 	ControlDeviation float64 `json:"control_deviation,omitempty"` // ‰
 	ReplicateSD      float64 `json:"replicate_sd,omitempty"`      // ‰
 	ControlRequired  bool    `json:"control_required,omitempty"`
+	// MinimumResolution of neighbouring peaks of one analysis; 1.5 separates them to the base line.
+	MinimumResolution float64 `json:"minimum_resolution,omitempty"`
 }
 
 // A Correction declares where one correction is made. State "" is "not said", which cannot be approved.
@@ -309,6 +315,9 @@ type Correction struct {
 	State     string `json:"state"`              // earlier here "not applicable" "not said"
 	By        string `json:"by,omitempty"`
 	Constants string `json:"constants,omitempty"`
+	// Relations are codes of registered relations whose constants it used; a
+	// session pins the versions that held when it started.
+	Relations []string `json:"relations,omitempty"`
 }
 
 // Approval says who approves calibrations, final values and reports of the method.
@@ -342,6 +351,8 @@ type Mapping struct {
 	TimeLayout string            `json:"time_layout,omitempty"`
 	Columns    Columns           `json:"columns"`
 	Quantities []QuantityColumns `json:"quantities"`
+	// WidthBy says where the widths of peaks are measured: "base" or "half-height".
+	WidthBy string `json:"width_by,omitempty"`
 	// RoleWords translates the role column's words.
 	RoleWords map[string]calib.Role `json:"role_words,omitempty"`
 }
@@ -360,17 +371,23 @@ type Columns struct {
 	Amount      string `json:"amount,omitempty"`
 	Compound    string `json:"compound,omitempty"`
 	Retention   string `json:"retention,omitempty"`
+	Width       string `json:"width,omitempty"`
 	Group       string `json:"group,omitempty"`
 	Warning     string `json:"warning,omitempty"`
 }
 
 // QuantityColumns are the columns of one quantity; When restricts it to rows where a column has a value.
 type QuantityColumns struct {
-	Quantity string     `json:"quantity"`
-	Raw      string     `json:"raw"`
-	U        string     `json:"u,omitempty"`
-	Size     string     `json:"size,omitempty"`
-	When     *Condition `json:"when,omitempty"`
+	Quantity string `json:"quantity"`
+	Raw      string `json:"raw"`
+	U        string `json:"u,omitempty"`
+	Size     string `json:"size,omitempty"`
+	// For the H3 factor: the peak's m/z 2 intensity, and the reference pulse's
+	// intensity and ratio of m/z 3 to m/z 2.
+	Intensity    string     `json:"intensity,omitempty"`
+	GasIntensity string     `json:"gas_intensity,omitempty"`
+	GasRatio     string     `json:"gas_ratio,omitempty"`
+	When         *Condition `json:"when,omitempty"`
 	// Optional quantities may be empty in a row, which then gives no reading of it.
 	Optional bool `json:"optional,omitempty"`
 }

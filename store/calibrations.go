@@ -19,6 +19,10 @@ type Calibration struct {
 	Excluded []int `json:"excluded,omitempty"`
 
 	Anchors []CalibrationAnchor `json:"anchors"`
+	// What was done to the readings before the fit.
+	Corrections []CalibrationCorrection `json:"corrections,omitempty"`
+	SetAside    []int                   `json:"set_aside,omitempty"` // by the method's rule on repeats
+	Means       []MeanReading           `json:"means,omitempty"`
 
 	Parameters          []Parameter `json:"parameters"`
 	Covariance          [][]float64 `json:"covariance"`
@@ -97,7 +101,9 @@ type Line struct {
 
 // ReadingDiagnosis is what a fit says of one reading, by its number in the session.
 type ReadingDiagnosis struct {
-	Number       int      `json:"number"`
+	Number int `json:"number"`
+	// Corrected is the raw delta (‰) as it entered the fit, where it is not the reading's own.
+	Corrected    *float64 `json:"corrected,omitempty"`
 	Predicted    *float64 `json:"predicted,omitempty"`
 	Residual     *float64 `json:"residual,omitempty"`
 	Standardized *float64 `json:"standardized,omitempty"`

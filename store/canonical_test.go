@@ -46,6 +46,13 @@ func bodies(t *testing.T) map[string]store.Draft {
 		{Kind: store.KindMethod, Code: "EA-C", Value: store.Method{Title: "Carbon in organic matter",
 			Quantities: []store.MethodQuantity{{Quantity: "d13C", Scale: "d13C-VPDB", Limits: store.Limits{LeftOut: 3, MinimumSpan: 20}}},
 			Approval:   store.Approval{SecondPerson: true}}},
+		{Kind: store.KindFactor, Code: "HTC-1", Value: store.Factor{Instrument: "HTC-1", Quantity: "d2H", Origin: "pulses", DeterminedAt: at, K: 4.1, U: 0.05, DegreesOfFreedom: pointer(1.0),
+			RatioUnit: "ppm", IntensityUnit: "nA", Resistor: 1e9, Shape: "flat", Pulses: []store.FactorPulse{{Intensity: 1, Ratio: 286.1}, {Intensity: 2, Ratio: 290.2, U: pointer(0.1)}, {Intensity: 3, Ratio: 294.3}},
+			Zero: pointer(282.0), ResidualSD: pointer(0.01), Residuals: []float64{0.01, -0.02, 0.01}, Lowest: pointer(1.0), Highest: pointer(3.0), Settings: "tuned", Gas: "cylinder 4", Evidence: "log",
+			Before: &store.FactorBefore{Version: 1, K: 4, U: 0.05, Z: pointer(1.4)}}},
+		{Kind: store.KindRelation, Code: "O-OWN", Value: store.Relation{Sort: "conversion", Title: "oxygen", Expression: "y = A·x + B", From: "d18O-VPDB", To: "d18O-VSMOW-SLAP", Factor: "1.03092", Offset: "30.920",
+			Covariance: &[2][2]float64{{1e-10, 0}, {0, 1e-4}}, Constant: "0.528", StandardUncertainty: pointer(0.001), Lowest: pointer(-60.0), Highest: pointer(40.0), Stated: "as printed", StatedUncertainty: "none",
+			Domain: "calcite", Evidence: "a paper", Provisional: true, Note: "n"}},
 		{Kind: store.KindSample, Code: "P1", Value: store.Sample{Client: "Institute", Label: "leaf 7", Wanted: []store.Wanted{{Scale: "d13C-VPDB"}}}},
 		sessionDraft("S1", readings("S1", 70), &hash),
 		{Kind: store.KindExclusion, Code: "S1", Value: store.Exclusion{Session: "S1", Act: "exclude", Readings: []int{3, 7}, Cause: "leak"}},
@@ -112,6 +119,8 @@ func TestCanonicalBytesOfEveryFormStayTheSame(t *testing.T) {
 		}
 	}
 }
+
+func pointer[T any](x T) *T { return &x }
 
 func TestGoldenFilesCoverEveryForm(t *testing.T) {
 	files, err := filepath.Glob("*.go")

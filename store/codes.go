@@ -29,7 +29,6 @@ const (
 	LetterUnit        = 'B'
 	LetterSample      = 'P'
 	LetterAssignment  = 'A'
-	LetterFactor      = 'F'
 	LetterRevision    = 'X'
 	LetterJob         = 'J'
 	LetterToken       = 'T'
@@ -54,8 +53,6 @@ func CodeKind(letter byte) Kind {
 		return KindSample
 	case LetterAssignment:
 		return KindAssignment
-	case LetterFactor:
-		return KindFactor
 	case LetterRevision:
 		return KindRevision
 	case LetterToken:

@@ -133,9 +133,11 @@ func (c column) mapped() bool { return c.index >= 0 }
 type quantityColumns struct {
 	quantity     string
 	raw, u, size column
-	when         column
-	equals       string
-	optional     bool
+	// for the H3 factor
+	intensity, gasIntensity, gasRatio column
+	when                              column
+	equals                            string
+	optional                          bool
 }
 
 // A layout of columns is a mapping found in a file's headings.
@@ -143,8 +145,8 @@ type columns struct {
 	headings []string
 	ignored  []string
 
-	name, role, unit, analysis, preparation, position, peak column
-	time, date, amount, compound, retention, group, warning column
+	name, role, unit, analysis, preparation, position, peak        column
+	time, date, amount, compound, retention, width, group, warning column
 
 	quantities []quantityColumns
 }
@@ -211,16 +213,20 @@ func findColumns(message string, m store.Mapping, row int, cells []cell) (*colum
 	f.amount = find(k.Amount, "the amount")
 	f.compound = find(k.Compound, "the compound")
 	f.retention = find(k.Retention, "the retention")
+	f.width = find(k.Width, "the width of the peak")
 	f.group = find(k.Group, "the group")
 	f.warning = find(k.Warning, "the instrument's warning")
 	for _, q := range m.Quantities {
 		p := quantityColumns{
-			quantity: q.Quantity,
-			raw:      find(q.Raw, "the raw delta of "+q.Quantity),
-			u:        find(q.U, "u of "+q.Quantity),
-			size:     find(q.Size, "the size of "+q.Quantity),
-			when:     column{index: -1},
-			optional: q.Optional,
+			quantity:     q.Quantity,
+			raw:          find(q.Raw, "the raw delta of "+q.Quantity),
+			u:            find(q.U, "u of "+q.Quantity),
+			size:         find(q.Size, "the size of "+q.Quantity),
+			intensity:    find(q.Intensity, "the intensity of "+q.Quantity),
+			gasIntensity: find(q.GasIntensity, "the reference pulse's intensity"),
+			gasRatio:     find(q.GasRatio, "the reference pulse's ratio"),
+			when:         column{index: -1},
+			optional:     q.Optional,
 		}
 		if q.When != nil {
 			p.when, p.equals = find(q.When.Column, "the condition of "+q.Quantity), plainSpaces(q.When.Equals)

@@ -26,12 +26,18 @@ type jsonReading struct {
 	Amount      *float64       `json:"amount"`
 	Compound    string         `json:"compound"`
 	Retention   *float64       `json:"retention"`
+	Width       *float64       `json:"width"`
+	WidthBy     string         `json:"width_by" enum:",base,half-height"`
 	Group       string         `json:"group"`
 	Warning     string         `json:"warning"`
 	Quantity    string         `json:"quantity" required:"true"`
 	Raw         float64        `json:"raw" required:"true"`
 	U           *float64       `json:"u"`
 	Size        *float64       `json:"size"`
+
+	Intensity    *float64 `json:"intensity"`
+	GasIntensity *float64 `json:"gas_intensity"`
+	GasRatio     *float64 `json:"gas_ratio"`
 }
 
 // ReadReadingsJSON reads {"readings": […]}, each with the members of

@@ -43,6 +43,8 @@ func (t *tableReader) readRow(cells []cell) {
 		Amount:      t.optional(cells, f.amount, false),
 		Compound:    t.text(cells, f.compound),
 		Retention:   t.optional(cells, f.retention, false),
+		Width:       t.optional(cells, f.width, false),
+		WidthBy:     t.mapping.WidthBy,
 		Group:       t.text(cells, f.group),
 		Warning:     t.text(cells, f.warning),
 	}
@@ -78,6 +80,9 @@ func (t *tableReader) readRow(cells []cell) {
 		r.Quantity, r.Raw = q.quantity, *raw
 		r.U = t.uncertainty(cells, q.u)
 		r.Size = t.optional(cells, q.size, false)
+		r.Intensity = t.optional(cells, q.intensity, false)
+		r.GasIntensity = t.optional(cells, q.gasIntensity, false)
+		r.GasRatio = t.optional(cells, q.gasRatio, false)
 		gave = true
 		if t.faults.count() > 0 {
 			continue // nothing will be imported: from here only the faults matter

@@ -222,6 +222,7 @@ func headingWords() []headingWord {
 		{func(m *store.Mapping, h string) { m.Columns.Amount = h }, []string{"amount", "mass", "weight", "amountmg", "massmg", "weightmg", "amountug"}, ""},
 		{func(m *store.Mapping, h string) { m.Columns.Compound = h }, []string{"compound", "component"}, ""},
 		{func(m *store.Mapping, h string) { m.Columns.Retention = h }, []string{"retention", "retentiontime", "retentions"}, ""},
+		{func(m *store.Mapping, h string) { m.Columns.Width = h }, []string{"width", "peakwidth", "widths"}, ""},
 		{func(m *store.Mapping, h string) { m.Columns.Group = h }, []string{"group", "batch"}, ""},
 		{func(m *store.Mapping, h string) { m.Columns.Warning = h }, []string{"warning", "remark", "comment", "note"}, ""},
 	}

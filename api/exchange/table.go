@@ -263,6 +263,8 @@ func (f *columns) of(field string, quantity int) column {
 		return f.compound
 	case "retention":
 		return f.retention
+	case "width":
+		return f.width
 	case "group":
 		return f.group
 	case "warning":
@@ -275,6 +277,12 @@ func (f *columns) of(field string, quantity int) column {
 		return q.u
 	case "size":
 		return q.size
+	case "intensity":
+		return q.intensity
+	case "gas_intensity":
+		return q.gasIntensity
+	case "gas_ratio":
+		return q.gasRatio
 	}
 	return column{index: -1}
 }

@@ -26,7 +26,12 @@ type assembly struct {
 	excluded map[int]bool
 	anchors  []store.Version[store.Value]
 	controls map[string]store.Version[store.Value]
-	flags    []calib.Flag
+	// factor is the H3 factor applied here, earlier the one a program had applied
+	// before the file was written; nil for none.
+	factor, earlier *store.Version[store.Factor]
+	flags           []calib.Flag
+	// prepared is what the readings became before the last fit.
+	prepared preparation
 }
 
 // assemble chooses what a new fit is made of, and names it as inputs.
@@ -101,6 +106,11 @@ func assemble(ctx context.Context, v *store.View, laboratory string, q FitReques
 			inputs = append(inputs, store.Input{Part: "control", Ref: value.Ref})
 		}
 	}
+	factors, err := a.chooseFactors(ctx, v, laboratory, q.Factor)
+	if err != nil {
+		return a, nil, err
+	}
+	inputs = append(inputs, factors...)
 	units, err := a.units(ctx, v, laboratory)
 	if err != nil {
 		return a, nil, err
@@ -162,6 +172,14 @@ func assembleStored(ctx context.Context, v source, c store.Version[store.Calibra
 			var value store.Version[store.Value]
 			value, err = decodeVersion[store.Value](ctx, v, in.Ref)
 			a.controls[value.Value.Material] = value
+		case "factor", "factor earlier":
+			var f store.Version[store.Factor]
+			f, err = decodeVersion[store.Factor](ctx, v, in.Ref)
+			if in.Part == "factor" {
+				a.factor = &f
+			} else {
+				a.earlier = &f
+			}
 		}
 		if err != nil {
 			return a, fmt.Errorf("load %s of %s: %w", in.Part, c.Ref, err)
@@ -275,25 +293,21 @@ func (a *assembly) input() (calib.Session, calib.Policy, error) {
 			}
 		}
 	}
-	for _, rd := range a.readings {
-		in := calib.Reading{ID: fmt.Sprintf("%s/%d", rd.Session, rd.Number), Subject: rd.Material, Role: rd.Role, Raw: rd.Raw,
-			StandardUncertainty: rd.U, Size: rd.Size, Excluded: a.excluded[rd.Number]}
-		if rd.Sample != "" {
-			in.Subject = rd.Sample
-		}
-		if rd.Preparation != "" {
-			in.Preparation = in.Subject + "/" + rd.Preparation
-		}
-		switch {
-		case rd.At != nil:
-			hours := float64(*rd.At-*a.origin) / 3600e6
-			in.Time = &hours
-		case a.origin == nil && rd.Position != nil: // position stands in for time where the file has no clock
-			position := float64(*rd.Position)
-			in.Time = &position
-		}
-		s.Readings = append(s.Readings, in)
+	var err error
+	if a.prepared, err = a.prepare(); err != nil {
+		return s, calib.Policy{}, err
 	}
+	for _, rd := range a.prepared.readings {
+		s.Readings = append(s.Readings, rd.Reading)
+	}
+	for j, in := range a.prepared.shared {
+		k := calib.Correction{Name: in.name, Input: in.value}
+		for _, rd := range a.prepared.readings {
+			k.PerReading = append(k.PerReading, rd.per[j])
+		}
+		s.Corrections = append(s.Corrections, k)
+	}
+	s.Groups = append(s.Groups, a.prepared.groups...)
 	l := a.limits
 	p := calib.Policy{Probability: l.Probability, CoverageFactor: l.CoverageFactor, LeftOutLimit: l.LeftOut, StudentizedLimit: l.Studentized,
 		MinimumSpan: l.MinimumSpan, AdvisedSpan: l.AdvisedSpan, MinimumAnchors: l.MinimumAnchors}
@@ -305,4 +319,48 @@ func (a *assembly) input() (calib.Session, calib.Policy, error) {
 		}
 	}
 	return s, p, nil
+}
+
+// chooseFactors finds the H3 factors that a fit rests on: the one to apply,
+// where the session declares the correction as made here or another factor is
+// asked for, and the one that a program applied before.
+func (a *assembly) chooseFactors(ctx context.Context, v *store.View, laboratory string, wanted int) ([]store.Input, error) {
+	k, ok := a.declared("h3")
+	if a.spec.Quantity != "d2H" {
+		k, ok = store.Correction{}, false // H3+ forms of hydrogen alone
+	}
+	if !ok || k.State != "here" && k.State != "earlier" {
+		if wanted != 0 {
+			return nil, Complain(cannotFit, []Complaint{{Place: "body.factor", Found: fmt.Sprint(wanted), Expected: "nothing: the session declares the H3 correction as " + quote(k.State)}})
+		}
+		return nil, nil
+	}
+	instrument, at := a.session.Value.Instrument, *a.session.Value.StartedAt
+	var inputs []store.Input
+	if k.State == "earlier" {
+		f, err := factorAt(ctx, v, laboratory, instrument, 0, at)
+		switch {
+		case err == nil:
+			a.earlier = &f
+			inputs = append(inputs, store.Input{Part: "factor earlier", Ref: f.Ref})
+		case ignoreNotFound(err) != nil:
+			return nil, err
+		case wanted != 0:
+			return nil, Complain(cannotFit, []Complaint{{Place: "body.factor", Found: fmt.Sprint(wanted),
+				Expected: "the factor that was applied earlier on record first: it is undone before another is applied"}})
+		}
+		if wanted == 0 {
+			return inputs, nil
+		}
+	}
+	f, err := factorAt(ctx, v, laboratory, instrument, wanted, at)
+	if err != nil && ignoreNotFound(err) == nil {
+		return nil, Complain(cannotFit, []Complaint{{Place: "H3 factor", Found: "none approved for " + instrument + " at " + at.String(),
+			Expected: "one determined before the session, since the session declares the correction as made here; or name a later determination"}})
+	}
+	if err != nil {
+		return nil, err
+	}
+	a.factor = &f
+	return append(inputs, store.Input{Part: "factor", Ref: f.Ref}), nil
 }

@@ -19,7 +19,10 @@ type FitRequest struct {
 	Quantity  string
 	Measurand string
 	// Model replaces the method's, for a draft that shows what another model would give.
-	Model  *calib.Model
+	Model *calib.Model
+	// Factor is the version of the instrument's H3 factor to use; 0 takes the one
+	// that held when the session started.
+	Factor int
 	Reason string
 	// Preview answers as if done and stores nothing.
 	Preview bool
@@ -96,8 +99,8 @@ func (a *assembly) inWords(err error) string {
 		At() (list string, index int)
 	}
 	if errors.As(err, &placed) {
-		if list, i := placed.At(); list == "readings" && i >= 0 && i < len(a.readings) {
-			text = strings.ReplaceAll(text, fmt.Sprintf("readings[%d]", i), fmt.Sprintf("reading %d", a.readings[i].Number))
+		if list, i := placed.At(); list == "readings" && i >= 0 && i < len(a.prepared.readings) {
+			text = strings.ReplaceAll(text, fmt.Sprintf("readings[%d]", i), fmt.Sprintf("reading %d", a.prepared.readings[i].stored.Number))
 		}
 	}
 	return text
@@ -122,6 +125,7 @@ func (a *assembly) fit() (store.Calibration, error) {
 	}
 	body.Flags = append(body.Flags, a.slopeFlags(result)...)
 	body.Flags = append(body.Flags, a.repeatabilityFlags(result)...)
+	body.Flags = append(body.Flags, a.prepared.flags...)
 	body.Flags = append(body.Flags, a.flags...)
 	return body, nil
 }
@@ -138,6 +142,12 @@ func (a *assembly) state(r *calib.Result) store.Calibration {
 		if a.excluded[rd.Number] {
 			b.Excluded = append(b.Excluded, rd.Number)
 		}
+	}
+	b.SetAside, b.Means = a.prepared.setAside, a.prepared.means
+	for j, in := range a.prepared.shared {
+		k := store.CalibrationCorrection{Name: in.name, Value: in.value.Value, StandardUncertainty: in.value.StandardUncertainty(),
+			Sensitivities: column(r.CorrectionSensitivities, j), Derivatives: column(r.CorrectionDerivatives, j)}
+		b.Corrections = append(b.Corrections, k)
 	}
 	for i, v := range a.anchors {
 		anchor := store.CalibrationAnchor{Material: v.Value.Material, StandardUncertainty: v.Value.StandardUncertainty}
@@ -167,13 +177,19 @@ func (a *assembly) state(r *calib.Result) store.Calibration {
 		if d.Predicted == nil && d.Residual == nil {
 			continue
 		}
-		b.Readings = append(b.Readings, store.ReadingDiagnosis{Number: a.readings[d.Index].Number, Predicted: d.Predicted, Residual: d.Residual,
+		rd := a.prepared.readings[d.Index]
+		var corrected *float64
+		if rd.changed {
+			raw := rd.Raw
+			corrected = &raw
+		}
+		b.Readings = append(b.Readings, store.ReadingDiagnosis{Number: rd.numbers[0], Corrected: corrected, Predicted: d.Predicted, Residual: d.Residual,
 			Standardized: d.StandardizedResidual, Studentized: d.StudentizedResidual, Leverage: d.Leverage, CooksD: d.CooksDistance})
 	}
 	for _, s := range r.Subjects {
 		res := store.Result{Subject: s.Subject, Role: s.Role, N: s.N, Value: s.Value, StandardUncertainty: s.StandardUncertainty,
 			K: s.Expanded.CoverageFactor, Expanded: s.Expanded.U, Probability: s.Expanded.Probability, EffectiveDF: finite(s.Expanded.DegreesOfFreedom),
-			Gradient: s.Gradient, Readings: a.numbers(s.Readings), Coefficients: s.Coefficients, BetweenSession: s.BetweenSession, Flags: slices.Clone(s.Flags)}
+			Gradient: s.Gradient, Readings: a.heads(s.Readings), Coefficients: s.Coefficients, BetweenSession: s.BetweenSession, Flags: slices.Clone(s.Flags)}
 		for _, c := range s.Sources {
 			res.Sources = append(res.Sources, store.Contribution{ID: c.ID, Kind: string(c.Kind), Group: c.Group, Sensitivity: c.Sensitivity, U: c.U, VarianceShare: c.VarianceShare})
 		}
@@ -186,10 +202,30 @@ func (a *assembly) state(r *calib.Result) store.Calibration {
 	return b
 }
 
+// column is one column of a matrix that is stored by rows.
+func column(m [][]float64, j int) []float64 {
+	out := make([]float64, len(m))
+	for i := range m {
+		out[i] = m[i][j]
+	}
+	return out
+}
+
+// heads are the numbers that a fit calls its readings by, one for each index:
+// of a mean, its first; what else it stands for is in the calibration's means.
+func (a *assembly) heads(indices []int) []int {
+	out := make([]int, 0, len(indices))
+	for _, i := range indices {
+		out = append(out, a.prepared.readings[i].numbers[0])
+	}
+	return out
+}
+
+// numbers are the numbers of all stored readings that the engine's stand for.
 func (a *assembly) numbers(indices []int) []int {
 	out := make([]int, 0, len(indices))
 	for _, i := range indices {
-		out = append(out, a.readings[i].Number)
+		out = append(out, a.prepared.readings[i].numbers...)
 	}
 	return out
 }
@@ -218,6 +254,9 @@ func mayApproveCalibration(ctx context.Context, v *store.View, raw store.Raw) er
 		if (k.Quantity == "" || k.Quantity == a.spec.Quantity) && (k.State == "" || k.State == "not said") {
 			c.add("correction "+k.Name, "not said", "whether it was done earlier, is done here, or does not apply")
 		}
+	}
+	if k, ok := a.declared("h3"); ok && a.spec.Quantity == "d2H" && k.State == "earlier" && a.earlier == nil && k.Constants == "" {
+		c.add("correction h3", "earlier, by a factor that nobody recorded", "the factor that was applied, on record for the instrument, or its number in the declaration's constants")
 	}
 	if calibration.Value.Model != a.spec.Model {
 		c.add("model", "another model than the method's", "a calibration by the method's own model")

@@ -124,7 +124,19 @@ func (c *Comparison) judge(numbers []uncertain.Number, groups []uncertain.Group)
 }
 
 // finalNumber is the uncertain number of a final value, with every source it rests on.
-func finalNumber(ctx context.Context, v *store.View, f store.Version[store.Final]) (uncertain.Number, []uncertain.Group, error) {
+func finalNumber(ctx context.Context, v source, f store.Version[store.Final]) (uncertain.Number, []uncertain.Group, error) {
+	from, rel, ok, err := converted(ctx, v, f)
+	if err != nil {
+		return uncertain.Number{}, nil, err
+	}
+	if ok {
+		n, groups, err := finalNumber(ctx, v, from)
+		if err != nil {
+			return n, nil, err
+		}
+		n, _, err = convert(rel, from.Value.Scale, n)
+		return n, groups, err
+	}
 	_, members, err := againFinal(ctx, v, f)
 	if err != nil {
 		return uncertain.Number{}, nil, err

@@ -3,6 +3,7 @@ package registry
 import (
 	"context"
 	"fmt"
+	"slices"
 	"strconv"
 	"strings"
 
@@ -148,7 +149,7 @@ func acceptedResults(ctx context.Context, v *store.View, laboratory, subject, sc
 				if res.Subject != subject {
 					continue
 				}
-				if outcome.Value.Outcome == "in part" && !within(res.Readings, outcome.Value.From, outcome.Value.To) {
+				if outcome.Value.Outcome == "in part" && !within(readingsBehind(c.Value, res.Readings), outcome.Value.From, outcome.Value.To) {
 					unready = append(unready, fmt.Sprintf("session %s is accepted from reading %d to %d only", store.FormatCode(c.Value.Session), outcome.Value.From, outcome.Value.To))
 					continue
 				}
@@ -159,6 +160,23 @@ func acceptedResults(ctx context.Context, v *store.View, laboratory, subject, sc
 			return members, unready, nil
 		}
 	}
+}
+
+// readingsBehind are the stored readings that a result's readings stand for.
+func readingsBehind(c store.Calibration, heads []int) []int {
+	if len(c.Means) == 0 {
+		return heads
+	}
+	var out []int
+	for _, n := range heads {
+		i := slices.IndexFunc(c.Means, func(m store.MeanReading) bool { return m.Number == n })
+		if i < 0 {
+			out = append(out, n)
+		} else {
+			out = append(out, c.Means[i].Readings...)
+		}
+	}
+	return out
 }
 
 func within(readings []int, from, to int) bool {
@@ -304,9 +322,19 @@ func fillAssigned(body *store.Value, combined assign.Combination, groups []uncer
 	body.Value = store.Decimal(strconv.FormatFloat(combined.Value.Value, 'f', -1, 64))
 	body.StandardUncertainty = combined.Value.StandardUncertainty()
 	body.Basis, body.Rule = "assignment", "weighted mean of accepted sessions, weights by private variance; all sources kept"
+	stateNumber(body, combined.Value, groups)
 	var sessions []string
+	for _, m := range members {
+		sessions = append(sessions, store.FormatCode(m.calibration.Value.Session))
+	}
+	body.Evidence = fmt.Sprintf("%d sessions: %s", len(sessions), strings.Join(sessions, ", "))
+}
+
+// stateNumber stores the decomposition of a value that was made in the
+// registry, with the variance groups that it names.
+func stateNumber(body *store.Value, n uncertain.Number, groups []uncertain.Group) {
 	used := map[string]bool{}
-	for _, t := range combined.Value.Terms {
+	for _, t := range n.Terms {
 		body.Sources = append(body.Sources, store.Source{ID: t.ID, Kind: string(t.Kind), U: t.U, Sensitivity: t.Sensitivity, Group: t.Group,
 			Per: t.Per, Shares: each(t.Shares, func(h uncertain.Share) store.Share { return store.Share(h) })})
 		used[t.Group] = true
@@ -319,8 +347,4 @@ func fillAssigned(body *store.Value, combined assign.Combination, groups []uncer
 			body.Groups = append(body.Groups, store.Group(g))
 		}
 	}
-	for _, m := range members {
-		sessions = append(sessions, store.FormatCode(m.calibration.Value.Session))
-	}
-	body.Evidence = fmt.Sprintf("%d sessions: %s", len(sessions), strings.Join(sessions, ", "))
 }

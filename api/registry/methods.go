@@ -95,7 +95,8 @@ func checkMethod(code string, m store.Method) complaints {
 			c.add(place+".limits.probability", fmt.Sprint(p), "a probability between 0.5 and 1")
 		}
 		for name, x := range map[string]float64{"k": q.Limits.CoverageFactor, "left_out_z": q.Limits.LeftOut, "studentized": q.Limits.Studentized,
-			"minimum_span": q.Limits.MinimumSpan, "advised_span": q.Limits.AdvisedSpan, "control_deviation": q.Limits.ControlDeviation, "replicate_sd": q.Limits.ReplicateSD} {
+			"minimum_span": q.Limits.MinimumSpan, "advised_span": q.Limits.AdvisedSpan, "control_deviation": q.Limits.ControlDeviation, "replicate_sd": q.Limits.ReplicateSD,
+			"minimum_resolution": q.Limits.MinimumResolution} {
 			if !(x >= 0 && x < 1e6) {
 				c.add(place+".limits."+name, fmt.Sprint(x), "a limit of 0 or more")
 			}
@@ -108,6 +109,7 @@ func checkMethod(code string, m store.Method) complaints {
 		}
 	}
 	checkCorrections(&c, m.Corrections)
+	checkBeforeFit(&c, m)
 	if m.Approval.Role != "" {
 		c.oneOf("body.approval.role", m.Approval.Role, Signatory, Manager)
 	}
@@ -132,6 +134,61 @@ func checkCorrections(c *complaints, list []store.Correction) {
 	for i, k := range list {
 		c.text(fmt.Sprintf("body.corrections[%d].name", i), k.Name, 40)
 		c.oneOf(fmt.Sprintf("body.corrections[%d].state", i), k.State, CorrectionStates...)
+	}
+}
+
+// checkBeforeFit holds what a method does to readings before the fit against
+// its model and its files.
+func checkBeforeFit(c *complaints, m store.Method) {
+	for i, q := range m.Quantities {
+		place := fmt.Sprintf("body.quantities[%d]", i)
+		if h := q.H3; h != nil {
+			c.oneOf(place+".h3.ratio_unit", h.RatioUnit, RatioUnits...)
+			c.oneOf(place+".h3.intensity_unit", h.IntensityUnit, IntensityUnits...)
+			c.oneOf(place+".h3.shape", h.Shape, PeakShapes...)
+			if q.Quantity != "d2H" {
+				c.add(place+".h3", "a rule for "+q.Quantity, "none: H3+ forms of hydrogen alone")
+			}
+			for name, x := range map[string]float64{"maximum_age_hours": h.MaximumAgeHours, "maximum_change": h.MaximumChange, "step_z": h.StepZ} {
+				if !(x >= 0 && x < 1e6) {
+					c.add(place+".h3."+name, fmt.Sprint(x), "a limit of 0 or more")
+				}
+			}
+		}
+		if b := q.Blank; b != nil {
+			c.oneOf(place+".blank.from", b.From, "readings", "stated")
+			if q.Model.Size == calib.SizeBlank {
+				c.add(place+".blank", "a blank taken out before the fit, beside the size term blank", "one of the two: together they would take it out twice")
+			}
+			for name, x := range map[string]float64{"size": b.Size, "u_size": b.USize, "u_raw": b.URaw} {
+				if !(x >= 0 && x < 1e9) {
+					c.add(place+".blank."+name, fmt.Sprint(x), "a number of 0 or more")
+				}
+			}
+			if b.From == "stated" {
+				c.text(place+".blank.evidence", b.Evidence, 2000)
+			}
+			if nu := b.DegreesOfFreedom; nu != nil && !(*nu >= 1) {
+				c.add(place+".blank.nu", fmt.Sprint(*nu), "degrees of freedom of 1 or more")
+			}
+		}
+		if k := q.Repeats; k != nil {
+			c.oneOf(place+".repeats.within", k.Within, "analysis", "preparation", "position")
+			if k.IgnoreFirst < 0 || k.IgnoreFirst > 1000 {
+				c.add(place+".repeats.ignore_first", fmt.Sprint(k.IgnoreFirst), "0 to 1000 readings")
+			}
+			if k.Average && q.Model.Memory == calib.MemoryCarryover {
+				c.add(place+".repeats.average", "true, beside a term for carry-over", "one of the two: carry-over acts from one reading to the next")
+			}
+		}
+		for _, k := range m.Corrections {
+			if k.Name == "h3" && k.State == "here" && q.Quantity == "d2H" && (k.Quantity == "" || k.Quantity == "d2H") && q.H3 == nil {
+				c.add(place+".h3", "nothing", "what the intensities in the files are, since the H3 correction is declared as made here")
+			}
+			if k.Name == "blank" && k.State == "here" && (k.Quantity == "" || k.Quantity == q.Quantity) && q.Blank == nil && q.Model.Size != calib.SizeBlank {
+				c.add(place+".blank", "nothing", "how the blank is known, or the size term blank, since the blank correction is declared as made here")
+			}
+		}
 	}
 }
 
@@ -160,6 +217,9 @@ func checkMapping(c *complaints, m store.Method) {
 			c.add(fmt.Sprintf("body.import.quantities[%d].quantity", i), quote(q.Quantity), "a quantity of this method")
 		}
 		c.text(fmt.Sprintf("body.import.quantities[%d].raw", i), q.Raw, 200)
+	}
+	if mapping.Columns.Width != "" {
+		c.oneOf("body.import.width_by", mapping.WidthBy, "base", "half-height")
 	}
 	for word, role := range mapping.RoleWords {
 		c.oneOf("body.import.role_words."+word, string(role), roleWords...)

@@ -73,6 +73,11 @@ func resolveReadings(ctx context.Context, v *store.View, laboratory string, meth
 		if raw.U != nil && *raw.U < 0 {
 			c.add(place("u"), fmt.Sprint(*raw.U), "a standard uncertainty of 0 or more")
 		}
+		for field, x := range map[string]*float64{"width": raw.Width, "intensity": raw.Intensity, "gas_intensity": raw.GasIntensity, "gas_ratio": raw.GasRatio} {
+			if x != nil && !(*x > 0) {
+				c.add(place(field), fmt.Sprint(*x), "a number above 0")
+			}
+		}
 		if raw.Unit != "" {
 			code, ok := units[[2]string{raw.Unit, s.material}]
 			if !ok {
@@ -90,7 +95,12 @@ func resolveReadings(ctx context.Context, v *store.View, laboratory string, meth
 			}
 			rd.Unit = code
 		}
-		extra, err := store.Extra(map[string]any{"amount": raw.Amount, "retention": raw.Retention, "warning": raw.Warning})
+		widthBy := raw.WidthBy
+		if raw.Width == nil {
+			widthBy = ""
+		}
+		extra, err := store.Extra(map[string]any{"amount": raw.Amount, "retention": raw.Retention, "width": raw.Width, "width_by": widthBy, "warning": raw.Warning,
+			"intensity": raw.Intensity, "gas_intensity": raw.GasIntensity, "gas_ratio": raw.GasRatio})
 		if err != nil {
 			return nil, err
 		}

@@ -7,6 +7,7 @@ import (
 	"fmt"
 	"regexp"
 	"slices"
+	"strconv"
 	"strings"
 	"time"
 
@@ -44,7 +45,7 @@ func seedRows(name string) ([]seedRow, error) {
 func (row seedRow) checked() bool { return row["confirmed"] == "checked" }
 
 // seed records the public rows of common in one act: scales, international
-// materials, their values. Each version's evidence is its citation.
+// materials, their values, relations. Each version's evidence is its citation.
 func (r *Registry) seed(ctx context.Context) error {
 	scales, order, err := seedScales()
 	if err != nil {
@@ -100,15 +101,78 @@ func (r *Registry) seed(ctx context.Context) error {
 			if s := row["value_status"]; s == "superseded" || strings.HasPrefix(s, "current") || strings.HasPrefix(s, "possibly superseded") {
 				// Other live values of the same material stay unapproved: a
 				// laboratory that prefers one states it as its own.
-				if _, err := tx.Append(ctx, store.Draft{Kind: store.KindDecision, Code: store.DecisionCode(ref), By: actor.Person, Reason: "seeded from " + row["source"],
-					Inputs: []store.Input{{Part: "subject", Ref: ref}}, Value: store.Decision{Act: "approved", Meaning: "published by its issuer"}, After: first}); err != nil {
+				if err := seedApproval(ctx, tx, ref, row["source"]); err != nil {
 					return fmt.Errorf("seed value %s: %w", record, err)
 				}
 			}
 		}
-		return nil
+		return seedRelations(ctx, tx, scaleRefs)
 	})
 	return err
+}
+
+func seedApproval(ctx context.Context, tx *store.Tx, ref store.Ref, source string) error {
+	_, err := tx.Append(ctx, store.Draft{Kind: store.KindDecision, Code: store.DecisionCode(ref), By: RegistryPerson, Reason: "seeded from " + source,
+		Inputs: []store.Input{{Part: "subject", Ref: ref}}, Value: store.Decision{Act: "approved", Meaning: "published by its issuer"}, After: first})
+	return err
+}
+
+// beforeAll is since when a constant holds whose source names no year: before any session.
+var beforeAll = store.InstantOf(time.Date(1950, 1, 1, 0, 0, 0, 0, time.UTC))
+
+// seedRelations records published conversions, constants and rules. Rows of one
+// code are versions of one record, each holding from its year.
+func seedRelations(ctx context.Context, tx *store.Tx, scales map[string]store.Ref) error {
+	rows, err := seedRows("relations.csv")
+	if err != nil {
+		return err
+	}
+	newest := map[string]int{}
+	for _, row := range rows {
+		body := store.Relation{Sort: row["sort"], Title: strings.ReplaceAll(row["code"], "-", " ") + ": " + row["kind"], Expression: row["expression"], From: row["from"], To: row["to"],
+			Factor: store.Decimal(row["factor"]), Offset: store.Decimal(row["offset"]), Constant: store.Decimal(row["constant"]), Stated: row["stated"], StatedUncertainty: row["stated_uncertainty"],
+			Domain: row["domain"], Evidence: row["source"], Provisional: row["confirmed"] != "checked", Note: strings.Trim(row["note"]+"; "+row["confirmed"], "; ")}
+		if row["u"] != "" {
+			u, err := strconv.ParseFloat(row["u"], 64)
+			if err != nil {
+				return fmt.Errorf("seed relation %s: u: %w", row["code"], err)
+			}
+			body.StandardUncertainty = &u
+		}
+		var c complaints
+		checkRelation(&c, body)
+		if err := Complain("seed relation "+row["code"], c); err != nil {
+			return err
+		}
+		from := beforeAll
+		if row["valid_from"] != "" {
+			year, err := time.Parse("2006", row["valid_from"])
+			if err != nil {
+				return fmt.Errorf("seed relation %s: year: %w", row["code"], err)
+			}
+			from = store.InstantOf(year)
+		}
+		var inputs []store.Input
+		for _, side := range []string{"from", "to"} {
+			if name := row[side]; name != "" {
+				ref, ok := scales[name]
+				if !ok {
+					return fmt.Errorf("seed relation %s: no scale %s", row["code"], name)
+				}
+				inputs = append(inputs, store.Input{Part: side, Ref: ref})
+			}
+		}
+		after := newest[row["code"]]
+		ref, err := tx.Append(ctx, store.Draft{Kind: store.KindRelation, Code: row["code"], By: RegistryPerson, Reason: row["source"], ValidFrom: &from, Inputs: inputs, Value: body, After: &after})
+		if err != nil {
+			return fmt.Errorf("seed relation %s: %w", row["code"], err)
+		}
+		newest[row["code"]]++
+		if err := seedApproval(ctx, tx, ref, row["source"]); err != nil {
+			return fmt.Errorf("seed relation %s: %w", row["code"], err)
+		}
+	}
+	return nil
 }
 
 type seedScale struct {

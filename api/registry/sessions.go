@@ -88,9 +88,38 @@ func openSession(ctx context.Context, tx *store.Tx, actor Actor, q SessionReques
 	body := store.Session{Label: q.Label, Instrument: q.Instrument, Method: q.Method, Operator: nameOr(q.Operator, actor.Person), StartedAt: q.StartedAt,
 		Corrections: mergeCorrections(method.Value.Corrections, q.Corrections)}
 	fill(&body)
-	_, err = tx.Append(ctx, store.Draft{Kind: store.KindSession, Code: code, By: actor.Person, Value: body, After: first,
-		Inputs: []store.Input{{Part: "instrument", Ref: instrument.Ref}, {Part: "method", Ref: method.Ref}}})
+	inputs := []store.Input{{Part: "instrument", Ref: instrument.Ref}, {Part: "method", Ref: method.Ref}}
+	constants, err := pinConstants(ctx, &tx.View, actor.Laboratory, body)
+	if err != nil {
+		return body, err
+	}
+	_, err = tx.Append(ctx, store.Draft{Kind: store.KindSession, Code: code, By: actor.Person, Value: body, After: first, Inputs: append(inputs, constants...)})
 	return body, err
+}
+
+// pinConstants names, as inputs of a session, the versions of the relations
+// that its corrections used and that held when it started: another version
+// later changes nothing about it.
+func pinConstants(ctx context.Context, v *store.View, laboratory string, s store.Session) ([]store.Input, error) {
+	var inputs []store.Input
+	var c complaints
+	for i, k := range s.Corrections {
+		for j, code := range k.Relations {
+			rel, err := relationAt(ctx, v, laboratory, code, 0, store.Moment{ValidAt: s.StartedAt})
+			if MeaningOf(err) == NotFound {
+				c.add(fmt.Sprintf("body.corrections[%d].relations[%d]", i, j), quote(code), "the code of an approved relation that held when the session started")
+				continue
+			}
+			if err != nil {
+				return nil, err
+			}
+			in := store.Input{Part: "constants", Ref: rel.Ref}
+			if !slices.Contains(inputs, in) {
+				inputs = append(inputs, in)
+			}
+		}
+	}
+	return inputs, Complain("this session cannot be opened", c)
 }
 
 // mergeCorrections lets a session's declarations replace its method's.

@@ -30,12 +30,19 @@ type RawReading struct {
 	Amount      *float64       `json:"amount,omitempty"`
 	Compound    string         `json:"compound,omitempty"`
 	Retention   *float64       `json:"retention,omitempty"`
+	Width       *float64       `json:"width,omitempty"`    // of the peak, in the unit of its retention
+	WidthBy     string         `json:"width_by,omitempty"` // base or half-height
 	Group       string         `json:"group,omitempty"`
 	Warning     string         `json:"warning,omitempty"`
 	Quantity    string         `json:"quantity"`
 	Raw         float64        `json:"raw"` // ‰
 	U           *float64       `json:"u,omitempty"`
 	Size        *float64       `json:"size,omitempty"`
+	// For the H3 factor: the peak's m/z 2 intensity, and the reference pulse's
+	// intensity and ratio of m/z 3 to m/z 2.
+	Intensity    *float64 `json:"intensity,omitempty"`
+	GasIntensity *float64 `json:"gas_intensity,omitempty"`
+	GasRatio     *float64 `json:"gas_ratio,omitempty"`
 }
 
 // MaxReadings bounds one import.

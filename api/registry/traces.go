@@ -226,6 +226,20 @@ func (t *tracer) describe(ctx context.Context, i int, raw store.Raw) (map[int]fl
 			return nil, err
 		}
 		n.Detail = m.Value.Title
+	case store.KindFactor:
+		f, err := store.Decode[store.Factor](raw)
+		if err != nil {
+			return nil, err
+		}
+		n.Title = fmt.Sprintf("H3 factor of %s, determined %s", f.Code, f.Value.DeterminedAt.Time().Format("2006-01-02 15:04"))
+		n.Detail = factorDetail(f.Value)
+	case store.KindRelation:
+		rel, err := store.Decode[store.Relation](raw)
+		if err != nil {
+			return nil, err
+		}
+		n.Title, n.Leaf = "relation "+raw.Code, "published or stated"
+		n.Detail = strings.Trim(strings.Join([]string{relationText(rel.Value), rel.Value.Evidence}, "; "), "; ")
 	case store.KindReport:
 		rep, err := store.Decode[store.Report](raw)
 		if err != nil {
@@ -333,6 +347,13 @@ func (t *tracer) anchorShares(c store.Version[store.Calibration]) map[int]float6
 	shares := map[int]float64{}
 	k := 0
 	for j, in := range c.Inputs {
+		if in.Kind == store.KindFactor {
+			for _, s := range res.Sources {
+				if s.ID == factorSource(in.Ref) {
+					shares[j] = s.VarianceShare
+				}
+			}
+		}
 		if in.Part != "anchor" {
 			continue
 		}

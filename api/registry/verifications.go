@@ -148,6 +148,18 @@ func (c *recheck) version(ctx context.Context, v source, raw store.Raw) error {
 		if err != nil {
 			return err
 		}
+		from, rel, ok, err := converted(ctx, v, stored)
+		if err != nil {
+			return err
+		}
+		if ok {
+			body, err := convertedFinal(ctx, v, from, rel)
+			if err != nil {
+				return err
+			}
+			scale, condition, again = math.Abs(body.Value), 1e6, body
+			break
+		}
 		body, members, err := againFinal(ctx, v, stored)
 		if err != nil {
 			return err
@@ -155,6 +167,18 @@ func (c *recheck) version(ctx context.Context, v source, raw store.Raw) error {
 		scale, condition, again = largestResult(members), 1e6, body
 	case store.KindValue:
 		stored, err := store.Decode[store.Value](raw)
+		if err == nil && stored.Value.Basis == Conversion {
+			old, rel, ok, err := convertedFrom(ctx, v, stored)
+			if err != nil || !ok {
+				return err
+			}
+			body, err := convertedValue(old, rel)
+			if err != nil {
+				return err
+			}
+			scale, condition, again = math.Abs(body.StandardUncertainty), 1e6, body
+			break
+		}
 		if err != nil || stored.Value.Basis != "assignment" || stored.Value.BackLoaded {
 			return err
 		}

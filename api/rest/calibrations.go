@@ -27,6 +27,9 @@ type Calibration struct {
 	Limits             Limits         `json:"limits"`
 	BetweenSession     *Component     `json:"between_session,omitempty"`
 	Excluded           []int          `json:"excluded" doc:"Numbers of readings left out."`
+	Corrections        []SharedInput  `json:"corrections" doc:"Numbers with which readings were corrected before the fit."`
+	SetAside           []int          `json:"set_aside" doc:"Numbers of readings that the method's rule on repeats sets aside."`
+	Means              []MeanReading  `json:"means" doc:"Readings that entered the fit as means."`
 	Anchors            []Anchor       `json:"anchors"`
 	Parameters         []Parameter    `json:"parameters"`
 	Covariance         [][]float64    `json:"covariance" doc:"Of the parameters, from all sources."`
@@ -106,6 +109,7 @@ type Line struct {
 // A ReadingCheck is what a fit says of one reading.
 type ReadingCheck struct {
 	Number       int      `json:"number"`
+	Corrected    *float64 `json:"corrected,omitempty" doc:"Raw delta as it entered the fit (‰), where it is not the reading's own."`
 	Predicted    *float64 `json:"predicted" doc:"‰"`
 	Residual     *float64 `json:"residual" doc:"‰"`
 	Standardized *float64 `json:"standardized_residual"`
@@ -150,7 +154,8 @@ func showCalibration(it registry.Item[store.Calibration]) Calibration {
 		Excluded: append([]int{}, c.Excluded...), Covariance: matrix(c.Covariance), NoiseCovariance: matrix(c.NoiseCovariance), Sensitivities: matrix(c.AnchorSensitivities),
 		Derivatives: matrix(c.AnchorDerivatives), VarianceCovariance: matrix(c.VarianceCovariance), Reference: Reference{c.ReferenceTime, c.ReferenceSize},
 		ChiSquare: c.ChiSquare, DegreesOfFreedom: c.DegreesOfFreedom, PValue: c.PValue, BirgeRatio: c.BirgeRatio, ResidualSD: c.ResidualSD, AICc: c.AICc,
-		ConditionNumber: c.ConditionNumber, Flags: showFlags(c.Flags)}
+		ConditionNumber: c.ConditionNumber, Flags: showFlags(c.Flags), SetAside: append([]int{}, c.SetAside...),
+		Corrections: convert(c.Corrections, showSharedInput), Means: convert(c.Means, func(m store.MeanReading) MeanReading { return MeanReading(m) })}
 	out.Anchors = convert(c.Anchors, func(a store.CalibrationAnchor) Anchor {
 		s := Anchor{a.Material, a.Value, a.StandardUncertainty, a.Adjusted, nil}
 		if a.LeftOut != nil {
@@ -169,7 +174,7 @@ func showCalibration(it registry.Item[store.Calibration]) Calibration {
 		out.Line = &line
 	}
 	out.Readings = convert(c.Readings, func(r store.ReadingDiagnosis) ReadingCheck {
-		return ReadingCheck{r.Number, r.Predicted, r.Residual, r.Standardized, r.Studentized, r.Leverage, r.CooksD}
+		return ReadingCheck{r.Number, r.Corrected, r.Predicted, r.Residual, r.Standardized, r.Studentized, r.Leverage, r.CooksD}
 	})
 	out.Results = convert(c.Results, showResult)
 	return out
@@ -221,6 +226,7 @@ type NewCalibration struct {
 	Quantity  string `json:"quantity" maxLength:"20" example:"d13C"`
 	Measurand string `json:"measurand,omitempty" maxLength:"60" doc:"Left out: the method's."`
 	Model     *Model `json:"model,omitempty" doc:"Another model than the method's, to see what it would give; such a draft cannot be approved."`
+	Factor    int    `json:"factor,omitempty" minimum:"1" doc:"Version of the instrument's H3 factor to use; left out: the one that held when the session started."`
 	Reason    string `json:"reason,omitempty" maxLength:"4000" doc:"Asked for where there is a version already."`
 }
 
@@ -241,7 +247,7 @@ func (f *face) fitSession(ctx context.Context, actor registry.Actor, in *struct 
 	if err != nil {
 		return nil, err
 	}
-	q := registry.FitRequest{Session: session, Quantity: in.Body.Quantity, Measurand: in.Body.Measurand, Reason: in.Body.Reason, Preview: in.Preview}
+	q := registry.FitRequest{Session: session, Quantity: in.Body.Quantity, Measurand: in.Body.Measurand, Factor: in.Body.Factor, Reason: in.Body.Reason, Preview: in.Preview}
 	if in.Body.Model != nil {
 		m := in.Body.Model.body()
 		q.Model = &m

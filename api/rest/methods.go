@@ -30,6 +30,9 @@ type MethodQuantity struct {
 	Limits         Limits         `json:"limits,omitempty"`
 	BetweenSession *Component     `json:"between_session,omitempty" doc:"Added to every result (‰), with its evidence."`
 	Roles          []MaterialRole `json:"roles,omitempty" maxItems:"200" doc:"Roles of materials where the file gives none."`
+	H3             *H3Rule        `json:"h3,omitempty" doc:"What the intensities in the files are; hydrogen only."`
+	Blank          *BlankRule     `json:"blank,omitempty" doc:"How a blank is known that is taken out before the fit."`
+	Repeats        *Repeats       `json:"repeats,omitempty" doc:"How repeated readings of one portion are taken."`
 }
 
 // A Model names the terms of the fit and where the variance of the readings comes from.
@@ -53,18 +56,19 @@ func showModel(m calib.Model) Model {
 
 // Limits are acceptance limits; absent ones are not asked for.
 type Limits struct {
-	Probability      float64 `json:"probability,omitempty" doc:"Coverage probability of U; left out: 0.95."`
-	CoverageFactor   float64 `json:"k,omitempty" doc:"Fixes k; left out: from the effective degrees of freedom."`
-	LeftOut          float64 `json:"left_out_z,omitempty"`
-	Studentized      float64 `json:"studentized,omitempty"`
-	MinimumSpan      float64 `json:"minimum_span,omitempty" doc:"‰"`
-	AdvisedSpan      float64 `json:"advised_span,omitempty" doc:"‰"`
-	MinimumAnchors   int     `json:"minimum_anchors,omitempty"`
-	SlopeFrom        float64 `json:"slope_from,omitempty" doc:"Raw per true."`
-	SlopeTo          float64 `json:"slope_to,omitempty"`
-	ControlDeviation float64 `json:"control_deviation,omitempty" doc:"‰"`
-	ReplicateSD      float64 `json:"replicate_sd,omitempty" doc:"‰"`
-	ControlRequired  bool    `json:"control_required,omitempty"`
+	Probability       float64 `json:"probability,omitempty" doc:"Coverage probability of U; left out: 0.95."`
+	CoverageFactor    float64 `json:"k,omitempty" doc:"Fixes k; left out: from the effective degrees of freedom."`
+	LeftOut           float64 `json:"left_out_z,omitempty"`
+	Studentized       float64 `json:"studentized,omitempty"`
+	MinimumSpan       float64 `json:"minimum_span,omitempty" doc:"‰"`
+	AdvisedSpan       float64 `json:"advised_span,omitempty" doc:"‰"`
+	MinimumAnchors    int     `json:"minimum_anchors,omitempty"`
+	SlopeFrom         float64 `json:"slope_from,omitempty" doc:"Raw per true."`
+	SlopeTo           float64 `json:"slope_to,omitempty"`
+	ControlDeviation  float64 `json:"control_deviation,omitempty" doc:"‰"`
+	ReplicateSD       float64 `json:"replicate_sd,omitempty" doc:"‰"`
+	ControlRequired   bool    `json:"control_required,omitempty"`
+	MinimumResolution float64 `json:"minimum_resolution,omitempty" doc:"Of neighbouring peaks of one analysis; 1.5 separates them to the base line."`
 }
 
 // A Component is an uncertainty component of a method.
@@ -97,11 +101,12 @@ type MaterialRole struct {
 
 // A Correction says where one correction is made.
 type Correction struct {
-	Name      string `json:"name" maxLength:"40" example:"o17"`
-	Quantity  string `json:"quantity,omitempty" maxLength:"20" doc:"Left out: all of them."`
-	State     string `json:"state" enum:"earlier,here,not applicable,not said"`
-	By        string `json:"by,omitempty" maxLength:"200" doc:"What made it, where that was earlier."`
-	Constants string `json:"constants,omitempty" maxLength:"1000"`
+	Name      string   `json:"name" maxLength:"40" example:"o17"`
+	Quantity  string   `json:"quantity,omitempty" maxLength:"20" doc:"Left out: all of them."`
+	State     string   `json:"state" enum:"earlier,here,not applicable,not said"`
+	By        string   `json:"by,omitempty" maxLength:"200" doc:"What made it, where that was earlier."`
+	Constants string   `json:"constants,omitempty" maxLength:"1000"`
+	Relations []string `json:"relations,omitempty" maxItems:"20" doc:"Codes of registered relations whose constants it used; a session pins their versions."`
 }
 
 // An Approval says who approves.
@@ -128,6 +133,7 @@ type Mapping struct {
 	TimeLayout string            `json:"time_layout,omitempty" maxLength:"60" doc:"Made of YYYY MM DD hh mm ss." example:"DD/MM/YYYY hh:mm:ss"`
 	Columns    Columns           `json:"columns"`
 	Quantities []QuantityColumns `json:"quantities" maxItems:"20"`
+	WidthBy    string            `json:"width_by,omitempty" enum:"base,half-height" doc:"Where the widths of peaks are measured."`
 	RoleWords  map[string]string `json:"role_words,omitempty" doc:"What the words of the role column mean."`
 }
 
@@ -145,18 +151,22 @@ type Columns struct {
 	Amount      string `json:"amount,omitempty" maxLength:"200"`
 	Compound    string `json:"compound,omitempty" maxLength:"200"`
 	Retention   string `json:"retention,omitempty" maxLength:"200"`
+	Width       string `json:"width,omitempty" maxLength:"200" doc:"Of the peak, in the unit of its retention."`
 	Group       string `json:"group,omitempty" maxLength:"200"`
 	Warning     string `json:"warning,omitempty" maxLength:"200"`
 }
 
 // QuantityColumns are the columns of one quantity.
 type QuantityColumns struct {
-	Quantity string     `json:"quantity" maxLength:"20"`
-	Raw      string     `json:"raw" maxLength:"200"`
-	U        string     `json:"u,omitempty" maxLength:"200"`
-	Size     string     `json:"size,omitempty" maxLength:"200"`
-	When     *Condition `json:"when,omitempty" doc:"Only rows in which a column has a value."`
-	Optional bool       `json:"optional,omitempty" doc:"May be empty in a row, which then gives no reading of it."`
+	Quantity     string     `json:"quantity" maxLength:"20"`
+	Raw          string     `json:"raw" maxLength:"200"`
+	U            string     `json:"u,omitempty" maxLength:"200"`
+	Size         string     `json:"size,omitempty" maxLength:"200"`
+	Intensity    string     `json:"intensity,omitempty" maxLength:"200" doc:"The peak's m/z 2 intensity, for the H3 factor."`
+	GasIntensity string     `json:"gas_intensity,omitempty" maxLength:"200" doc:"The reference pulse's m/z 2 intensity."`
+	GasRatio     string     `json:"gas_ratio,omitempty" maxLength:"200" doc:"The reference pulse's ratio of m/z 3 to m/z 2."`
+	When         *Condition `json:"when,omitempty" doc:"Only rows in which a column has a value."`
+	Optional     bool       `json:"optional,omitempty" doc:"May be empty in a row, which then gives no reading of it."`
 }
 
 // A Condition holds for rows in which the column's text equals equals.
@@ -170,9 +180,9 @@ func (m *Mapping) body() *store.Mapping {
 		return nil
 	}
 	out := &store.Mapping{Format: m.Format, Sheet: m.Sheet, HeaderRow: m.HeaderRow, Encoding: m.Encoding, Delimiter: m.Delimiter, Decimal: m.Decimal,
-		Zone: m.Zone, TimeLayout: m.TimeLayout, Columns: store.Columns(m.Columns)}
+		Zone: m.Zone, TimeLayout: m.TimeLayout, WidthBy: m.WidthBy, Columns: store.Columns(m.Columns)}
 	out.Quantities = convert(m.Quantities, func(q QuantityColumns) store.QuantityColumns {
-		s := store.QuantityColumns{Quantity: q.Quantity, Raw: q.Raw, U: q.U, Size: q.Size, Optional: q.Optional}
+		s := store.QuantityColumns{Quantity: q.Quantity, Raw: q.Raw, U: q.U, Size: q.Size, Intensity: q.Intensity, GasIntensity: q.GasIntensity, GasRatio: q.GasRatio, Optional: q.Optional}
 		if q.When != nil {
 			when := store.Condition(*q.When)
 			s.When = &when
@@ -193,9 +203,9 @@ func showMapping(m *store.Mapping) *Mapping {
 		return nil
 	}
 	out := &Mapping{Format: m.Format, Sheet: m.Sheet, HeaderRow: m.HeaderRow, Encoding: m.Encoding, Delimiter: m.Delimiter, Decimal: m.Decimal,
-		Zone: m.Zone, TimeLayout: m.TimeLayout, Columns: Columns(m.Columns)}
+		Zone: m.Zone, TimeLayout: m.TimeLayout, WidthBy: m.WidthBy, Columns: Columns(m.Columns)}
 	out.Quantities = convert(m.Quantities, func(q store.QuantityColumns) QuantityColumns {
-		s := QuantityColumns{Quantity: q.Quantity, Raw: q.Raw, U: q.U, Size: q.Size, Optional: q.Optional}
+		s := QuantityColumns{Quantity: q.Quantity, Raw: q.Raw, U: q.U, Size: q.Size, Intensity: q.Intensity, GasIntensity: q.GasIntensity, GasRatio: q.GasRatio, Optional: q.Optional}
 		if q.When != nil {
 			when := Condition(*q.When)
 			s.When = &when
@@ -217,7 +227,8 @@ func (b MethodBody) body() store.Method {
 			return store.MethodQuantity{Quantity: q.Quantity, Scale: q.Scale, Measurand: q.Measurand, Model: q.Model.body(), Limits: store.Limits(q.Limits),
 				BetweenSession: q.BetweenSession.body(), Roles: convertOrNil(q.Roles, func(r MaterialRole) store.MaterialRole {
 					return store.MaterialRole{Material: r.Material, Role: calib.Role(r.Role)}
-				})}
+				}), H3: pointed(q.H3, func(r H3Rule) store.H3Rule { return store.H3Rule(r) }), Blank: pointed(q.Blank, BlankRule.body),
+				Repeats: pointed(q.Repeats, func(r Repeats) store.Repeats { return store.Repeats(r) })}
 		}),
 		Corrections: convertOrNil(b.Corrections, func(c Correction) store.Correction { return store.Correction(c) }), Mapping: b.Import.body(),
 		Approval: store.Approval(b.Approval), Final: store.FinalRule(b.Final)}
@@ -236,7 +247,8 @@ func showMethod(it registry.Item[store.Method]) Method {
 			return MethodQuantity{Quantity: q.Quantity, Scale: q.Scale, Measurand: q.Measurand, Model: showModel(q.Model), Limits: Limits(q.Limits),
 				BetweenSession: showComponent(q.BetweenSession), Roles: convertOrNil(q.Roles, func(r store.MaterialRole) MaterialRole {
 					return MaterialRole{r.Material, string(r.Role)}
-				})}
+				}), H3: pointed(q.H3, func(r store.H3Rule) H3Rule { return H3Rule(r) }), Blank: pointed(q.Blank, showBlankRule),
+				Repeats: pointed(q.Repeats, func(r store.Repeats) Repeats { return Repeats(r) })}
 		}),
 		Corrections: showCorrections(m.Corrections), Import: showMapping(m.Mapping), Approval: Approval(m.Approval), Final: FinalRule(m.Final)}}
 }

@@ -123,7 +123,7 @@ func complain(message, place, found, expected string) error {
 func showCode(kind store.Kind, code string) string {
 	switch kind {
 	case store.KindFinal, store.KindCalibration, store.KindSession, store.KindReport, store.KindUnit, store.KindSample,
-		store.KindAssignment, store.KindFactor, store.KindRevision, store.KindToken, store.KindExclusion, kindReported:
+		store.KindAssignment, store.KindRevision, store.KindToken, store.KindExclusion, kindReported:
 		return store.FormatCode(code)
 	case store.KindOutcome:
 		session, quantity, ok := strings.Cut(code, "/")

@@ -20,26 +20,31 @@ import (
 
 // A Reading is one isotope quantity of one measured peak or injection.
 type Reading struct {
-	Number      int        `json:"number" doc:"In the session, from 1."`
-	Analysis    string     `json:"analysis,omitempty"`
-	Preparation string     `json:"preparation,omitempty"`
-	Position    *int       `json:"position,omitempty"`
-	Peak        *int       `json:"peak,omitempty"`
-	Quantity    string     `json:"quantity" example:"d13C"`
-	Role        string     `json:"role" enum:"anchor,control,monitor,blank,gas,conditioning,sample"`
-	Material    string     `json:"material,omitempty"`
-	Unit        string     `json:"unit,omitempty" doc:"Code of the unit it was taken from."`
-	Sample      string     `json:"sample,omitempty" doc:"Code of the sample."`
-	Compound    string     `json:"compound,omitempty"`
-	Group       string     `json:"group,omitempty"`
-	Time        *time.Time `json:"time,omitempty"`
-	Raw         float64    `json:"raw" doc:"Raw delta against the working gas (‰)."`
-	U           *float64   `json:"u,omitempty" doc:"Standard uncertainty of raw (‰)."`
-	Size        *float64   `json:"size,omitempty"`
-	Amount      *float64   `json:"amount,omitempty"`
-	Retention   *float64   `json:"retention,omitempty"`
-	Warning     string     `json:"warning,omitempty" doc:"The instrument's own remark."`
-	Excluded    bool       `json:"excluded" doc:"Left out of fits by an act of exclusion that still holds."`
+	Number       int        `json:"number" doc:"In the session, from 1."`
+	Analysis     string     `json:"analysis,omitempty"`
+	Preparation  string     `json:"preparation,omitempty"`
+	Position     *int       `json:"position,omitempty"`
+	Peak         *int       `json:"peak,omitempty"`
+	Quantity     string     `json:"quantity" example:"d13C"`
+	Role         string     `json:"role" enum:"anchor,control,monitor,blank,gas,conditioning,sample"`
+	Material     string     `json:"material,omitempty"`
+	Unit         string     `json:"unit,omitempty" doc:"Code of the unit it was taken from."`
+	Sample       string     `json:"sample,omitempty" doc:"Code of the sample."`
+	Compound     string     `json:"compound,omitempty"`
+	Group        string     `json:"group,omitempty"`
+	Time         *time.Time `json:"time,omitempty"`
+	Raw          float64    `json:"raw" doc:"Raw delta against the working gas (‰)."`
+	U            *float64   `json:"u,omitempty" doc:"Standard uncertainty of raw (‰)."`
+	Size         *float64   `json:"size,omitempty"`
+	Amount       *float64   `json:"amount,omitempty"`
+	Retention    *float64   `json:"retention,omitempty"`
+	Width        *float64   `json:"width,omitempty" doc:"Of the peak."`
+	WidthBy      string     `json:"width_by,omitempty" enum:"base,half-height"`
+	Intensity    *float64   `json:"intensity,omitempty" doc:"The peak's m/z 2 intensity."`
+	GasIntensity *float64   `json:"gas_intensity,omitempty"`
+	GasRatio     *float64   `json:"gas_ratio,omitempty"`
+	Warning      string     `json:"warning,omitempty" doc:"The instrument's own remark."`
+	Excluded     bool       `json:"excluded" doc:"Left out of fits by an act of exclusion that still holds."`
 }
 
 func showReading(r store.Reading, excluded map[int]bool) Reading {
@@ -48,21 +53,29 @@ func showReading(r store.Reading, excluded map[int]bool) Reading {
 		Time: timePointer(r.At), Raw: r.Raw, U: r.U, Size: r.Size, Excluded: excluded[r.Number]}
 	if r.Extra != "" {
 		var extra struct {
-			Amount    *float64 `json:"amount"`
-			Retention *float64 `json:"retention"`
-			Warning   string   `json:"warning"`
+			Amount       *float64 `json:"amount"`
+			Retention    *float64 `json:"retention"`
+			Width        *float64 `json:"width"`
+			WidthBy      string   `json:"width_by"`
+			Warning      string   `json:"warning"`
+			Intensity    *float64 `json:"intensity"`
+			GasIntensity *float64 `json:"gas_intensity"`
+			GasRatio     *float64 `json:"gas_ratio"`
 		}
 		if json.Unmarshal([]byte(r.Extra), &extra) == nil { // rare fields of other kinds are not shown
 			out.Amount, out.Retention, out.Warning = extra.Amount, extra.Retention, extra.Warning
+			out.Width, out.WidthBy = extra.Width, extra.WidthBy
+			out.Intensity, out.GasIntensity, out.GasRatio = extra.Intensity, extra.GasIntensity, extra.GasRatio
 		}
 	}
 	return out
 }
 
 var readingTable = table[Reading]{[]string{"number", "analysis", "preparation", "position", "peak", "quantity", "role", "material", "unit", "sample", "compound", "group",
-	"time", "raw", "u", "size", "amount", "retention", "warning", "excluded"}, func(r Reading) []string {
+	"time", "raw", "u", "size", "amount", "retention", "width", "width_by", "intensity", "gas_intensity", "gas_ratio", "warning", "excluded"}, func(r Reading) []string {
 	return []string{whole(&r.Number), r.Analysis, r.Preparation, whole(r.Position), whole(r.Peak), r.Quantity, r.Role, r.Material, r.Unit, r.Sample, r.Compound, r.Group,
-		clock(r.Time), number(r.Raw), optional(r.U), optional(r.Size), optional(r.Amount), optional(r.Retention), r.Warning, strconv.FormatBool(r.Excluded)}
+		clock(r.Time), number(r.Raw), optional(r.U), optional(r.Size), optional(r.Amount), optional(r.Retention), optional(r.Width), r.WidthBy,
+		optional(r.Intensity), optional(r.GasIntensity), optional(r.GasRatio), r.Warning, strconv.FormatBool(r.Excluded)}
 }}
 
 func (f *face) readings(ctx context.Context, actor registry.Actor, in *struct {
@@ -291,21 +304,26 @@ type NewReadings struct {
 
 // A NewReading is one isotope quantity of one peak, with names as they came.
 type NewReading struct {
-	Name        string     `json:"name" doc:"Material or sample, by code, alias or client's label."`
-	Role        string     `json:"role,omitempty" enum:"anchor,control,monitor,blank,gas,conditioning,sample" doc:"Left out: as the method says."`
-	Unit        string     `json:"unit,omitempty"`
-	Analysis    string     `json:"analysis,omitempty"`
-	Preparation string     `json:"preparation,omitempty"`
-	Position    *int       `json:"position,omitempty"`
-	Peak        *int       `json:"peak,omitempty"`
-	Time        *time.Time `json:"time,omitempty"`
-	Amount      *float64   `json:"amount,omitempty"`
-	Compound    string     `json:"compound,omitempty"`
-	Retention   *float64   `json:"retention,omitempty"`
-	Group       string     `json:"group,omitempty"`
-	Warning     string     `json:"warning,omitempty"`
-	Quantity    string     `json:"quantity" example:"d13C"`
-	Raw         float64    `json:"raw" doc:"Raw delta against the working gas (‰)."`
-	U           *float64   `json:"u,omitempty"`
-	Size        *float64   `json:"size,omitempty"`
+	Name         string     `json:"name" doc:"Material or sample, by code, alias or client's label."`
+	Role         string     `json:"role,omitempty" enum:"anchor,control,monitor,blank,gas,conditioning,sample" doc:"Left out: as the method says."`
+	Unit         string     `json:"unit,omitempty"`
+	Analysis     string     `json:"analysis,omitempty"`
+	Preparation  string     `json:"preparation,omitempty"`
+	Position     *int       `json:"position,omitempty"`
+	Peak         *int       `json:"peak,omitempty"`
+	Time         *time.Time `json:"time,omitempty"`
+	Amount       *float64   `json:"amount,omitempty"`
+	Compound     string     `json:"compound,omitempty"`
+	Retention    *float64   `json:"retention,omitempty"`
+	Width        *float64   `json:"width,omitempty" doc:"Of the peak."`
+	WidthBy      string     `json:"width_by,omitempty" enum:"base,half-height"`
+	Intensity    *float64   `json:"intensity,omitempty" doc:"The peak's m/z 2 intensity."`
+	GasIntensity *float64   `json:"gas_intensity,omitempty"`
+	GasRatio     *float64   `json:"gas_ratio,omitempty"`
+	Group        string     `json:"group,omitempty"`
+	Warning      string     `json:"warning,omitempty"`
+	Quantity     string     `json:"quantity" example:"d13C"`
+	Raw          float64    `json:"raw" doc:"Raw delta against the working gas (‰)."`
+	U            *float64   `json:"u,omitempty"`
+	Size         *float64   `json:"size,omitempty"`
 }

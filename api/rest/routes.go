@@ -22,6 +22,15 @@ func (f *face) routes() {
 	handle(f, o(get, "/scales/{code}/versions", "listScaleVersions", "scales", "List the definition history of a scale", listing[Scale]), versionsOf(f, scaleKind))
 	handle(f, o(get, "/scales/{code}/versions/{version}", "getScaleVersion", "scales", "Read one version of a scale"), versionOf(f, scaleKind))
 
+	handle(f, o(get, "/relations", "listRelations", "materials", "List relations: conversions, constants, rules", listing[Relation]), f.relations)
+	handle(f, o(post, "/relations", "addRelation", "materials", "State a relation: a draft", creates), f.addRelation)
+	handle(f, o(get, "/relations/{code}", "getRelation", "materials", "Read a relation"), recordOf(f, relationKind))
+	handle(f, o(get, "/relations/{code}/versions", "listRelationVersions", "materials", "List the versions of a relation", listing[Relation]), versionsOf(f, relationKind))
+	handle(f, o(post, "/relations/{code}/versions", "changeRelation", "materials", "State a further version of a relation: a draft", creates, conditional), f.changeRelation)
+	handle(f, o(get, "/relations/{code}/versions/{version}", "getRelationVersion", "materials", "Read one version of a relation"), versionOf(f, relationKind))
+	handle(f, o(get, "/relations/{code}/decisions", "listRelationDecisions", "materials", "List the decisions on a relation", listing[VersionDecision]), decisionsOn(f, relationKind))
+	handle(f, o(post, "/relations/{code}/decisions", "decideRelation", "materials", "Submit, approve, decline or withdraw a relation", creates, conditional), decisionOn(f, relationKind))
+
 	materialKind := kindOfRecord[store.Material, Material]{kind: store.KindMaterial, show: showMaterial, csv: materialTable}
 	handle(f, o(get, "/materials", "listMaterials", "materials", "List reference materials", listing[Material]), f.materials)
 	handle(f, o(post, "/materials", "addMaterial", "materials", "Register a reference material", creates), f.addMaterial)
@@ -58,6 +67,7 @@ func (f *face) routes() {
 	handle(f, o(get, value+"/versions/{version}", "getValueVersion", "materials", "Read one version of a value"), f.valueVersion)
 	handle(f, o(post, value+"/assignments", "assignValue", "materials", "State a value from the sessions that measured the material: a draft", creates, conditional), f.assignValue)
 	handle(f, o(get, value+"/decisions", "listValueDecisions", "materials", "List the decisions on a value", listing[VersionDecision]), f.valueDecisions)
+	handle(f, o(post, value+"/conversions", "convertValue", "materials", "State a value on another scale by a relation: a draft", creates), f.convertValue)
 	handle(f, o(post, value+"/decisions", "decideValue", "materials", "Submit, approve, decline or withdraw a value", creates, conditional), f.decideValue)
 	handle(f, o(get, value+"/trace", "traceValue", "trust", "Trace a value", answers[Trace], also("text/plain", "Indented lines.")), f.traceValue)
 
@@ -80,6 +90,11 @@ func (f *face) routes() {
 	handle(f, o(get, "/instruments/{code}/versions", "listInstrumentVersions", "sessions", "List the versions of an instrument", listing[Instrument]), versionsOf(f, instrumentKind))
 	handle(f, o(post, "/instruments/{code}/versions", "changeInstrument", "sessions", "State a further version of an instrument", creates, conditional), f.changeInstrument)
 	handle(f, o(get, "/instruments/{code}/versions/{version}", "getInstrumentVersion", "sessions", "Read one version of an instrument"), versionOf(f, instrumentKind))
+	handle(f, o(get, "/instruments/{code}/h3-factors", "listFactors", "sessions", "List the determinations of an instrument's H3 factor", listing[Factor]), f.factors)
+	handle(f, o(post, "/instruments/{code}/h3-factors", "addFactor", "sessions", "Determine an H3 factor from pulses, or record one applied elsewhere: a draft", creates), f.addFactor)
+	handle(f, o(get, "/instruments/{code}/h3-factors/{version}", "getFactor", "sessions", "Read one determination of an H3 factor"), versionOf(f, factorKind))
+	handle(f, o(get, "/instruments/{code}/h3-factors/decisions", "listFactorDecisions", "sessions", "List the decisions on H3 factors", listing[VersionDecision]), decisionsOn(f, factorKind))
+	handle(f, o(post, "/instruments/{code}/h3-factors/decisions", "decideFactor", "sessions", "Submit, approve, decline or withdraw an H3 factor", creates, conditional), decisionOn(f, factorKind))
 
 	handle(f, o(get, "/methods", "listMethods", "sessions", "List methods", listing[Method]), recordsOf(f, methodKind))
 	handle(f, o(post, "/methods", "addMethod", "sessions", "State a method: a draft", creates), f.addMethod)
@@ -119,6 +134,7 @@ func (f *face) routes() {
 	handle(f, o(post, "/calibrations/{code}/decisions", "decideCalibration", "calibrations", "Submit, approve, decline or withdraw a calibration", creates, conditional), decisionOn(f, calibrationKind))
 	handle(f, o(get, "/calibrations/{code}/trace", "traceCalibration", "trust", "Trace a calibration", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, calibrationKind))
 	handle(f, o(post, "/calculations/fit", "calculateFit", "calibrations", "Fit without storing anything", fitBody), f.calculateFit)
+	handle(f, o(post, "/calculations/conversion", "calculateConversion", "calibrations", "Convert a delta to another scale without storing anything"), f.calculateConversion)
 
 	handle(f, o(get, "/samples", "listSamples", "samples", "List samples", listing[Sample]), recordsOf(f, sampleKind))
 	handle(f, o(post, "/samples", "addSamples", "samples", "Put samples on the list: all or none", creates, long,
@@ -136,6 +152,7 @@ func (f *face) routes() {
 	handle(f, o(get, "/finals/{code}/decisions", "listFinalDecisions", "samples", "List the decisions on a final value", listing[VersionDecision]), decisionsOn(f, finalKind))
 	handle(f, o(post, "/finals/{code}/decisions", "decideFinal", "samples", "Submit, approve, decline or withdraw a final value", creates, conditional), decisionOn(f, finalKind))
 	handle(f, o(get, "/finals/{code}/trace", "traceFinal", "trust", "Trace a final value", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, finalKind))
+	handle(f, o(post, "/finals/{code}/conversions", "convertFinal", "samples", "Draw up a final value on another scale: a draft", creates), f.convertFinal)
 
 	handle(f, o(get, "/reports", "listReports", "samples", "List reports", listing[ReportSummary]), recordsOf(f, reportKind))
 	handle(f, o(post, "/reports", "issueReport", "samples", "Issue final values: each line gets its permanent code", creates), f.issue)

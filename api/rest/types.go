@@ -199,6 +199,15 @@ func convertOrNil[S, T any](in []S, f func(S) T) []T {
 	return convert(in, f)
 }
 
+// pointed converts what a pointer points to; nil stays nil.
+func pointed[S, T any](in *S, f func(S) T) *T {
+	if in == nil {
+		return nil
+	}
+	out := f(*in)
+	return &out
+}
+
 func parseHash(place, text string) (*store.Hash, error) {
 	if text == "" {
 		return nil, nil
