@@ -43,6 +43,9 @@ func layOut(m store.Mapping, rows []row, digits map[string]int) ([][]cell, error
 	head := texts(c.Position, c.Name, c.Role, c.Unit, c.Preparation, c.Time, c.Amount)
 	for _, q := range m.Quantities {
 		head = append(head, texts(q.Raw, q.Size)...)
+		if q.Intensity != "" {
+			head = append(head, texts(q.Intensity, q.GasIntensity, q.GasRatio)...)
+		}
 	}
 	table := [][]cell{append(head, texts(c.Warning)...)}
 	for _, r := range rows {
@@ -58,6 +61,11 @@ func layOut(m store.Mapping, rows []row, digits map[string]int) ([][]cell, error
 				line = append(line, number(raw, digits[q.Quantity]), number(r.size[q.Quantity], 2))
 			} else {
 				line = append(line, cell{}, cell{})
+			}
+			if height, ok := r.height[q.Quantity]; ok && q.Intensity != "" {
+				line = append(line, number(height, 3), number(r.gas[q.Quantity][0], 3), number(r.gas[q.Quantity][1], 3))
+			} else if q.Intensity != "" {
+				line = append(line, cell{}, cell{}, cell{})
 			}
 		}
 		table = append(table, append(line, cell{text: r.remark}))

@@ -21,7 +21,7 @@ func combustionMapping() *store.Mapping {
 func furnaceMapping() *store.Mapping {
 	return &store.Mapping{Format: "csv", Encoding: "utf-8", Delimiter: ",", Decimal: ".", Zone: "UTC",
 		Columns:    store.Columns{Position: "slot", Name: "crimp holds", Role: "warm-up", Unit: "from bottle", Preparation: "tube", Time: "dropped (UTC)", Amount: "filled/µg", Warning: "seen"},
-		Quantities: []store.QuantityColumns{{Quantity: "d2H", Raw: "H2 against gas/‰", Size: "H2 charge/nC"}},
+		Quantities: []store.QuantityColumns{{Quantity: "d2H", Raw: "H2 against gas/‰", Size: "H2 charge/nC", Intensity: "H2 top/nA", GasIntensity: "gas plateau/nA", GasRatio: "gas 3:2/ppm"}},
 		RoleWords:  map[string]calib.Role{"yes": calib.Conditioning}}
 }
 
@@ -62,10 +62,12 @@ func methods() map[string]store.Method {
 		Limits:         store.Limits{Probability: 0.95, SlopeFrom: 0.97, SlopeTo: 1.03, ControlDeviation: 0.3, ReplicateSD: 0.2, MinimumAnchors: 2, ControlRequired: true},
 		BetweenSession: between(betweenN)}
 	hydrogen := store.MethodQuantity{Quantity: "d2H", Scale: scaleH, Model: calib.Model{Drift: calib.DriftLinear, Memory: calib.MemoryCarryover, Weights: calib.WeightsReplicate},
-		Limits:         store.Limits{Probability: 0.95, SlopeFrom: 0.85, SlopeTo: 1.15, ControlDeviation: 3, ReplicateSD: 3, MinimumAnchors: 2, ControlRequired: true},
+		Limits: store.Limits{Probability: 0.95, SlopeFrom: 0.85, SlopeTo: 1.15, ControlDeviation: 3, ReplicateSD: 3, MinimumAnchors: 2, ControlRequired: true},
+		// The furnace's file gives the height of a peak; flat pulses give the factor each morning.
+		H3:             &store.H3Rule{RatioUnit: "ppm", IntensityUnit: "nA", Shape: "gaussian", MaximumAgeHours: 24, MaximumChange: 0.3},
 		BetweenSession: between(betweenH)}
 	combustion := []store.Correction{
-		{Name: "o17", Quantity: "d13C", State: "earlier", By: "burner bench program 3.2", Constants: "the set named in the procedure, section 6"},
+		{Name: "o17", Quantity: "d13C", State: "earlier", By: "burner bench program 3.2", Relations: []string{"lambda17", "R17-R13-VPDB"}},
 		{Name: "background", State: "earlier", By: "burner bench program 3.2"},
 		{Name: "blank", State: "not applicable"},
 		{Name: "dilution", State: "not applicable"},
@@ -74,7 +76,7 @@ func methods() map[string]store.Method {
 		{Name: "size", Quantity: "d13C", State: "not applicable"},
 	}
 	conversion := []store.Correction{
-		{Name: "h3", State: "earlier", By: "furnace bench program 5.0", Constants: "factor 4.1 ppm/nA, determined each morning from ten pulses"},
+		{Name: "h3", State: "here"},
 		{Name: "background", State: "earlier", By: "furnace bench program 5.0"},
 		{Name: "blank", State: "not applicable"},
 		{Name: "drift", State: "here"},

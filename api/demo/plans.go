@@ -25,7 +25,8 @@ func combustionDay(random *rand.Rand) instrumentDay {
 func conversionDay(random *rand.Rand) instrumentDay {
 	return instrumentDay{minutes: 6, channels: []channel{
 		{quantity: "d2H", scale: scaleH, gas: -95, stretch: 0.955 + 0.01*random.NormFloat64(), drift: 0.3 * random.NormFloat64(),
-			memory: 0.02 + 0.004*random.NormFloat64(), noise: 1.1, between: betweenH, digits: 2, perAmount: 0.5},
+			memory: 0.02 + 0.004*random.NormFloat64(), noise: 1.1, between: betweenH, digits: 2, perAmount: 0.5,
+			source: &ionSource{factor: 4.1 + 0.04*random.NormFloat64(), ratio: 282, plateau: 5, height: 0.5}},
 	}}
 }
 

@@ -40,9 +40,28 @@ func (b *builder) open(ctx context.Context, seats []seat) error {
 	return nil
 }
 
+// determine measures the H3 factor of an instrument before a session, from ten pulses.
+func (b *builder) determine(ctx context.Context, p runPlan, source ionSource) error {
+	b.clock.Until(p.started.Add(-time.Hour))
+	f, err := b.reg.StateFactor(ctx, b.summary.Analyst, p.instrument, store.Factor{Origin: registry.FromPulses, DeterminedAt: store.InstantOf(p.started.Add(-70 * time.Minute)), RatioUnit: "ppm", IntensityUnit: "nA",
+		Resistor: 1e9, Shape: "flat", Pulses: source.pulses(b.draw("pulses " + p.label)), Gas: "the furnace's hydrogen", Settings: "as after the last service"}, registry.Edit{})
+	if err != nil {
+		return fmt.Errorf("H3 factor before %s: %w", p.label, err)
+	}
+	b.minutes(4)
+	return b.decide(ctx, b.summary.Signatory, f.Ref, 0, "approved", "", "pulses and residuals reviewed")
+}
+
 // measure runs a session, writes its file and imports it.
 func (b *builder) measure(ctx context.Context, p runPlan) (Session, []store.Reading, string, error) {
 	session := Session{Label: p.label, Method: p.method, Instrument: p.instrument, StartedAt: p.started, Calibrations: map[string]string{}}
+	for _, c := range p.day.channels {
+		if c.source != nil {
+			if err := b.determine(ctx, p, *c.source); err != nil {
+				return session, nil, "", err
+			}
+		}
+	}
 	b.clock.Until(p.started.Add(-30 * time.Minute))
 	if err := b.open(ctx, p.seats); err != nil {
 		return session, nil, "", err

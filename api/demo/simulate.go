@@ -4,6 +4,8 @@ import (
 	"math"
 	"math/rand/v2"
 	"time"
+
+	"deltamoor/store"
 )
 
 // A channel is how one quantity reads on one instrument on one day. The raw
@@ -12,6 +14,8 @@ import (
 //	(1 + δ_true) = (1 + δ_raw)(1 + δ_gas)                 the working gas, in ‰ with 1/1000
 //	f = stretch·δ_raw + drift·t + size·(s − reference)
 //	r = (1 − memory)·f + memory·r₋₁ + ε,  ε ~ N(0, noise)  r₋₁ the raw delta read before
+//
+// and, of hydrogen, what H3+ ions make of r in the file.
 type channel struct {
 	quantity, scale string
 	gas             float64 // δ of the working gas on the scale, ‰
@@ -24,6 +28,34 @@ type channel struct {
 	between         float64 // session's own effect on each sample and control, ‰
 	digits          int     // decimals that the instrument exports
 	perAmount       float64 // peak size per µg of the element
+	source          *ionSource
+}
+
+// An ionSource makes H3+: every measured ratio of m/z 3 to m/z 2 (ppm) is
+// larger by factor × intensity (nA).
+type ionSource struct {
+	factor  float64 // ppm/nA
+	ratio   float64 // of the working gas, without H3+
+	plateau float64 // intensity of its flat pulses
+	height  float64 // of a peak, nA per unit of size
+}
+
+// measured is the delta of ratios that hold H3+, for a peak of a Gaussian's height.
+func (s ionSource) measured(raw, height float64) float64 {
+	sample := s.ratio*(1+raw/1000) + s.factor*height/math.Sqrt2
+	return (sample/s.gasRatio() - 1) * 1000
+}
+
+func (s ionSource) gasRatio() float64 { return s.ratio + s.factor*s.plateau }
+
+// pulses are ten flat pulses of the working gas, as they read.
+func (s ionSource) pulses(random *rand.Rand) []store.FactorPulse {
+	var list []store.FactorPulse
+	for i := range 10 {
+		intensity := round(float64(i+1)*(1+0.01*random.NormFloat64()), 3)
+		list = append(list, store.FactorPulse{Intensity: intensity, Ratio: round(s.ratio+s.factor*intensity+0.05*random.NormFloat64(), 3)})
+	}
+	return list
 }
 
 func (c channel) raw(true_, hours, size, previous, epsilon float64) float64 {
@@ -57,6 +89,8 @@ type row struct {
 	at       time.Time
 	raw      map[string]float64
 	size     map[string]float64
+	height   map[string]float64    // of the peak, where H3+ counts
+	gas      map[string][2]float64 // the gas pulse's intensity and ratio
 }
 
 // run simulates a session. Truth is of subjects and scales; anchors are the
@@ -68,7 +102,8 @@ func run(random *rand.Rand, day instrumentDay, started time.Time, seats []seat, 
 	rows := make([]row, 0, len(seats))
 	for i, s := range seats {
 		hours := float64(i) * day.minutes / 60
-		r := row{seat: s, position: i + 1, at: started.Add(time.Duration(hours * float64(time.Hour))).Truncate(time.Second), raw: map[string]float64{}, size: map[string]float64{}}
+		r := row{seat: s, position: i + 1, at: started.Add(time.Duration(hours * float64(time.Hour))).Truncate(time.Second), raw: map[string]float64{}, size: map[string]float64{},
+			height: map[string]float64{}, gas: map[string][2]float64{}}
 		if r.amount == 0 {
 			r.amount = amountOf(random, s.element, anchored(anchors, s.subject))
 		}
@@ -93,6 +128,12 @@ func run(random *rand.Rand, day instrumentDay, started time.Time, seats []seat, 
 			raw := c.raw(true_+s.offset[c.quantity], hours, size, previous[c.quantity], epsilon)
 			r.raw[c.quantity], r.size[c.quantity] = round(raw, c.digits), size
 			previous[c.quantity] = r.raw[c.quantity]
+			if s := c.source; s != nil {
+				height := round(size*s.height, 3)
+				r.raw[c.quantity] = round(s.measured(raw, height), c.digits+1)
+				r.height[c.quantity], r.gas[c.quantity] = height, [2]float64{s.plateau, round(s.gasRatio(), 3)}
+				previous[c.quantity] = raw // carry-over is of gas, not of ions
+			}
 		}
 		rows = append(rows, r)
 	}
