@@ -33,6 +33,7 @@ func Build(ctx context.Context, reg *registry.Registry, clock *Clock, seed uint6
 		{"measure waters", b.measureWaters},
 		{"report", b.report},
 		{"run a campaign", b.campaign},
+		{"measure waters by laser", b.measureByLaser},
 		{"revoke the first token", b.revoke},
 	} {
 		if err := step.do(ctx); err != nil {
@@ -113,7 +114,7 @@ func (b *builder) revoke(ctx context.Context) error {
 	return nil
 }
 
-var scaleOf = map[string]string{"d13C": scaleC, "d15N": scaleN, "d2H": scaleH}
+var scaleOf = map[string]string{"d13C": scaleC, "d15N": scaleN, "d2H": scaleH, "d18O": scaleO}
 
 // register brings in instruments, gases, working standards and the vials of
 // international materials, and draws what each of them really is.
@@ -125,6 +126,7 @@ func (b *builder) register(ctx context.Context) error {
 	}{
 		{burner, store.Instrument{Name: "combustion analyser with mass spectrometer", Configuration: "tin capsules, oxidation and reduction reactors, helium carrier", Serial: "OV-0412", Location: "east bay"}},
 		{cracker, store.Instrument{Name: "conversion furnace with mass spectrometer", Configuration: "crimped silver tubes, chromium reactor at 1030 °C, helium carrier", Serial: "OV-0533", Location: "west bay"}},
+		{mirrors, store.Instrument{Name: "laser absorption analyser for waters", Configuration: "vaporiser at 110 °C, dry air carrier", Serial: "OV-0561", Location: "west bay"}},
 	} {
 		b.minutes(5)
 		if _, err := b.reg.StateInstrument(ctx, b.summary.Manager, in.code, in.body, registry.Edit{}); err != nil {
@@ -157,7 +159,7 @@ func (b *builder) register(ctx context.Context) error {
 		}
 	}
 	anchors := map[string]map[string]bool{}
-	for _, method := range []string{valueCN, valueWater} {
+	for _, method := range []string{valueCN, valueWater, laser} {
 		maps.Copy(anchors, anchorsOf(b.methods[method]))
 	}
 	for _, m := range internationals() {

@@ -54,7 +54,7 @@ func layOut(m store.Mapping, rows []row, digits map[string]int) ([][]cell, error
 			name = r.subject
 		}
 		line := []cell{number(float64(r.position), 0)}
-		line = append(line, texts(name, r.role, r.unit, fmt.Sprintf("k%03d", r.position), r.at.In(at).Format(layout))...)
+		line = append(line, texts(name, r.role, r.unit, portionOf(r), r.at.In(at).Format(layout))...)
 		line = append(line, number(r.amount, 0))
 		for _, q := range m.Quantities {
 			if raw, ok := r.raw[q.Quantity]; ok {
@@ -71,6 +71,14 @@ func layOut(m store.Mapping, rows []row, digits map[string]int) ([][]cell, error
 		table = append(table, append(line, cell{text: r.remark}))
 	}
 	return table, nil
+}
+
+// portionOf names the portion of a row: one for each position, but where several share one.
+func portionOf(r row) string {
+	if r.portion != "" {
+		return r.portion
+	}
+	return fmt.Sprintf("k%03d", r.position)
 }
 
 // fileOf writes a table in the mapping's own dialect.

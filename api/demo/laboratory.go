@@ -11,6 +11,7 @@ const (
 	scaleC = "d13C-VPDB-LSVEC"
 	scaleN = "d15N-AIR"
 	scaleH = "d2H-VSMOW-SLAP"
+	scaleO = "d18O-VSMOW-SLAP"
 )
 
 // Laboratory is the code of the invented laboratory, and zone its clock.
@@ -24,10 +25,12 @@ const (
 const (
 	burner     = "burner-1"
 	cracker    = "cracker-2"
+	mirrors    = "mirrors-3"
 	valueCN    = "value-cn"
 	bulkCN     = "bulk-cn"
 	valueWater = "value-water"
 	water      = "water-h"
+	laser      = "water-o"
 )
 
 // people of the laboratory, by what they do in it.
@@ -71,7 +74,7 @@ func standards() []standard {
 	}
 	liquid := func(code, name, lot string, h float64) standard {
 		return standard{code: code, name: name, substance: "water", matrix: "water", lot: lot, kind: "working",
-			near: map[string]float64{scaleH: h}, element: map[string]float64{"d2H": 0.112},
+			near: map[string]float64{scaleH: h}, element: map[string]float64{"d2H": 0.112, "d18O": 0.888},
 			units: 6, content: "50", contentUnit: "mL", storage: "sealed bottle without headspace, 4 °C"}
 	}
 	list := []standard{
@@ -135,9 +138,9 @@ func internationals() []international {
 		{"IAEA-600", map[string]float64{"d13C": 0.495, "d15N": 0.289}},
 		{"IAEA-N-1", map[string]float64{"d15N": 0.212}},
 		{"USGS32", map[string]float64{"d15N": 0.139}},
-		{"VSMOW2", map[string]float64{"d2H": 0.112}},
-		{"SLAP2", map[string]float64{"d2H": 0.112}},
-		{"USGS46", map[string]float64{"d2H": 0.112}},
+		{"VSMOW2", map[string]float64{"d2H": 0.112, "d18O": 0.888}},
+		{"SLAP2", map[string]float64{"d2H": 0.112, "d18O": 0.888}},
+		{"USGS46", map[string]float64{"d2H": 0.112, "d18O": 0.888}},
 	}
 }
 

@@ -50,9 +50,22 @@ const (
 	betweenC = 0.03 // ‰
 	betweenN = 0.05
 	betweenH = 0.5
+	betweenO = 0.03
 )
 
-// methods are the laboratory's four procedures. Limits follow common practice
+// capsules are what a tin capsule brings: little nitrogen, in the unit of peak
+// sizes, and its raw delta.
+var capsules = blank{size: 0.3, raw: 4}
+
+// laserMapping reads the laser's file: one row for each injection.
+func laserMapping() *store.Mapping {
+	return &store.Mapping{Format: "csv", Encoding: "utf-8", Delimiter: ",", Decimal: ".", Zone: "UTC",
+		Columns:    store.Columns{Position: "injection", Name: "bottle label", Role: "rinse", Unit: "from bottle", Preparation: "vial", Time: "sipped (UTC)", Amount: "sip/nL", Warning: "seen"},
+		Quantities: []store.QuantityColumns{{Quantity: "d18O", Raw: "d18O, maker's line", Size: "vapour/1000 ppm"}},
+		RoleWords:  map[string]calib.Role{"yes": calib.Conditioning}}
+}
+
+// methods are the laboratory's five procedures. Limits follow common practice
 // for the techniques; they are the laboratory's to change.
 func methods() map[string]store.Method {
 	carbon := store.MethodQuantity{Quantity: "d13C", Scale: scaleC, Model: calib.Model{Drift: calib.DriftLinear, Weights: calib.WeightsReplicate},
@@ -60,6 +73,7 @@ func methods() map[string]store.Method {
 		BetweenSession: between(betweenC)}
 	nitrogen := store.MethodQuantity{Quantity: "d15N", Scale: scaleN, Model: calib.Model{Drift: calib.DriftLinear, Size: calib.SizeLinear, Weights: calib.WeightsReplicate},
 		Limits:         store.Limits{Probability: 0.95, SlopeFrom: 0.97, SlopeTo: 1.03, ControlDeviation: 0.3, ReplicateSD: 0.2, MinimumAnchors: 2, ControlRequired: true},
+		Blank:          &store.BlankRule{From: "stated", Size: capsules.size, USize: 0.03, Raw: capsules.raw, URaw: 0.8, Evidence: "41 empty capsules of 2024, none since"},
 		BetweenSession: between(betweenN)}
 	hydrogen := store.MethodQuantity{Quantity: "d2H", Scale: scaleH, Model: calib.Model{Drift: calib.DriftLinear, Memory: calib.MemoryCarryover, Weights: calib.WeightsReplicate},
 		Limits: store.Limits{Probability: 0.95, SlopeFrom: 0.85, SlopeTo: 1.15, ControlDeviation: 3, ReplicateSD: 3, MinimumAnchors: 2, ControlRequired: true},
@@ -69,12 +83,18 @@ func methods() map[string]store.Method {
 	combustion := []store.Correction{
 		{Name: "o17", Quantity: "d13C", State: "earlier", By: "burner bench program 3.2", Relations: []string{"lambda17", "R17-R13-VPDB"}},
 		{Name: "background", State: "earlier", By: "burner bench program 3.2"},
-		{Name: "blank", State: "not applicable"},
+		{Name: "blank", Quantity: "d15N", State: "here"},
+		{Name: "blank", Quantity: "d13C", State: "not applicable"},
 		{Name: "dilution", State: "not applicable"},
 		{Name: "drift", State: "here"},
 		{Name: "size", Quantity: "d15N", State: "here"},
 		{Name: "size", Quantity: "d13C", State: "not applicable"},
 	}
+	// Six injections of a vial are one portion: two rinse the cavity, four count as their mean.
+	oxygen := store.MethodQuantity{Quantity: "d18O", Scale: scaleO, Model: calib.Model{Drift: calib.DriftLinear, Weights: calib.WeightsReplicate},
+		Limits:         store.Limits{Probability: 0.95, SlopeFrom: 0.95, SlopeTo: 1.05, ControlDeviation: 0.2, ReplicateSD: 0.1, MinimumAnchors: 2, ControlRequired: true},
+		Repeats:        &store.Repeats{Within: "preparation", IgnoreFirst: 2, Average: true},
+		BetweenSession: between(betweenO)}
 	conversion := []store.Correction{
 		{Name: "h3", State: "here"},
 		{Name: "background", State: "earlier", By: "furnace bench program 5.0"},
@@ -110,6 +130,11 @@ func methods() map[string]store.Method {
 		valueWater: {Title: "Hydrogen of working waters against international waters", Procedure: "OV-P-21, issue 1",
 			Quantities:  []store.MethodQuantity{with(hydrogen, roles(calib.Anchor, "VSMOW2", "SLAP2"), roles(calib.Control, "USGS46"))},
 			Corrections: conversion, Mapping: furnaceMapping(), Approval: approval, Final: rule},
+		laser: {Title: "Oxygen of waters by laser absorption", Procedure: "OV-P-31, issue 1",
+			Quantities: []store.MethodQuantity{with(oxygen, roles(calib.Anchor, "VSMOW2", "SLAP2"), roles(calib.Control, "USGS46"))},
+			Corrections: []store.Correction{{Name: "drift", State: "here"}, {Name: "memory", State: "here", By: "the first two injections of each vial are set aside"},
+				{Name: "size", State: "not applicable"}},
+			Mapping: laserMapping(), Approval: approval, Final: rule},
 		water: {Title: "Hydrogen of waters by high-temperature conversion", Procedure: "OV-P-22, issue 3",
 			Quantities:  []store.MethodQuantity{with(hydrogen, roles(calib.Anchor, waterAnchors()...), roles(calib.Control, controlWater))},
 			Corrections: conversion, Mapping: workbookMapping(), Approval: approval, Final: rule},

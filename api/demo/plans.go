@@ -15,7 +15,7 @@ func (e elements) seat(subject string) seat { return seat{subject: subject, elem
 func combustionDay(random *rand.Rand) instrumentDay {
 	return instrumentDay{minutes: 9, channels: []channel{
 		{quantity: "d15N", scale: scaleN, gas: -1.2, stretch: 1 + 0.004*random.NormFloat64(), drift: 0.03 * random.NormFloat64(), size: 0.015 + 0.003*random.NormFloat64(),
-			reference: 22, noise: 0.09, between: betweenN, digits: 3, perAmount: 0.35},
+			reference: 22, noise: 0.09, between: betweenN, digits: 3, perAmount: 0.35, blank: capsules},
 		{quantity: "d13C", scale: scaleC, gas: -24.7, stretch: 0.985 + 0.004*random.NormFloat64(), drift: 0.02 * random.NormFloat64(),
 			noise: 0.05, between: betweenC, digits: 3, perAmount: 0.09},
 	}}
@@ -26,7 +26,7 @@ func conversionDay(random *rand.Rand) instrumentDay {
 	return instrumentDay{minutes: 6, channels: []channel{
 		{quantity: "d2H", scale: scaleH, gas: -95, stretch: 0.955 + 0.01*random.NormFloat64(), drift: 0.3 * random.NormFloat64(),
 			memory: 0.02 + 0.004*random.NormFloat64(), noise: 1.1, between: betweenH, digits: 2, perAmount: 0.5,
-			source: &ionSource{factor: 4.1 + 0.04*random.NormFloat64(), ratio: 282, plateau: 5, height: 0.5}},
+			source: &ionSource{factor: 4.1 + 0.005*random.NormFloat64(), ratio: 282, plateau: 5, height: 0.5}},
 	}}
 }
 

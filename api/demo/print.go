@@ -110,7 +110,7 @@ func said(flags []calib.Flag, code string) string {
 }
 
 // quantities are told to people with a delta.
-var quantityNames = map[string]string{scaleC: "carbon, δ13C", scaleN: "nitrogen, δ15N", scaleH: "hydrogen, δ2H"}
+var quantityNames = map[string]string{scaleC: "carbon, δ13C", scaleN: "nitrogen, δ15N", scaleH: "hydrogen, δ2H", scaleO: "oxygen, δ18O"}
 
 // report prints one report: a table for each scale, with one number of
 // decimals from two digits of the median u of the column.

@@ -151,7 +151,7 @@ func (b *builder) measureWaters(ctx context.Context) error {
 	random := b.draw("waters 1")
 	// Room air in the furnace mixes with every sample: the line gets flat and noisy.
 	leaking := conversionDay(random)
-	leaking.channels[0].stretch *= 0.8
+	leaking.channels[0].stretch *= 0.78
 	leaking.channels[0].noise *= 3
 	session, _, _, err := b.measure(ctx, runPlan{label: "waters of April, 1", method: water, instrument: cracker, started: at(time.April, 22, 17),
 		day: leaking, seats: b.element.watersSession(samples, "2"), random: random})

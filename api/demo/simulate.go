@@ -28,7 +28,16 @@ type channel struct {
 	between         float64 // session's own effect on each sample and control, ‰
 	digits          int     // decimals that the instrument exports
 	perAmount       float64 // peak size per µg of the element
+	blank           blank
 	source          *ionSource
+}
+
+// A blank is what every portion brings with it: its peak size and its raw delta (‰).
+type blank struct{ size, raw float64 }
+
+// mixed is the raw delta of a portion of its own size with the blank in it.
+func (b blank) mixed(raw, own float64) float64 {
+	return (raw*own + b.raw*b.size) / (own + b.size)
 }
 
 // An ionSource makes H3+: every measured ratio of m/z 3 to m/z 2 (ppm) is
@@ -80,6 +89,7 @@ type seat struct {
 	amount  float64            // µg weighed; 0 draws one
 	offset  map[string]float64 // ‰ by which the true delta of this portion is off, by quantity
 	remark  string
+	portion string // what the file calls the portion; "" is one of its own
 }
 
 // A row is what the instrument wrote for one seat.
@@ -109,11 +119,11 @@ func run(random *rand.Rand, day instrumentDay, started time.Time, seats []seat, 
 		}
 		for _, c := range day.channels {
 			epsilon := c.noise * random.NormFloat64()
-			size := r.amount * s.element[c.quantity] * c.perAmount * (1 + 0.01*random.NormFloat64())
-			if size <= 0 {
+			own := r.amount * s.element[c.quantity] * c.perAmount * (1 + 0.01*random.NormFloat64())
+			if own <= 0 {
 				continue // no peak
 			}
-			size = round(size, 2)
+			size := round(own+c.blank.size, 2)
 			true_, known := truth.of(s.subject, c.scale)
 			if !known {
 				true_ = c.gas + 3 // whatever is in an empty capsule or a conditioning portion
@@ -125,7 +135,7 @@ func run(random *rand.Rand, day instrumentDay, started time.Time, seats []seat, 
 				}
 				true_ += effects[key]
 			}
-			raw := c.raw(true_+s.offset[c.quantity], hours, size, previous[c.quantity], epsilon)
+			raw := c.blank.mixed(c.raw(true_+s.offset[c.quantity], hours, size, previous[c.quantity], epsilon), size-c.blank.size)
 			r.raw[c.quantity], r.size[c.quantity] = round(raw, c.digits), size
 			previous[c.quantity] = r.raw[c.quantity]
 			if s := c.source; s != nil {
@@ -163,6 +173,8 @@ func amountOf(random *rand.Rand, element map[string]float64, wide bool) float64 
 		return math.Round(60 * spread / element["d15N"])
 	case element["d13C"] > 0:
 		return math.Round(350 * spread / element["d13C"])
+	case element["d18O"] > 0 && element["d2H"] == 0: // every injection is one volume
+		return 20
 	case element["d2H"] > 0: // the tubes hold one volume, nearly
 		return math.Round(25 * (1 + (spread-1)/8) / element["d2H"])
 	}
