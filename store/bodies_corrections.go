@@ -29,6 +29,12 @@ type Factor struct {
 	Zero       *float64  `json:"zero,omitempty"`
 	ResidualSD *float64  `json:"residual_sd,omitempty"`
 	Residuals  []float64 `json:"residuals,omitempty"`
+	// Curvature is Student's t of a second-degree term on CurvatureDF degrees of
+	// freedom (nil when known), and CurvatureP its two-sided probability where the
+	// ratio is straight in the intensity; nil where the pulses cannot tell.
+	Curvature   *float64 `json:"curvature,omitempty"`
+	CurvatureDF *float64 `json:"curvature_nu,omitempty"`
+	CurvatureP  *float64 `json:"curvature_p,omitempty"`
 	// Lowest and Highest are the intensities that the pulses cover.
 	Lowest   *float64 `json:"lowest,omitempty"`
 	Highest  *float64 `json:"highest,omitempty"`

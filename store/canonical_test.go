@@ -48,7 +48,7 @@ func bodies(t *testing.T) map[string]store.Draft {
 			Approval:   store.Approval{SecondPerson: true}}},
 		{Kind: store.KindFactor, Code: "HTC-1", Value: store.Factor{Instrument: "HTC-1", Quantity: "d2H", Origin: "pulses", DeterminedAt: at, K: 4.1, U: 0.05, DegreesOfFreedom: pointer(1.0),
 			RatioUnit: "ppm", IntensityUnit: "nA", Resistor: 1e9, Shape: "flat", Pulses: []store.FactorPulse{{Intensity: 1, Ratio: 286.1}, {Intensity: 2, Ratio: 290.2, U: pointer(0.1)}, {Intensity: 3, Ratio: 294.3}},
-			Zero: pointer(282.0), ResidualSD: pointer(0.01), Residuals: []float64{0.01, -0.02, 0.01}, Lowest: pointer(1.0), Highest: pointer(3.0), Settings: "tuned", Gas: "cylinder 4", Evidence: "log",
+			Zero: pointer(282.0), ResidualSD: pointer(0.01), Residuals: []float64{0.01, -0.02, 0.01}, Curvature: pointer(0.4), CurvatureDF: pointer(1.0), CurvatureP: pointer(0.7), Lowest: pointer(1.0), Highest: pointer(3.0), Settings: "tuned", Gas: "cylinder 4", Evidence: "log",
 			Before: &store.FactorBefore{Version: 1, K: 4, U: 0.05, Z: pointer(1.4)}}},
 		{Kind: store.KindRelation, Code: "O-OWN", Value: store.Relation{Sort: "conversion", Title: "oxygen", Expression: "y = A·x + B", From: "d18O-VPDB", To: "d18O-VSMOW-SLAP", Factor: "1.03092", Offset: "30.920",
 			Covariance: &[2][2]float64{{1e-10, 0}, {0, 1e-4}}, Constant: "0.528", StandardUncertainty: pointer(0.001), Lowest: pointer(-60.0), Highest: pointer(40.0), Stated: "as printed", StatedUncertainty: "none",

@@ -8,6 +8,8 @@ import (
 	"slices"
 	"strings"
 
+	"gonum.org/v1/gonum/stat/distuv"
+
 	"deltamoor/calib"
 	"deltamoor/calib/correct"
 	"deltamoor/calib/uncertain"
@@ -34,6 +36,10 @@ var (
 // (common practice, no source).
 const stepZ = 3
 
+// curvatureLevel is the probability below which pulses are not straight
+// (common practice, no source).
+const curvatureLevel = 0.01
+
 // MaxPulses bounds one determination.
 const MaxPulses = 10_000
 
@@ -44,7 +50,7 @@ const MaxPulses = 10_000
 func (r *Registry) StateFactor(ctx context.Context, actor Actor, instrument string, f store.Factor, e Edit) (Item[store.Factor], error) {
 	var out Item[store.Factor]
 	f.Instrument, f.Quantity = instrument, nameOr(f.Quantity, "d2H")
-	f.Zero, f.ResidualSD, f.Residuals, f.Lowest, f.Highest, f.Before = nil, nil, nil, nil, nil, nil
+	f.Before = nil
 	if err := completeFactor(&f); err != nil {
 		return out, err
 	}
@@ -90,6 +96,7 @@ func (r *Registry) StateFactor(ctx context.Context, actor Actor, instrument stri
 // completeFactor checks what was sent and, of pulses, computes the factor.
 func completeFactor(f *store.Factor) error {
 	const message = "this H3 factor cannot be recorded"
+	f.Zero, f.ResidualSD, f.Residuals, f.Lowest, f.Highest, f.Curvature, f.CurvatureDF, f.CurvatureP = nil, nil, nil, nil, nil, nil, nil, nil
 	var c complaints
 	c.oneOf("body.origin", f.Origin, FromPulses, AppliedElsewhere)
 	c.oneOf("body.ratio_unit", f.RatioUnit, RatioUnits...)
@@ -146,7 +153,25 @@ func completeFactor(f *store.Factor) error {
 	if !math.IsNaN(found.ResidualSD) {
 		f.ResidualSD = &found.ResidualSD
 	}
+	if !math.IsNaN(found.Curvature) {
+		nu := found.CurvatureDF
+		if math.IsInf(nu, 1) {
+			nu = 1e9 // a normal distribution, to the last digit that counts
+		}
+		p := 2 * distuv.StudentsT{Mu: 0, Sigma: 1, Nu: nu}.CDF(-math.Abs(found.Curvature))
+		f.Curvature, f.CurvatureDF, f.CurvatureP = &found.Curvature, finite(found.CurvatureDF), &p
+	}
 	return nil
+}
+
+// againFactor computes a factor again from the pulses that its version holds.
+func againFactor(f store.Factor) (store.Factor, error) {
+	again := f
+	if f.Origin != FromPulses {
+		return again, nil
+	}
+	again.K, again.U, again.DegreesOfFreedom = 0, 0, nil
+	return again, completeFactor(&again)
 }
 
 func finiteNumber(x float64) bool { return !math.IsNaN(x) && !math.IsInf(x, 0) }
@@ -297,6 +322,11 @@ func (a *assembly) factorFlags(f store.Version[store.Factor]) []calib.Flag {
 		flags = append(flags, calib.Flag{Code: "h3_stale", Severity: calib.Warning, Subject: f.Code,
 			Message: fmt.Sprintf("The H3 factor %s was %.0f hours from the session; the method allows %.0f.", name, math.Abs(age), limit),
 			Advice:  "Determine the factor again before measuring."})
+	}
+	if p := f.Value.CurvatureP; p != nil && *p < curvatureLevel {
+		flags = append(flags, calib.Flag{Code: "h3_not_straight", Severity: calib.Warning, Subject: f.Code,
+			Message: fmt.Sprintf("The pulses behind the H3 factor %s do not lie on a straight line (p = %.2g for a second-degree term).", name, *p),
+			Advice:  "Look at the residuals: a detector near saturation, or pulses too high for the source, bend the line."})
 	}
 	b := f.Value.Before
 	if b == nil {

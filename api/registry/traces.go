@@ -312,6 +312,19 @@ func calibrationDetail(c store.Calibration) string {
 		words = append(words, string(c.Model.Size)+" size term")
 	}
 	text := strings.Join(words, ", ") + fmt.Sprintf("; weights %s; engine %s", nameOr(string(c.Model.Weights), "declared"), c.Engine)
+	var before []string
+	for _, k := range c.Corrections {
+		before = append(before, fmt.Sprintf("%s %.4g", k.Name, k.Value))
+	}
+	if len(before) > 0 {
+		text += "; before the fit: " + strings.Join(before, ", ")
+	}
+	if n := len(c.SetAside); n > 0 {
+		text += fmt.Sprintf("; %d readings set aside by the method's rule", n)
+	}
+	if n := len(c.Means); n > 0 {
+		text += fmt.Sprintf("; the rest as %d means", n)
+	}
 	if len(c.Excluded) > 0 {
 		text += "; readings left out: " + intsText(c.Excluded)
 	}

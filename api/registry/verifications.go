@@ -191,6 +191,15 @@ func (c *recheck) version(ctx context.Context, v source, raw store.Raw) error {
 			return err
 		}
 		scale, condition, again = largestResult(members), 1e6, body
+	case store.KindFactor:
+		stored, err := store.Decode[store.Factor](raw)
+		if err != nil || stored.Value.Origin != FromPulses {
+			return err
+		}
+		if again, err = againFactor(stored.Value); err != nil {
+			return err
+		}
+		scale, condition = stored.Value.K, 1e6
 	case store.KindReport:
 		return c.report(ctx, v, raw)
 	default:

@@ -29,6 +29,9 @@ type Factor struct {
 	Zero          *float64      `json:"zero,omitempty" doc:"Ratio at no intensity."`
 	ResidualSD    *float64      `json:"residual_sd,omitempty"`
 	Residuals     []float64     `json:"residuals,omitempty" doc:"Of the ratios, in the order of the pulses: a pattern shows that the ratio is not straight in the intensity."`
+	Curvature     *float64      `json:"curvature,omitempty" doc:"Student's t of a second-degree term."`
+	CurvatureNu   *float64      `json:"curvature_nu,omitempty" doc:"Its degrees of freedom; left out: known."`
+	CurvatureP    *float64      `json:"curvature_p,omitempty" doc:"Its two-sided probability where the ratio is straight in the intensity."`
 	Lowest        *float64      `json:"lowest,omitempty"`
 	Highest       *float64      `json:"highest,omitempty"`
 	Settings      string        `json:"settings,omitempty"`
@@ -57,7 +60,7 @@ func showFactor(it registry.Item[store.Factor]) Factor {
 	f := it.Value
 	out := Factor{Recorded: recorded(it), Instrument: f.Instrument, Quantity: f.Quantity, Origin: f.Origin, DeterminedAt: f.DeterminedAt.Time(), K: f.K, U: f.U, Nu: f.DegreesOfFreedom,
 		RatioUnit: f.RatioUnit, IntensityUnit: f.IntensityUnit, Resistor: f.Resistor, Shape: f.Shape, Pulses: convertOrNil(f.Pulses, func(p store.FactorPulse) Pulse { return Pulse(p) }),
-		Zero: f.Zero, ResidualSD: f.ResidualSD, Residuals: f.Residuals, Lowest: f.Lowest, Highest: f.Highest, Settings: f.Settings, Gas: f.Gas, Evidence: f.Evidence,
+		Zero: f.Zero, ResidualSD: f.ResidualSD, Residuals: f.Residuals, Curvature: f.Curvature, CurvatureNu: f.CurvatureDF, CurvatureP: f.CurvatureP, Lowest: f.Lowest, Highest: f.Highest, Settings: f.Settings, Gas: f.Gas, Evidence: f.Evidence,
 		Before: pointed(f.Before, func(b store.FactorBefore) FactorBefore { return FactorBefore(b) })}
 	out.Step = registry.Step(f)
 	return out

@@ -40,6 +40,9 @@ func TestH3FactorMatchesRegression(t *testing.T) {
 	relative("covariance", f.Covariance, -8.830255801580107e-17)
 	relative("s", f.ResidualSD, 2.840143384132197e-08)
 	near(t, "ν", f.DegreesOfFreedom, 6, 0)
+	// Second-degree fit in exact rational arithmetic: t = 1.7988175243706854 on 5.
+	near(t, "curvature", f.Curvature, 1.7988175243706854, 1e-6)
+	near(t, "ν of the curvature", f.CurvatureDF, 5, 0)
 	for _, c := range []struct{ rs, is, rg, ig, uncorrected, corrected, perK, u float64 }{
 		{0.00014312, 4.8, 0.00016771, 5, -146.62214536998397, -149.62381375568467, -3360264.333823885, 0.014795031496359672},
 		{0.00017105, 2.2, 0.00016771, 5, 19.915330033987377, 36.24133347826142, 18276398.335345265, 0.08046982681976728},

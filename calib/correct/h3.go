@@ -3,6 +3,7 @@ package correct
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"deltamoor/calib/adjust"
 )
@@ -41,6 +42,12 @@ type Factor struct {
 	Residuals []float64
 	// ChiSquare is set where uncertainties were stated; NaN otherwise.
 	ChiSquare float64
+	// Curvature is that of a second-degree fit over its standard uncertainty, on
+	// CurvatureDF degrees of freedom: Student's t of a ratio that is straight in
+	// the intensity. +Inf degrees of freedom where uncertainties were stated; NaN
+	// where the pulses cannot tell (fewer than four, or three heights without
+	// stated uncertainties).
+	Curvature, CurvatureDF float64
 }
 
 // A PulseError says why pulses give no factor.
@@ -114,7 +121,7 @@ func fitPulses(pulses []Pulse, w []float64, mean float64, stated bool) (Factor, 
 	if err != nil {
 		return Factor{}, fmt.Errorf("determine the H3 factor: %w", err)
 	}
-	f := Factor{K: x[1], Zero: x[0] - float64(x[1]*mean), DegreesOfFreedom: math.Inf(1), ResidualSD: math.NaN(), ChiSquare: math.NaN(), Residuals: make([]float64, n)}
+	f := Factor{K: x[1], Zero: x[0] - float64(x[1]*mean), DegreesOfFreedom: math.Inf(1), ResidualSD: math.NaN(), ChiSquare: math.NaN(), Curvature: math.NaN(), CurvatureDF: math.NaN(), Residuals: make([]float64, n)}
 	var chi2, rss float64
 	for i, p := range pulses {
 		r := p.Ratio - x[0] - float64(x[1]*(p.Intensity-mean))
@@ -136,7 +143,61 @@ func fitPulses(pulses []Pulse, w []float64, mean float64, stated bool) (Factor, 
 	f.U = math.Sqrt(vk)
 	f.UZero = math.Sqrt(variance/one + float64(float64(mean*mean)*vk))
 	f.Covariance = -float64(mean * vk)
+	f.Curvature, f.CurvatureDF = curvature(pulses, w, mean, stated)
 	return f, nil
+}
+
+// curvature is t of the second-degree coefficient, with ν = n − 3. The variance
+// comes from the same regression that the residuals of the straight line are
+// refitted by: with q the part of the weighted square that the line does not
+// explain, c = q·y/q·q and u²(c) = s²/q·q.
+func curvature(pulses []Pulse, w []float64, mean float64, stated bool) (t, nu float64) {
+	n := len(pulses)
+	if n < 4 {
+		return math.NaN(), math.NaN()
+	}
+	line, square, ratio := adjust.NewMatrix(2, n), make([]float64, n), make([]float64, n)
+	for i, p := range pulses {
+		d := p.Intensity - mean
+		line.Set(0, i, w[i])
+		line.Set(1, i, float64(w[i]*d))
+		square[i], ratio[i] = float64(w[i]*float64(d*d)), float64(w[i]*p.Ratio)
+	}
+	against := func(b []float64) ([]float64, bool) { // what the line leaves of b
+		x, err := adjust.LeastSquares(line.Copy(), slices.Clone(b))
+		if err != nil {
+			return nil, false
+		}
+		out := make([]float64, n)
+		for i := range b {
+			out[i] = b[i] - float64(x[0]*line.At(0, i)) - float64(x[1]*line.At(1, i))
+		}
+		return out, true
+	}
+	q, ok := against(square)
+	r, ok2 := against(ratio)
+	if !ok || !ok2 {
+		return math.NaN(), math.NaN()
+	}
+	qq := adjust.Dot(q, q)
+	if qq <= 1e-20*adjust.Dot(square, square) { // two heights: no second degree
+		return math.NaN(), math.NaN()
+	}
+	c := adjust.Dot(q, r) / qq
+	variance, nu := 1.0, math.Inf(1)
+	if !stated {
+		rss := 0.0
+		for i := range r {
+			e := r[i] - float64(c*q[i])
+			rss += float64(e * e)
+		}
+		nu = float64(n - 3)
+		variance = rss / nu
+	}
+	if variance == 0 {
+		return math.NaN(), math.NaN()
+	}
+	return c / math.Sqrt(variance/qq), nu
 }
 
 // The intensity of a peak, for the squared pressure it stands for, is
