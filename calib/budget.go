@@ -66,6 +66,23 @@ func (c *calibrated) betweenGroup() string {
 	return "between_session:" + p.Session + "/" + p.Scale
 }
 
+// homogeneityID is the lasting identity of a sample's own heterogeneity.
+func (c *calibrated) homogeneityID(subject string) string {
+	return "sample:" + subject + "/" + c.in.policy.SampleHomogeneity.Scale
+}
+
+// homogeneityGroup is the group of that component; "" when it is known.
+func (c *calibrated) homogeneityGroup() string {
+	p := c.in.policy.SampleHomogeneity
+	switch {
+	case p.DegreesOfFreedom == 0 || math.IsInf(p.DegreesOfFreedom, 1):
+		return ""
+	case p.Group != "":
+		return p.Group
+	}
+	return "sample:" + p.Scale
+}
+
 // budget appends a subject's sources for people: those of the anchors, the
 // readings' part through the parameters in one line, its own readings, their
 // preparations, the session. Shares of u² sum to 1; sources that contribute
@@ -88,6 +105,9 @@ func (c *calibrated) budget(lines []Contribution, s *SubjectResult, g subjectGro
 	}
 	if u := s.BetweenSession; u > 0 {
 		lines = append(lines, Contribution{ID: ids[len(g.readings)], Kind: uncertain.KindBetweenSession, Group: c.betweenGroup(), Sensitivity: 1, U: u, VarianceShare: float64(u * u)})
+	}
+	if u := s.Homogeneity; u > 0 {
+		lines = append(lines, Contribution{ID: c.homogeneityID(s.Subject), Kind: uncertain.KindUnit, Group: c.homogeneityGroup(), Sensitivity: 1, U: u, VarianceShare: float64(u * u)})
 	}
 	var total float64
 	for k := start; k < len(lines); k++ {

@@ -84,6 +84,26 @@ type Policy struct {
 	// BetweenSession is the method's between-session standard uncertainty, with
 	// its degrees of freedom (0 when known), added to every sample and control.
 	BetweenSession BetweenSession
+	// SampleHomogeneity is how far a portion of a sample may be from the sample,
+	// added to every sample and to no control.
+	SampleHomogeneity SampleHomogeneity
+}
+
+// SampleHomogeneity is the component of a sample's own heterogeneity. It is one
+// source for each sample, common to all its sessions: more sessions of one
+// portion do not reduce it.
+type SampleHomogeneity struct {
+	// StandardUncertainty in ‰; 0 for none.
+	StandardUncertainty float64
+	// DegreesOfFreedom of it; 0 when known.
+	DegreesOfFreedom float64
+	// Except lists subjects that are measured as unknowns and are no samples:
+	// reference materials, whose heterogeneity is that of their units.
+	Except []string
+	// Scale is part of the source's identity: sample:<subject>/<Scale>.
+	Scale string
+	// Group is the identity of the version that states it; "" is the scale's.
+	Group string
 }
 
 // BetweenSession is the component that one session adds to each of its values.

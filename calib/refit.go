@@ -230,6 +230,15 @@ func (r *Result) BetweenSession(i int) (t uncertain.Term, ok bool) {
 	return r.betweenTerm(i), true
 }
 
+// Homogeneity is subject i's source of its own heterogeneity; ok is false for none.
+func (r *Result) Homogeneity(i int) (t uncertain.Term, ok bool) {
+	s, c := &r.Subjects[i], r.calibrated
+	if s.Homogeneity == 0 {
+		return t, false
+	}
+	return uncertain.Term{Sensitivity: 1, Source: uncertain.Source{ID: c.homogeneityID(s.Subject), Kind: uncertain.KindUnit, U: s.Homogeneity, Group: c.homogeneityGroup()}}, true
+}
+
 // AnchorNumbers are the session's assigned values, in its order.
 func (r *Result) AnchorNumbers() []uncertain.Number {
 	var out []uncertain.Number

@@ -159,6 +159,8 @@ type SubjectResult struct {
 	OtherCoefficients []float64
 	// BetweenSession is the standard uncertainty added for the session, 0 if none.
 	BetweenSession float64
+	// Homogeneity is the standard uncertainty added for the sample's own heterogeneity, 0 if none.
+	Homogeneity float64
 	// Sources is the budget for people: anchors' sources, the fit in one line, own readings, the rest. Shares sum to 1.
 	Sources []Contribution
 	// Flags are the codes of the flags that name this subject.

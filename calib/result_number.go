@@ -3,6 +3,7 @@ package calib
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"deltamoor/calib/uncertain"
 )
@@ -28,6 +29,9 @@ func (r *Result) Number(i int) uncertain.Number {
 	n := p.compose(pred.value, anchors, w)
 	if s.BetweenSession > 0 {
 		n.Terms = append(n.Terms, r.betweenTerm(i))
+	}
+	if t, ok := r.Homogeneity(i); ok {
+		n.Terms = append(n.Terms, t)
 	}
 	return c.clean(n)
 }
@@ -57,15 +61,14 @@ func (r *Result) Groups() []uncertain.Group {
 	if g, ok := c.nz.groupOf(); ok {
 		groups = append(groups, g)
 	}
-	if id := c.betweenGroup(); id != "" {
-		for _, g := range groups {
-			if g.ID == id {
-				return groups
-			}
+	add := func(id string, u, nu float64) {
+		if id != "" && !slices.ContainsFunc(groups, func(g uncertain.Group) bool { return g.ID == id }) {
+			groups = append(groups, uncertain.NewGroup(id, u*u, nu))
 		}
-		b := c.in.policy.BetweenSession
-		groups = append(groups, uncertain.NewGroup(id, b.StandardUncertainty*b.StandardUncertainty, b.DegreesOfFreedom))
 	}
+	b, h := c.in.policy.BetweenSession, c.in.policy.SampleHomogeneity
+	add(c.betweenGroup(), b.StandardUncertainty, b.DegreesOfFreedom)
+	add(c.homogeneityGroup(), h.StandardUncertainty, h.DegreesOfFreedom)
 	return groups
 }
 

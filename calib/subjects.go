@@ -133,6 +133,14 @@ func (c *calibrated) fillSubject(s *SubjectResult, g subjectGroup, pred predicti
 	if nu := between.DegreesOfFreedom; nu > 0 {
 		below += float64(2*float64(b2*b2)) / nu
 	}
+	if own := c.in.policy.SampleHomogeneity; own.StandardUncertainty > 0 && c.in.readings[g.readings[0]].Role == Sample && !slices.Contains(own.Except, s.Subject) {
+		s.Homogeneity = own.StandardUncertainty
+		h2 := float64(own.StandardUncertainty * own.StandardUncertainty)
+		variance += h2
+		if nu := own.DegreesOfFreedom; nu > 0 {
+			below += float64(2*float64(h2*h2)) / nu
+		}
+	}
 	s.StandardUncertainty = math.Sqrt(math.Max(0, variance))
 	nu := uncertain.SatterthwaiteDF(variance, below)
 	s.Expanded, _ = uncertain.ExpandedFrom(s.StandardUncertainty, nu, c.in.policy.coverage()) // the policy was validated

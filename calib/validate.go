@@ -102,6 +102,8 @@ func validatePolicy(r *refusals, p Policy) {
 	positive("policy.advised_span", p.AdvisedSpan)
 	positive("policy.between_session.u", p.BetweenSession.StandardUncertainty)
 	positive("policy.between_session.nu", p.BetweenSession.DegreesOfFreedom)
+	positive("policy.sample_homogeneity.u", p.SampleHomogeneity.StandardUncertainty)
+	positive("policy.sample_homogeneity.nu", p.SampleHomogeneity.DegreesOfFreedom)
 }
 
 func validateAnchors(r *refusals, s *Session) {

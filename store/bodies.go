@@ -268,8 +268,11 @@ type MethodQuantity struct {
 	Model     calib.Model `json:"model"`
 	Limits    Limits      `json:"limits"`
 	// BetweenSession (‰) is added to every result, with its evidence.
-	BetweenSession *Component     `json:"between_session,omitempty"`
-	Roles          []MaterialRole `json:"roles,omitempty"`
+	BetweenSession *Component `json:"between_session,omitempty"`
+	// SampleHomogeneity (‰) is how far a portion may be from its sample; added to
+	// every sample, once, however many sessions measure it.
+	SampleHomogeneity *Component     `json:"sample_homogeneity,omitempty"`
+	Roles             []MaterialRole `json:"roles,omitempty"`
 	// What is done to the readings before the fit; nil for nothing.
 	H3      *H3Rule    `json:"h3,omitempty"`
 	Blank   *BlankRule `json:"blank,omitempty"`

@@ -5,16 +5,17 @@ import "deltamoor/calib"
 // Calibration is the body of one fitted version: everything a result rests on
 // beside the readings and the inputs it names.
 type Calibration struct {
-	Engine         string      `json:"engine"`
-	Session        string      `json:"session"`
-	Instrument     string      `json:"instrument"`
-	StartedAt      *Instant    `json:"started_at,omitempty"`
-	Quantity       string      `json:"quantity"`
-	Scale          string      `json:"scale"`
-	Measurand      string      `json:"measurand"`
-	Model          calib.Model `json:"model"`
-	Limits         Limits      `json:"limits"`
-	BetweenSession *Component  `json:"between_session,omitempty"`
+	Engine            string      `json:"engine"`
+	Session           string      `json:"session"`
+	Instrument        string      `json:"instrument"`
+	StartedAt         *Instant    `json:"started_at,omitempty"`
+	Quantity          string      `json:"quantity"`
+	Scale             string      `json:"scale"`
+	Measurand         string      `json:"measurand"`
+	Model             calib.Model `json:"model"`
+	Limits            Limits      `json:"limits"`
+	BetweenSession    *Component  `json:"between_session,omitempty"`
+	SampleHomogeneity *Component  `json:"sample_homogeneity,omitempty"`
 	// Excluded lists the numbers of readings left out, by the exclusions of that moment.
 	Excluded []int `json:"excluded,omitempty"`
 

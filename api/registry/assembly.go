@@ -21,8 +21,9 @@ type assembly struct {
 	model    calib.Model
 	limits   store.Limits
 	between  *store.Component
-	readings []store.Reading // of the quantity, by number
-	origin   *store.Instant  // first reading of the session, any quantity
+	sampled  *store.Component // the sample's own heterogeneity
+	readings []store.Reading  // of the quantity, by number
+	origin   *store.Instant   // first reading of the session, any quantity
 	excluded map[int]bool
 	anchors  []store.Version[store.Value]
 	controls map[string]store.Version[store.Value]
@@ -48,7 +49,7 @@ func assemble(ctx context.Context, v *store.View, laboratory string, q FitReques
 	if a.spec, err = specOf(a.method.Value, q.Quantity, q.Measurand); err != nil {
 		return a, nil, err
 	}
-	a.model, a.limits, a.between = a.spec.Model, a.spec.Limits, a.spec.BetweenSession
+	a.model, a.limits, a.between, a.sampled = a.spec.Model, a.spec.Limits, a.spec.BetweenSession, a.spec.SampleHomogeneity
 	if q.Model != nil {
 		a.model = *q.Model
 	}
@@ -153,7 +154,7 @@ func otherScales(ctx context.Context, v *store.View, laboratory, material string
 
 // assembleStored loads what a stored calibration names as its inputs.
 func assembleStored(ctx context.Context, v source, c store.Version[store.Calibration]) (assembly, error) {
-	a := assembly{version: c.Ref, model: c.Value.Model, limits: c.Value.Limits, between: c.Value.BetweenSession, excluded: map[int]bool{}, controls: map[string]store.Version[store.Value]{}}
+	a := assembly{version: c.Ref, model: c.Value.Model, limits: c.Value.Limits, between: c.Value.BetweenSession, sampled: c.Value.SampleHomogeneity, excluded: map[int]bool{}, controls: map[string]store.Version[store.Value]{}}
 	for _, n := range c.Value.Excluded {
 		a.excluded[n] = true
 	}
@@ -236,7 +237,7 @@ func (a *assembly) loadReadings(ctx context.Context, v source, laboratory string
 func (a *assembly) materials(role calib.Role) []string {
 	set := map[string]bool{}
 	for _, rd := range a.readings {
-		if rd.Role == role && !a.excluded[rd.Number] {
+		if rd.Role == role && rd.Material != "" && !a.excluded[rd.Number] {
 			set[rd.Material] = true
 		}
 	}
@@ -316,6 +317,13 @@ func (a *assembly) input() (calib.Session, calib.Policy, error) {
 		if b.DegreesOfFreedom != nil {
 			p.BetweenSession.DegreesOfFreedom = *b.DegreesOfFreedom
 			p.BetweenSession.Group = fmt.Sprintf("between_session:%s.%d/%s", a.method.Code, a.method.Ref.Version, a.spec.Scale)
+		}
+	}
+	if h := a.sampled; h != nil {
+		p.SampleHomogeneity = calib.SampleHomogeneity{StandardUncertainty: h.StandardUncertainty, Scale: a.spec.Scale, Except: a.materials(calib.Sample)}
+		if h.DegreesOfFreedom != nil {
+			p.SampleHomogeneity.DegreesOfFreedom = *h.DegreesOfFreedom
+			p.SampleHomogeneity.Group = fmt.Sprintf("sample_homogeneity:%s.%d/%s", a.method.Code, a.method.Ref.Version, a.spec.Scale)
 		}
 	}
 	return s, p, nil

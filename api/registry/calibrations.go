@@ -134,7 +134,7 @@ func (a *assembly) fit() (store.Calibration, error) {
 // engine's list become reading numbers.
 func (a *assembly) state(r *calib.Result) store.Calibration {
 	b := store.Calibration{Engine: r.Engine, Session: a.session.Code, Instrument: a.session.Value.Instrument, StartedAt: a.session.Value.StartedAt,
-		Quantity: a.spec.Quantity, Scale: a.spec.Scale, Measurand: measurandOf(a.spec), Model: a.model, Limits: a.limits, BetweenSession: a.between,
+		Quantity: a.spec.Quantity, Scale: a.spec.Scale, Measurand: measurandOf(a.spec), Model: a.model, Limits: a.limits, BetweenSession: a.between, SampleHomogeneity: a.sampled,
 		Covariance: r.Covariance, NoiseCovariance: r.NoiseCovariance, AnchorSensitivities: r.AnchorSensitivities, AnchorDerivatives: r.AnchorDerivatives,
 		VarianceCovariance: r.VarianceCovariance, ReferenceTime: r.ReferenceTime, ReferenceSize: r.ReferenceSize, ChiSquare: r.ChiSquare,
 		DegreesOfFreedom: r.DegreesOfFreedom, PValue: r.PValue, BirgeRatio: r.BirgeRatio, ResidualSD: r.ResidualSD, AICc: r.AICc, ConditionNumber: r.ConditionNumber}

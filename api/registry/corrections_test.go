@@ -425,3 +425,26 @@ func TestConstantsOfASessionStayThoseItUsed(t *testing.T) {
 		t.Errorf("a session after the laboratory stated its own constant names %v", in)
 	}
 }
+
+// What a method says of the heterogeneity of its samples is in every result of
+// a sample and stays whole in a final value of several sessions.
+func TestSampleHomogeneityStaysWholeInAFinalValue(t *testing.T) {
+	b := openBench(t)
+	m := carbonMethod()
+	m.Quantities[0].SampleHomogeneity = &store.Component{StandardUncertainty: 0.1, Evidence: "ten portions of one leaf"}
+	m.Final = store.FinalRule{Rule: registry.RuleAll}
+	b.method("C-solid", m)
+	sample := b.sample("Marsh survey", "A1")
+	c := b.approvedResult(b.session(carbonRows(sample)).Session.Code)
+	res := resultOf(t, c.Value, sample)
+	if !slices.ContainsFunc(res.Sources, func(s store.Contribution) bool { return s.ID == "sample:"+sample+"/d13C-VPDB-LSVEC" && s.U == 0.1 }) {
+		t.Errorf("sources %+v: want the sample's own", res.Sources)
+	}
+	b.approvedResult(b.session(append(carbonRows(sample), row{"USGS40", "", -26.39})).Session.Code)
+	f, err := b.FinalValue(b.ctx, b.analyst, registry.FinalRequest{Sample: sample, Scale: "d13C-VPDB-LSVEC"})
+	b.must(err)
+	if len(f.Value.Members) != 2 || f.Value.StandardUncertainty < 0.1 {
+		t.Errorf("final value of %d sessions has u %v, below the sample's own 0.1", len(f.Value.Members), f.Value.StandardUncertainty)
+	}
+	b.verified()
+}

@@ -104,6 +104,14 @@ func checkMethod(code string, m store.Method) complaints {
 		if b := q.BetweenSession; b != nil && !(b.StandardUncertainty >= 0 && b.StandardUncertainty < 1e6) {
 			c.add(place+".between_session.u", fmt.Sprint(b.StandardUncertainty), "a standard uncertainty of 0 or more")
 		}
+		if h := q.SampleHomogeneity; h != nil {
+			if !(h.StandardUncertainty >= 0 && h.StandardUncertainty < 1e6) {
+				c.add(place+".sample_homogeneity.u", fmt.Sprint(h.StandardUncertainty), "a standard uncertainty of 0 or more")
+			}
+			if h.Common {
+				c.add(place+".sample_homogeneity.common", "true", "nothing: it is each sample's own")
+			}
+		}
 		for j, role := range q.Roles {
 			c.oneOf(fmt.Sprintf("%s.roles[%d].role", place, j), string(role.Role), roleWords...)
 		}

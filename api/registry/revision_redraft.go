@@ -74,7 +74,7 @@ func (c *changes) again(ctx context.Context, src source, of store.Version[store.
 				if err != nil || spec.Scale != b.Scale {
 					return next, true, fmt.Sprintf("%s has no %s on %s", versionName(to), b.Quantity, b.Scale), nil
 				}
-				b.Model, b.Limits, b.BetweenSession = spec.Model, spec.Limits, spec.BetweenSession
+				b.Model, b.Limits, b.BetweenSession, b.SampleHomogeneity = spec.Model, spec.Limits, spec.BetweenSession, spec.SampleHomogeneity
 				in.Ref, touched = to, true
 			}
 		}

@@ -26,6 +26,7 @@ type Calibration struct {
 	Model              Model          `json:"model"`
 	Limits             Limits         `json:"limits"`
 	BetweenSession     *Component     `json:"between_session,omitempty"`
+	SampleHomogeneity  *Component     `json:"sample_homogeneity,omitempty"`
 	Excluded           []int          `json:"excluded" doc:"Numbers of readings left out."`
 	Corrections        []SharedInput  `json:"corrections" doc:"Numbers with which readings were corrected before the fit."`
 	SetAside           []int          `json:"set_aside" doc:"Numbers of readings that the method's rule on repeats sets aside."`
@@ -150,7 +151,7 @@ type Contribution struct {
 func showCalibration(it registry.Item[store.Calibration]) Calibration {
 	c := it.Value
 	out := Calibration{Recorded: recorded(it), Engine: c.Engine, Session: store.FormatCode(c.Session), Instrument: c.Instrument, StartedAt: timePointer(c.StartedAt),
-		Quantity: c.Quantity, Scale: c.Scale, Measurand: c.Measurand, Model: showModel(c.Model), Limits: Limits(c.Limits), BetweenSession: showComponent(c.BetweenSession),
+		Quantity: c.Quantity, Scale: c.Scale, Measurand: c.Measurand, Model: showModel(c.Model), Limits: Limits(c.Limits), BetweenSession: showComponent(c.BetweenSession), SampleHomogeneity: showComponent(c.SampleHomogeneity),
 		Excluded: append([]int{}, c.Excluded...), Covariance: matrix(c.Covariance), NoiseCovariance: matrix(c.NoiseCovariance), Sensitivities: matrix(c.AnchorSensitivities),
 		Derivatives: matrix(c.AnchorDerivatives), VarianceCovariance: matrix(c.VarianceCovariance), Reference: Reference{c.ReferenceTime, c.ReferenceSize},
 		ChiSquare: c.ChiSquare, DegreesOfFreedom: c.DegreesOfFreedom, PValue: c.PValue, BirgeRatio: c.BirgeRatio, ResidualSD: c.ResidualSD, AICc: c.AICc,

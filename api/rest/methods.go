@@ -23,16 +23,17 @@ type MethodBody struct {
 
 // A MethodQuantity is what the method says of one isotope quantity.
 type MethodQuantity struct {
-	Quantity       string         `json:"quantity" maxLength:"20" example:"d13C"`
-	Scale          string         `json:"scale" maxLength:"40" example:"d13C-VPDB-LSVEC"`
-	Measurand      string         `json:"measurand,omitempty" maxLength:"60" doc:"Left out: total."`
-	Model          Model          `json:"model,omitempty"`
-	Limits         Limits         `json:"limits,omitempty"`
-	BetweenSession *Component     `json:"between_session,omitempty" doc:"Added to every result (‰), with its evidence."`
-	Roles          []MaterialRole `json:"roles,omitempty" maxItems:"200" doc:"Roles of materials where the file gives none."`
-	H3             *H3Rule        `json:"h3,omitempty" doc:"What the intensities in the files are; hydrogen only."`
-	Blank          *BlankRule     `json:"blank,omitempty" doc:"How a blank is known that is taken out before the fit."`
-	Repeats        *Repeats       `json:"repeats,omitempty" doc:"How repeated readings of one portion are taken."`
+	Quantity          string         `json:"quantity" maxLength:"20" example:"d13C"`
+	Scale             string         `json:"scale" maxLength:"40" example:"d13C-VPDB-LSVEC"`
+	Measurand         string         `json:"measurand,omitempty" maxLength:"60" doc:"Left out: total."`
+	Model             Model          `json:"model,omitempty"`
+	Limits            Limits         `json:"limits,omitempty"`
+	BetweenSession    *Component     `json:"between_session,omitempty" doc:"Added to every result (‰), with its evidence."`
+	SampleHomogeneity *Component     `json:"sample_homogeneity,omitempty" doc:"How far a portion may be from its sample (‰), with its evidence: added to every sample, once, however many sessions measure it."`
+	Roles             []MaterialRole `json:"roles,omitempty" maxItems:"200" doc:"Roles of materials where the file gives none."`
+	H3                *H3Rule        `json:"h3,omitempty" doc:"What the intensities in the files are; hydrogen only."`
+	Blank             *BlankRule     `json:"blank,omitempty" doc:"How a blank is known that is taken out before the fit."`
+	Repeats           *Repeats       `json:"repeats,omitempty" doc:"How repeated readings of one portion are taken."`
 }
 
 // A Model names the terms of the fit and where the variance of the readings comes from.
@@ -225,7 +226,7 @@ func (b MethodBody) body() store.Method {
 	return store.Method{Title: b.Title, Procedure: b.Procedure,
 		Quantities: convert(b.Quantities, func(q MethodQuantity) store.MethodQuantity {
 			return store.MethodQuantity{Quantity: q.Quantity, Scale: q.Scale, Measurand: q.Measurand, Model: q.Model.body(), Limits: store.Limits(q.Limits),
-				BetweenSession: q.BetweenSession.body(), Roles: convertOrNil(q.Roles, func(r MaterialRole) store.MaterialRole {
+				BetweenSession: q.BetweenSession.body(), SampleHomogeneity: q.SampleHomogeneity.body(), Roles: convertOrNil(q.Roles, func(r MaterialRole) store.MaterialRole {
 					return store.MaterialRole{Material: r.Material, Role: calib.Role(r.Role)}
 				}), H3: pointed(q.H3, func(r H3Rule) store.H3Rule { return store.H3Rule(r) }), Blank: pointed(q.Blank, BlankRule.body),
 				Repeats: pointed(q.Repeats, func(r Repeats) store.Repeats { return store.Repeats(r) })}
@@ -245,7 +246,7 @@ func showMethod(it registry.Item[store.Method]) Method {
 	return Method{recorded(it), MethodBody{Title: m.Title, Procedure: m.Procedure,
 		Quantities: convert(m.Quantities, func(q store.MethodQuantity) MethodQuantity {
 			return MethodQuantity{Quantity: q.Quantity, Scale: q.Scale, Measurand: q.Measurand, Model: showModel(q.Model), Limits: Limits(q.Limits),
-				BetweenSession: showComponent(q.BetweenSession), Roles: convertOrNil(q.Roles, func(r store.MaterialRole) MaterialRole {
+				BetweenSession: showComponent(q.BetweenSession), SampleHomogeneity: showComponent(q.SampleHomogeneity), Roles: convertOrNil(q.Roles, func(r store.MaterialRole) MaterialRole {
 					return MaterialRole{r.Material, string(r.Role)}
 				}), H3: pointed(q.H3, func(r store.H3Rule) H3Rule { return H3Rule(r) }), Blank: pointed(q.Blank, showBlankRule),
 				Repeats: pointed(q.Repeats, func(r store.Repeats) Repeats { return Repeats(r) })}
