@@ -23,12 +23,15 @@ const databaseFile = "deltamoor.db"
 
 func sqliteEngine() *engine {
 	return &engine{
-		name:         migrations.SQLite,
-		dialect:      goose.DialectSQLite3,
-		unnumbered:   true,
-		withWanted:   wantedRows + `json_each($1) j`,
-		open:         openSQLite,
-		hasTable:     `SELECT count(*) FROM sqlite_master WHERE type = 'table' AND name = $1`,
+		name:       migrations.SQLite,
+		dialect:    goose.DialectSQLite3,
+		unnumbered: true,
+		withWanted: wantedRows + `json_each($1) j`,
+		open:       openSQLite,
+		hasTable:   `SELECT count(*) FROM sqlite_master WHERE type = 'table' AND name = $1`,
+		// It takes some microseconds, and waits no longer than the busy timeout; to watch
+		// whether the asker has gone meanwhile takes a third of that again.
+		brief:        context.WithoutCancel,
 		copyReadings: insertReadings,
 		class:        sqliteClass,
 	}
@@ -66,10 +69,10 @@ func openSQLite(ctx context.Context, o Options) (write, read *sql.DB, err error)
 	common := "_pragma=busy_timeout(5000)&_pragma=foreign_keys(1)&_pragma=synchronous(FULL)"
 	name := "file:" + (&url.URL{Path: path}).EscapedPath() + "?"
 	if o.ReadOnly {
-		read, err = sql.Open("sqlite", name+common+"&mode=ro&_pragma=query_only(1)")
+		read, err = openKept(name + common + "&mode=ro&_pragma=query_only(1)")
 		return read, read, err
 	}
-	write, err = sql.Open("sqlite", name+common+"&_pragma=journal_mode(WAL)&_txlock=immediate")
+	write, err = openKept(name + common + "&_pragma=journal_mode(WAL)&_txlock=immediate")
 	if err != nil {
 		return nil, nil, err
 	}
@@ -88,13 +91,22 @@ func openSQLite(ctx context.Context, o Options) (write, read *sql.DB, err error)
 		}
 		time.Sleep(10 * time.Millisecond)
 	}
-	read, err = sql.Open("sqlite", name+common+"&_pragma=query_only(1)")
+	read, err = openKept(name + common + "&_pragma=query_only(1)")
 	if err != nil {
 		return nil, nil, errors.Join(err, write.Close())
 	}
 	read.SetMaxOpenConns(max(4, 2*runtime.GOMAXPROCS(0)))
 	read.SetMaxIdleConns(max(4, 2*runtime.GOMAXPROCS(0)))
 	return write, read, nil
+}
+
+// openKept opens a pool whose connections keep their statements prepared.
+func openKept(name string) (*sql.DB, error) {
+	connector, err := sqlite.NewConnector(name)
+	if err != nil {
+		return nil, err
+	}
+	return sql.OpenDB(preparing{connector}), nil
 }
 
 // SQLite's result codes, https://www.sqlite.org/rescode.html; the low byte is
