@@ -29,6 +29,7 @@ type bench struct {
 	t       testing.TB
 	store   *store.Store
 	handler http.Handler
+	folder  string
 	log     *lockedBuffer
 	// tokens by laboratory and role.
 	tokens map[string]map[string]string
@@ -72,8 +73,8 @@ func (b *bench) now() time.Time {
 // openEmpty is a server over a registry that is not initialised.
 func openEmpty(t testing.TB, o api.Options) *bench {
 	t.Helper()
-	b := &bench{t: t, clock: time.Date(2026, 3, 2, 8, 0, 0, 0, time.UTC), log: &lockedBuffer{}, tokens: map[string]map[string]string{}}
-	s, err := store.Open(context.Background(), store.Options{Database: filepath.Join(t.TempDir(), "registry.db"), Now: b.now, Migrate: true})
+	b := &bench{t: t, clock: time.Date(2026, 3, 2, 8, 0, 0, 0, time.UTC), folder: t.TempDir(), log: &lockedBuffer{}, tokens: map[string]map[string]string{}}
+	s, err := store.Open(context.Background(), store.Options{Database: filepath.Join(b.folder, "registry.db"), Now: b.now, Migrate: true})
 	b.must(err)
 	t.Cleanup(func() { s.Close() })
 	b.store = s

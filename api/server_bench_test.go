@@ -22,7 +22,8 @@ import (
 // BenchmarkReadReported reads a reported delta through the whole server, and
 // beside it a bare Echo handler that does one query of one row: quality.md asks
 // for 60 % of its rate. Both go over loopback with one client that keeps its
-// connection.
+// connection. They take turns, a block of requests each, and the fastest blocks
+// are compared, so that what else the machine does strikes both alike.
 func BenchmarkReadReported(b *testing.B) {
 	bench := openBench(b)
 	j := bench.travel()
@@ -30,12 +31,22 @@ func BenchmarkReadReported(b *testing.B) {
 	if err != nil {
 		b.Fatal(err)
 	}
-	b.Run("deltamoor", func(b *testing.B) {
-		load(b, quiet, "/v1/reported/"+j.reported, bench.tokens["TST"][registry.Auditor])
-	})
-	b.Run("bare", func(b *testing.B) {
-		load(b, bareEcho(b), "/reported/1", "")
-	})
+	ours := reader(b, quiet, "/v1/reported/"+j.reported, bench.tokens["TST"][registry.Auditor])
+	bare := reader(b, bareEcho(b), "/reported/1", "")
+	const block = 100
+	best := [2]time.Duration{time.Hour, time.Hour}
+	for b.Loop() {
+		for i, read := range []func(){ours, bare} {
+			begun := time.Now()
+			for range block {
+				read()
+			}
+			best[i] = min(best[i], time.Since(begun)/block)
+		}
+	}
+	b.ReportMetric(float64(best[0].Nanoseconds())/1000, "µs-deltamoor")
+	b.ReportMetric(float64(best[1].Nanoseconds())/1000, "µs-bare")
+	b.ReportMetric(100*float64(best[1])/float64(best[0]), "%-of-bare-rate")
 }
 
 // bareEcho answers with the row of a table by its key, and nothing else.
@@ -67,10 +78,11 @@ func bareEcho(b *testing.B) http.Handler {
 	return e
 }
 
-func load(b *testing.B, handler http.Handler, path, token string) {
+// reader serves a handler and returns what sends it one request.
+func reader(b *testing.B, handler http.Handler, path, token string) func() {
 	b.Helper()
 	server := httptest.NewServer(handler)
-	defer server.Close()
+	b.Cleanup(server.Close)
 	q, err := http.NewRequest("GET", server.URL+path, nil)
 	if err != nil {
 		b.Fatal(err)
@@ -78,7 +90,7 @@ func load(b *testing.B, handler http.Handler, path, token string) {
 	if token != "" {
 		q.Header.Set("Authorization", "Bearer "+token)
 	}
-	for b.Loop() {
+	return func() {
 		r, err := server.Client().Do(q)
 		if err != nil {
 			b.Fatal(err)

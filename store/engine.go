@@ -27,6 +27,9 @@ type engine struct {
 	// write begins the transaction of a write.
 	write sql.TxOptions
 
+	// brief is the context of a read of one row by its key.
+	brief func(context.Context) context.Context
+
 	// copyReadings adds rows to the readings inside the open transaction of conn.
 	copyReadings func(ctx context.Context, conn *sql.Conn, tx *sql.Tx, rows [][]any) error
 

@@ -31,6 +31,7 @@ func postgresEngine() *engine {
 		// On purpose no stricter level: the row of the ledger's head and the keys
 		// serialise writers; a snapshot would only make them fail each other.
 		write:        sql.TxOptions{Isolation: sql.LevelReadCommitted},
+		brief:        func(ctx context.Context) context.Context { return ctx },
 		copyReadings: copyReadings,
 		class:        postgresClass,
 	}

@@ -14,8 +14,15 @@ import (
 // has told it in its own words.
 type queries struct {
 	engine *engine
-	tx     *sql.Tx
+	tx     runner
 	worst  errorClass
+}
+
+// A runner is a transaction, or a pool for a single statement.
+type runner interface {
+	ExecContext(ctx context.Context, query string, args ...any) (sql.Result, error)
+	QueryContext(ctx context.Context, query string, args ...any) (*sql.Rows, error)
+	QueryRowContext(ctx context.Context, query string, args ...any) *sql.Row
 }
 
 func (q *queries) note(err error) error {

@@ -221,7 +221,7 @@ func (tx *Tx) AppendReadings(ctx context.Context, readings []Reading) error {
 		}
 		rows[i] = r.row(tx.laboratory)
 	}
-	if err := tx.store.engine.copyReadings(ctx, tx.conn, tx.q.tx, rows); err != nil {
+	if err := tx.store.engine.copyReadings(ctx, tx.conn, tx.sql, rows); err != nil {
 		return fmt.Errorf("store readings: %w", tx.q.note(err))
 	}
 	return nil

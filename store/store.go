@@ -204,7 +204,7 @@ func (s *Store) tryWrite(ctx context.Context, laboratory string, f func(context.
 	}
 	defer sqlTx.Rollback() // after a commit it does nothing
 
-	tx := &Tx{View: View{store: s, q: &queries{engine: s.engine, tx: sqlTx}, now: InstantOf(s.now()), cut: true}, laboratory: laboratory, conn: conn}
+	tx := &Tx{View: View{store: s, q: &queries{engine: s.engine, tx: sqlTx}, now: InstantOf(s.now()), cut: true}, laboratory: laboratory, conn: conn, sql: sqlTx}
 	tx.View.tx = tx
 	commit, err := tx.run(ctx, f)
 	if err != nil {

@@ -18,6 +18,7 @@ type Tx struct {
 	View
 	laboratory string
 	conn       *sql.Conn
+	sql        *sql.Tx
 
 	queue  []queued
 	guards []func(context.Context, *View) error

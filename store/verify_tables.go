@@ -276,7 +276,7 @@ func (c *checker) currents(ctx context.Context, v *View) error {
 			kind, code = fmt.Sprint(row[1]), fmt.Sprint(row[2])
 			keys[i] = Key{Laboratory: c.laboratory, Kind: Kind(kind), Code: code}
 		}
-		histories, err := v.histories(ctx, c.laboratory, keys)
+		histories, _, err := v.histories(ctx, c.laboratory, keys, always)
 		if err != nil {
 			return err
 		}
@@ -292,53 +292,6 @@ func (c *checker) currents(ctx context.Context, v *View) error {
 			}
 		}
 	}
-}
-
-const selectHistories = `) SELECT v.kind, v.code, v.version, v.recorded_at, v.valid_from
-	FROM wanted w JOIN versions v ON v.laboratory = w.laboratory AND v.kind = w.kind AND v.code = w.code
-	ORDER BY v.kind, v.code, v.version`
-
-// histories returns the histories of many records, decisions included.
-func (v *View) histories(ctx context.Context, laboratory string, keys []Key) (map[Key][]held, error) {
-	all := make(map[Key][]held, len(keys))
-	var codes []string
-	refs := make([]wanted, len(keys))
-	for i, k := range keys {
-		refs[i] = wanted{Key: k}
-	}
-	list, err := wantedList(refs)
-	if err != nil {
-		return nil, err
-	}
-	rows, err := v.rows(ctx, 5, v.q.engine.withWanted+selectHistories, list)
-	if err != nil {
-		return nil, fmt.Errorf("read histories: %w", err)
-	}
-	for _, row := range rows {
-		key := Key{Laboratory: laboratory, Kind: Kind(fmt.Sprint(row[0])), Code: fmt.Sprint(row[1])}
-		version, _ := row[2].(int64)
-		at, _ := row[3].(int64)
-		h := held{version: int(version), recordedAt: Instant(at)}
-		if from, ok := row[4].(int64); ok {
-			h.validFrom = (*Instant)(&from)
-		}
-		all[key] = append(all[key], h)
-		if key.Kind.Decided() {
-			codes = append(codes, DecisionCode(Ref{Key: key, Version: h.version}))
-		}
-	}
-	decisions, err := v.decisions(ctx, laboratory, codes, always)
-	if err != nil {
-		return nil, fmt.Errorf("read decisions: %w", err)
-	}
-	for key, history := range all {
-		for i, h := range history {
-			for _, d := range decisions[DecisionCode(Ref{Key: key, Version: h.version})] {
-				history[i].decisions = append(history[i].decisions, said{act: d.Value.Act, recordedAt: d.RecordedAt, effectAt: d.Value.EffectAt})
-			}
-		}
-	}
-	return all, nil
 }
 
 const selectKeys = `SELECT ` + versionColumns + ` FROM versions v

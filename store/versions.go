@@ -344,7 +344,7 @@ func (v *View) history(ctx context.Context, key Key, asOf Instant) ([]held, erro
 }
 
 // codesPerStatement bounds an IN list.
-const codesPerStatement = 100
+const codesPerStatement = 128
 
 // decisions returns the decisions of some decision records, by code, in order.
 func (v *View) decisions(ctx context.Context, laboratory string, codes []string, asOf Instant) (map[string][]Version[Decision], error) {
@@ -355,12 +355,18 @@ func (v *View) decisions(ctx context.Context, laboratory string, codes []string,
 	found := make(map[string][]Version[Decision])
 	for rest := codes; len(rest) > 0; {
 		n := min(len(rest), codesPerStatement)
-		args := make([]any, 0, 2+n)
-		args = append(args, laboratory, int64(stored))
-		for _, c := range rest[:n] {
-			args = append(args, c)
+		// Filled up to a power of two with the last code, so that there are few
+		// different statements to prepare.
+		filled := 1
+		for filled < n {
+			filled *= 2
 		}
-		raws, err := v.raws(ctx, selectDecisions+list(3, n)+orderDecisions, args...)
+		args := make([]any, 0, 2+filled)
+		args = append(args, laboratory, int64(stored))
+		for i := range filled {
+			args = append(args, rest[min(i, n-1)])
+		}
+		raws, err := v.raws(ctx, selectDecisions+list(3, filled)+orderDecisions, args...)
 		if err != nil {
 			return nil, err
 		}

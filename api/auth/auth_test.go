@@ -31,6 +31,10 @@ func (o *oneToken) Authenticate(_ context.Context, secret string) (registry.Acto
 	return registry.Actor{Person: "ana", Laboratory: "TST", Token: "T1"}, nil
 }
 
+func (o *oneToken) Claim(secret string) (registry.Claim, bool) {
+	return registry.Claim{}, secret == o.secret
+}
+
 func (o *oneToken) TouchToken(context.Context, registry.Actor) error { o.touched++; return nil }
 
 func TestHeadersThatNameAToken(t *testing.T) {
@@ -131,5 +135,31 @@ func TestLimiterForgetsTheOldestAndStaysSmall(t *testing.T) {
 	}
 	if l.failed(address(maxAddresses+99), now) == 0 {
 		t.Error("the newest address is forgotten")
+	}
+}
+
+// A claim is told only within a while of a use that was noted, so that uses go
+// on being noted.
+func TestClaimsEndWithTheWhileOfANotedUse(t *testing.T) {
+	now := time.Unix(0, 0)
+	a := New(&oneToken{secret: "dm_good"}, Options{Now: func() time.Time { return now }})
+	if _, ok := a.Claim("Bearer dm_good"); ok {
+		t.Error("a token never used is claimed")
+	}
+	if _, err := a.Authenticate(context.Background(), "Bearer dm_good", netip.Addr{}); err != nil {
+		t.Fatal(err)
+	}
+	a.touched.due(registry.Claim{}.Name(), now) // the fake's claims have no name
+	if _, ok := a.Claim("Bearer dm_good"); !ok {
+		t.Error("a token used just now is not claimed")
+	}
+	for _, bad := range []string{"", "Bearer dm_bad", "Digest dm_good"} {
+		if _, ok := a.Claim(bad); ok {
+			t.Errorf("%q is claimed", bad)
+		}
+	}
+	now = now.Add(touchEvery)
+	if _, ok := a.Claim("Bearer dm_good"); ok {
+		t.Error("a token is claimed after the while of its last noted use")
 	}
 }

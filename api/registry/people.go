@@ -237,37 +237,70 @@ func (r *Registry) Authenticate(ctx context.Context, secret string) (Actor, erro
 	if !ok || !cut || len(secret) > 100 || !laboratoryPattern.MatchString(laboratory) {
 		return Actor{}, unknown
 	}
-	var actor Actor
-	err := r.store.Read(ctx, func(ctx context.Context, v *store.View) error {
-		row, err := v.TokenSecret(ctx, laboratory, sha256.Sum256([]byte(secret)))
-		if err != nil {
-			return err
+	holder, err := r.store.Holder(ctx, laboratory, sha256.Sum256([]byte(secret)))
+	if errors.Is(err, store.ErrNotFound) {
+		return Actor{}, unknown
+	}
+	if err != nil {
+		return Actor{}, err
+	}
+	who := [2]store.Hash{holder.Token, holder.Holder}
+	said, ok := r.holders.find(who)
+	if !ok {
+		if said.token, said.person, err = r.store.HolderBodies(ctx, holder); errors.Is(err, store.ErrNotFound) {
+			return Actor{}, unknown
+		} else if err != nil {
+			return Actor{}, err
 		}
-		token, err := newest[store.Token](ctx, v, store.Key{Laboratory: laboratory, Kind: store.KindToken, Code: row.Code})
-		if err != nil {
-			return err
-		}
-		person, err := newest[store.Person](ctx, v, store.Key{Laboratory: laboratory, Kind: store.KindPerson, Code: token.Value.Person})
-		if err != nil {
-			return err
-		}
-		expired := token.Value.ExpiresAt != nil && r.now().After(token.Value.ExpiresAt.Time())
-		if token.Value.Revoked || person.Value.Closed || expired {
-			return unknown
-		}
-		actor = Actor{Person: token.Value.Person, Laboratory: laboratory, Scopes: token.Value.Scopes, Token: row.Code}
-		for _, role := range token.Value.Roles { // at most the person's roles of today
-			if slices.Contains(person.Value.Roles, role) {
-				actor.Roles = append(actor.Roles, role)
+		for _, role := range said.token.Roles { // at most the person's roles of today
+			if slices.Contains(said.person.Roles, role) {
+				said.roles = append(said.roles, role)
 			}
 		}
-		return nil
-	})
-	if errors.Is(err, store.ErrNotFound) {
-		err = unknown
+		r.holders.keep(who, said)
 	}
-	return actor, err
+	expired := said.token.ExpiresAt != nil && r.now().After(said.token.ExpiresAt.Time())
+	if said.token.Revoked || said.person.Closed || expired {
+		return Actor{}, unknown
+	}
+	actor := Actor{Person: said.token.Person, Laboratory: laboratory, Roles: slices.Clip(said.roles), Scopes: slices.Clip(said.token.Scopes), Token: holder.Code}
+	r.claims.keep(holder.Secret, Claim{actor: actor, holder: holder, expires: said.token.ExpiresAt})
+	return actor, nil
 }
+
+// A Claim is who a token stood for at one size of the laboratory's ledger. It
+// permits nothing until a read has confirmed, in the same statement, that the
+// ledger still has that size and the secret still has its row: whatever ends a
+// token, an account or a role is an entry in that ledger.
+type Claim struct {
+	actor   Actor
+	holder  store.Holder
+	expires *store.Instant
+}
+
+// Name tells tokens apart.
+func (c Claim) Name() string { return c.actor.Laboratory + "/" + c.actor.Token }
+
+// Claim tells who a secret stood for when it was last looked up; false where
+// that is not known, or has expired.
+func (r *Registry) Claim(secret string) (Claim, bool) {
+	c, ok := r.claims.find(sha256.Sum256([]byte(secret)))
+	if !ok || c.expires != nil && r.now().After(c.expires.Time()) {
+		return Claim{}, false
+	}
+	return c, true
+}
+
+// A saidOfHolder is what a token's and a person's versions say. It is shared and
+// not to be changed.
+type saidOfHolder struct {
+	token  store.Token
+	person store.Person
+	roles  []string
+}
+
+// maxHolders bounds the memory of who tokens stand for.
+const maxHolders = 1000
 
 // TouchToken notes that a token was used: a courtesy to people who tidy up.
 func (r *Registry) TouchToken(ctx context.Context, actor Actor) error {

@@ -29,6 +29,11 @@ type Registry struct {
 	rand  io.Reader
 	name  string
 	key   *ledger.Key
+
+	holders known[[2]store.Hash, saidOfHolder]
+	claims  known[store.Hash, Claim]
+	lines   known[string, knownLine]
+	told    known[store.Hash, *description]
 }
 
 // Options of a registry; the zero value uses the clock and crypto/rand.
@@ -50,6 +55,7 @@ const DefaultName = "deltamoor.local"
 // New makes a registry over an open store, which stays the caller's to close.
 func New(s *store.Store, o Options) *Registry {
 	r := &Registry{store: s, now: o.Now, rand: o.Rand, name: o.Name, key: o.Key}
+	r.holders.most, r.claims.most, r.lines.most, r.told.most = maxHolders, maxHolders, maxKnownLines, maxTold
 	if r.name == "" {
 		r.name = DefaultName
 	}

@@ -174,18 +174,76 @@ func (r *Registry) Report(ctx context.Context, actor Actor, code string) (Report
 	return out, err
 }
 
-// Reported answers a permanent code.
+// Reported answers a permanent code, as things stand now.
 func (r *Registry) Reported(ctx context.Context, actor Actor, code string) (ReportedDelta, error) {
+	if err := actor.need(MayRead); err != nil {
+		return ReportedDelta{}, err
+	}
+	row, err := r.store.ReportedLine(ctx, actor.Laboratory, code)
+	if errors.Is(err, store.ErrNotFound) {
+		return ReportedDelta{}, Refuse(NotFound, "no reported delta %s", store.FormatCode(code))
+	}
+	if err != nil {
+		return ReportedDelta{}, err
+	}
+	if row.FinalState == "" {
+		return r.ReportedAt(ctx, actor, code, store.Moment{})
+	}
+	f := row.FinalValue
+	out := ReportedDelta{ReportLine: store.NewReportLine(code, row.Report, row.Line, store.Version[store.Final]{Ref: row.Final, Value: f}),
+		Laboratory: row.Laboratory, Hash: row.Hash, Client: row.Client, Label: row.Label, IssuedAt: row.IssuedAt, IssuedBy: row.IssuedBy,
+		FinalState: row.FinalState, Flags: f.Flags, EffectiveDF: f.EffectiveDF}
+	r.lines.keep(actor.Laboratory+"/"+code, knownLine{out, row.SampleHash})
+	return out, nil
+}
+
+// ReportedClaimed answers a permanent code to someone known by a claim, where
+// one statement confirms both the claim and what is remembered of the delta.
+// False: it did not, and nothing is said.
+func (r *Registry) ReportedClaimed(ctx context.Context, claim Claim, code string) (ReportedDelta, bool, error) {
+	laboratory := claim.actor.Laboratory
+	line, ok := r.lines.find(laboratory + "/" + code)
+	if !ok || claim.actor.need(MayRead) != nil {
+		return ReportedDelta{}, false, nil
+	}
+	now, err := r.store.LineNow(ctx, claim.holder, code)
+	if errors.Is(err, store.ErrNotFound) {
+		return ReportedDelta{}, false, nil
+	}
+	if err != nil || now.FinalState == "" || now.Hash != line.Hash || now.Sample != line.sample {
+		return ReportedDelta{}, false, err
+	}
+	line.FinalState = now.FinalState
+	return line.ReportedDelta, true, nil
+}
+
+// A knownLine is a reported delta with the hash of the sample's version that
+// gave the label. The hash of the line binds everything else but the state.
+type knownLine struct {
+	ReportedDelta
+	sample store.Hash
+}
+
+// maxKnownLines bounds the memory of reported deltas.
+const maxKnownLines = 2000
+
+// ReportedAt answers a permanent code as things stood at a moment. The delta
+// itself never changes; what had become of it does.
+func (r *Registry) ReportedAt(ctx context.Context, actor Actor, code string, m store.Moment) (ReportedDelta, error) {
 	var out ReportedDelta
 	err := r.read(ctx, actor, func(ctx context.Context, v *store.View) error {
 		var err error
-		out, err = reported(ctx, v, actor.Laboratory, code)
+		out, err = reportedAt(ctx, v, actor.Laboratory, code, m)
 		return err
 	})
 	return out, err
 }
 
 func reported(ctx context.Context, v *store.View, laboratory, code string) (ReportedDelta, error) {
+	return reportedAt(ctx, v, laboratory, code, store.Moment{})
+}
+
+func reportedAt(ctx context.Context, v *store.View, laboratory, code string, m store.Moment) (ReportedDelta, error) {
 	unknown := Refuse(NotFound, "no reported delta %s", store.FormatCode(code))
 	row, err := v.Reported(ctx, code)
 	if errors.Is(err, store.ErrNotFound) || err == nil && row.Laboratory != laboratory {
@@ -197,6 +255,9 @@ func reported(ctx context.Context, v *store.View, laboratory, code string) (Repo
 	raw, err := v.Version(ctx, store.Key{Laboratory: row.Laboratory, Kind: store.KindReport, Code: row.Report}, row.Version)
 	if err != nil {
 		return ReportedDelta{}, err
+	}
+	if m.AsOf != nil && raw.RecordedAt > *m.AsOf { // not issued yet
+		return ReportedDelta{}, unknown
 	}
 	report, err := store.Decode[store.Report](raw)
 	if err != nil {
@@ -211,7 +272,7 @@ func reported(ctx context.Context, v *store.View, laboratory, code string) (Repo
 	}
 	out := ReportedDelta{ReportLine: store.NewReportLine(code, row.Report, row.Line, final), Laboratory: row.Laboratory, Hash: report.Value.Lines[row.Line].Hash,
 		IssuedAt: report.RecordedAt, IssuedBy: report.RecordedBy, Flags: final.Value.Flags, EffectiveDF: final.Value.EffectiveDF}
-	if out.FinalState, _, err = v.State(ctx, final.Ref, store.Moment{}); err != nil {
+	if out.FinalState, _, err = v.State(ctx, final.Ref, m); err != nil {
 		return out, err
 	}
 	sample, err := newest[store.Sample](ctx, v, store.Key{Laboratory: row.Laboratory, Kind: store.KindSample, Code: final.Value.Sample})

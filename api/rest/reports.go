@@ -132,14 +132,38 @@ func (f *face) report(ctx context.Context, actor registry.Actor, in *struct {
 	return jsonAnswer(reportAnswer(r).Body, 200, map[string]string{"ETag": quoteTag(r.Tag())})
 }
 
-func (f *face) reported(ctx context.Context, actor registry.Actor, in *struct{ CodeParam }) (*plain[Reported], error) {
+// ReportedParams name a reported delta, and the moment at which it is looked at.
+type ReportedParams struct {
+	CodeParam
+	MomentParams
+}
+
+func (f *face) reported(ctx context.Context, actor registry.Actor, in *ReportedParams) (*plain[Reported], error) {
 	code, err := parseCode("path.code", in.Code, kindReported)
 	if err != nil {
 		return nil, err
 	}
-	d, err := f.registry.Reported(ctx, actor, code)
+	var d registry.ReportedDelta
+	if m := in.moment(); m == (store.Moment{}) {
+		d, err = f.registry.Reported(ctx, actor, code)
+	} else {
+		d, err = f.registry.ReportedAt(ctx, actor, code, m)
+	}
 	if err != nil {
 		return nil, err
 	}
 	return &plain[Reported]{showReported(d)}, nil
+}
+
+// reportedShort answers askers known by a claim, where the delta is known too.
+func (f *face) reportedShort(ctx context.Context, claim registry.Claim, in *ReportedParams) (*plain[Reported], bool, error) {
+	code, err := parseCode("path.code", in.Code, kindReported)
+	if err != nil || in.moment() != (store.Moment{}) {
+		return nil, false, err
+	}
+	d, confirmed, err := f.registry.ReportedClaimed(ctx, claim, code)
+	if err != nil || !confirmed {
+		return nil, false, err
+	}
+	return &plain[Reported]{showReported(d)}, true, nil
 }

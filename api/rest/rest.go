@@ -31,6 +31,9 @@ type Authenticator interface {
 	// Its refusals are registry errors; one with a method RetryAfter() int says
 	// when to try again.
 	Authenticate(ctx context.Context, authorization string, address netip.Addr) (registry.Actor, error)
+	// Claim tells without asking the registry who the sender was when it was last
+	// asked, for reads that confirm it themselves; false where that is not known.
+	Claim(authorization string) (registry.Claim, bool)
 }
 
 // Options of the API.
@@ -100,6 +103,7 @@ type contextKey int
 const (
 	actorKey contextKey = iota
 	requestIDKey
+	claimKey
 )
 
 // WithRequestID gives a request the identity that its log lines and refusals carry.
@@ -137,6 +141,10 @@ func (f *face) limitTime(ctx huma.Context, next func(huma.Context)) {
 
 // authenticate finds out who asks, before anything of the request is read.
 func (f *face) authenticate(ctx huma.Context, next func(huma.Context)) {
+	if asker, ok := f.claim(ctx); ok {
+		next(huma.WithValue(ctx, claimKey, asker))
+		return
+	}
 	request := humaecho.Unwrap(ctx).Request()
 	actor, err := f.auth.Authenticate(ctx.Context(), ctx.Header("Authorization"), f.options.Address(request))
 	if err != nil {

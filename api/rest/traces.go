@@ -69,8 +69,10 @@ func showTrace(t registry.Trace) Trace {
 
 // TraceForm chooses between JSON and plain text.
 type TraceForm struct {
-	Format string `query:"format" enum:"json,text" doc:"text gives the chain as indented lines; the header Accept: text/plain does the same."`
-	format string
+	MomentParams
+	Direction string `query:"direction" enum:"down,up" doc:"down, as where it is left out: what this rests on; up: what rests on this."`
+	Format    string `query:"format" enum:"json,text" doc:"text gives the chain as indented lines; the header Accept: text/plain does the same."`
+	format    string
 }
 
 // Resolve settles the form.
@@ -83,7 +85,12 @@ func (p *TraceForm) Resolve(ctx huma.Context) []error {
 }
 
 func (f *face) answerTrace(ctx context.Context, actor registry.Actor, form TraceForm, kind store.Kind, code string, version int) (*answer, error) {
-	t, err := f.registry.Trace(ctx, actor, kind, code, version)
+	q := registry.TraceQuery{Kind: kind, Code: code, Version: version, Moment: form.moment()}
+	trace := f.registry.TraceAt
+	if form.Direction == "up" {
+		trace = f.registry.TraceUpAt
+	}
+	t, err := trace(ctx, actor, q)
 	if err != nil {
 		return nil, err
 	}
