@@ -29,6 +29,8 @@ type AffectedQuery struct {
 	After int64
 	// Limit 0 is no limit.
 	Limit int
+	// FitsOnly leaves final values and reports to RestingOn.
+	FitsOnly bool
 }
 
 // An AffectedVersion is a calibration, value, final value or report that rests
@@ -51,7 +53,7 @@ const selectAffected = `), up (laboratory, kind, code, version) AS (
 		UNION
 		SELECT e.laboratory, e.from_kind, e.from_code, e.from_version FROM up u CROSS JOIN edges e
 		WHERE e.laboratory = $2 AND e.to_laboratory = u.laboratory AND e.to_kind = u.kind AND e.to_code = u.code AND e.to_version = u.version
-			AND e.part IN ('anchor', 'member', 'line')
+			AND e.part IN ('anchor', 'member', 'line') AND e.from_kind IN ('calibration', 'value', 'final', 'report')
 	)
 	SELECT v.kind, v.code, v.version, v.position, v.hash, c.newest, c.state, c.in_force, c.held
 	FROM up u CROSS JOIN versions v CROSS JOIN currents c
@@ -81,6 +83,9 @@ func (v *View) Affected(ctx context.Context, q AffectedQuery, row func(AffectedV
 		limit = int64(always)
 	}
 	statement := strings.Replace(v.q.engine.withWanted, "wanted", "RECURSIVE wanted", 1) + selectAffected
+	if q.FitsOnly {
+		statement = strings.Replace(statement, "('calibration', 'value', 'final', 'report')", "('calibration', 'value')", 1)
+	}
 	err = v.q.each(ctx, statement, []any{list, q.Laboratory, int64(as), q.After, limit}, func(scan func(...any) error) error {
 		a := AffectedVersion{Ref: Ref{Key: Key{Laboratory: q.Laboratory}}}
 		var hash []byte

@@ -35,6 +35,7 @@ var derivedTables = []struct {
 	{resultsTable, "", "calibration", "version", KindCalibration},
 	{sensitivitiesTable, "", "calibration", "version", KindCalibration},
 	{reportedTable, "", "report", "version", KindReport},
+	{sharesTable, "kind", "code", "number", ""},
 }
 
 // derived are the rows of one version, by table name.
@@ -62,7 +63,9 @@ func derive(raw Raw, finalValue func(Input) (Version[Final], error)) (derived, e
 	case KindCalibration:
 		rows["results"], rows["sensitivities"], err = resultsOf(raw)
 	case KindReport:
-		rows["reported"], err = reportedOf(raw, finalValue)
+		rows["reported"], rows["shares"], err = reportedOf(raw, finalValue)
+	case KindFinal:
+		rows["shares"], err = sharesOfFinal(raw)
 	}
 	if err != nil {
 		return nil, fmt.Errorf("derive rows of %s: %w", raw.Ref, err)
@@ -169,47 +172,52 @@ func resultsOf(raw Raw) (results, sensitivities [][]any, err error) {
 	return results, [][]any{{raw.Laboratory, raw.Code, int64(raw.Version), parameters, lines}}, nil
 }
 
-func reportedOf(raw Raw, finalValue func(Input) (Version[Final], error)) ([][]any, error) {
-	report, err := Decode[Report](raw)
+func sharesOfFinal(raw Raw) ([][]any, error) {
+	f, err := Decode[Final](raw)
 	if err != nil {
 		return nil, err
 	}
-	if len(raw.Inputs) < len(report.Value.Lines) {
-		return nil, &InvalidError{Place: raw.Ref.String(), Found: fmt.Sprintf("%d inputs for %d lines", len(raw.Inputs), len(report.Value.Lines)), Expected: "a final value for each line"}
+	return sharesOf(raw, []Version[Final]{f}, []string{f.Code})
+}
+
+func reportedOf(raw Raw, finalValue func(Input) (Version[Final], error)) (reported, shares [][]any, err error) {
+	report, err := Decode[Report](raw)
+	if err != nil {
+		return nil, nil, err
 	}
-	var rows [][]any
+	if len(raw.Inputs) < len(report.Value.Lines) {
+		return nil, nil, &InvalidError{Place: raw.Ref.String(), Found: fmt.Sprintf("%d inputs for %d lines", len(raw.Inputs), len(report.Value.Lines)), Expected: "a final value for each line"}
+	}
+	var finals []Version[Final]
+	var codes []string
 	for i, l := range report.Value.Lines {
 		in := raw.Inputs[i]
 		if in.Kind != KindFinal {
-			return nil, &InvalidError{Place: fmt.Sprintf("%s input %d", raw.Ref, i), Found: "a " + string(in.Kind), Expected: "the final value of line " + fmt.Sprint(i)}
+			return nil, nil, &InvalidError{Place: fmt.Sprintf("%s input %d", raw.Ref, i), Found: "a " + string(in.Kind), Expected: "the final value of line " + fmt.Sprint(i)}
 		}
 		final, err := finalValue(in)
 		if err != nil {
-			return nil, err
+			return nil, nil, err
 		}
 		line := NewReportLine(l.Code, raw.Code, i, final)
 		hash, err := ReportLineHash(line)
 		if err != nil {
-			return nil, err
+			return nil, nil, err
 		}
 		if hash != l.Hash {
-			return nil, &InvalidError{Place: fmt.Sprintf("%s line %d (%s)", raw.Ref, i, l.Code), Found: "hash " + l.Hash.String(), Expected: "hash " + hash.String()}
+			return nil, nil, &InvalidError{Place: fmt.Sprintf("%s line %d (%s)", raw.Ref, i, l.Code), Found: "hash " + l.Hash.String(), Expected: "hash " + hash.String()}
 		}
-		rows = append(rows, []any{l.Code, raw.Laboratory, raw.Code, int64(raw.Version), int64(i), in.Code, int64(in.Version),
+		finals, codes = append(finals, final), append(codes, l.Code)
+		reported = append(reported, []any{l.Code, raw.Laboratory, raw.Code, int64(raw.Version), int64(i), in.Code, int64(in.Version),
 			final.Value.Value + 0, final.Value.StandardUncertainty + 0, hash[:]})
 	}
-	return rows, nil
+	shares, err = sharesOf(raw, finals, codes)
+	return reported, shares, err
 }
 
 // writeDerived writes the derived rows of everything queued.
 func (tx *Tx) writeDerived(ctx context.Context) error {
-	finalValue := func(in Input) (Version[Final], error) {
-		raw, err := tx.Version(ctx, in.Key, in.Version)
-		if err != nil {
-			return Version[Final]{}, err
-		}
-		return Decode[Final](raw)
-	}
+	finalValue := func(in Input) (Version[Final], error) { return tx.finalValue(ctx, in) }
 	rows := make(derived)
 	for _, q := range tx.queue {
 		of, err := derive(q.raw, finalValue)

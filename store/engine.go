@@ -18,6 +18,8 @@ type engine struct {
 	// withWanted begins a statement about many versions, given as a JSON array of
 	// arrays; see wantedRows.
 	withWanted string
+	// joinPacked joins the lines of shares of one group.
+	joinPacked string
 	// open returns the pool that writes and the pool that reads; they may be one.
 	open func(ctx context.Context, o Options) (write, read *sql.DB, err error)
 	// hasTable asks whether the table $1 exists: one row with a count.

@@ -83,7 +83,7 @@ func (s *Store) Migrate(ctx context.Context) (applied []string, err error) {
 	defer func() { err = errors.Join(err, release()) }()
 
 	if err := s.checkSchema(ctx); err == nil || !errors.Is(err, ErrOutdated) {
-		return nil, err
+		return nil, errors.Join(err, s.rebuild(ctx, err))
 	}
 	folder, err := migrations.Files(s.engine.name)
 	if err != nil {
@@ -101,7 +101,8 @@ func (s *Store) Migrate(ctx context.Context) (applied []string, err error) {
 	if err != nil {
 		return applied, fmt.Errorf("migrate: %w", err)
 	}
-	return applied, s.checkSchema(ctx)
+	err = s.checkSchema(ctx)
+	return applied, errors.Join(err, s.rebuild(ctx, err))
 }
 
 // leaseMigration waits for the lease, keeps it alive, and returns what gives it back.

@@ -24,6 +24,7 @@ func postgresEngine() *engine {
 		name:       migrations.Postgres,
 		dialect:    goose.DialectPostgres,
 		withWanted: wantedRows + `jsonb_array_elements(cast($1 as jsonb)) j (value)`,
+		joinPacked: `string_agg(s.packed, chr(10))`,
 		open:       openPostgres,
 		hasTable: `SELECT count(*) FROM information_schema.tables
 			WHERE table_schema = current_schema() AND table_name = $1`,

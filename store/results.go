@@ -239,7 +239,7 @@ func (v *View) Sensitivities(ctx context.Context, laboratory, calibration string
 
 func unpackSensitivities(parameters, results []byte) (Sensitivities, error) {
 	var s Sensitivities
-	f := floats{b: parameters}
+	f := newFloats(parameters)
 	for _, m := range []*[][]float64{&s.AnchorSensitivities, &s.AnchorDerivatives, &s.NoiseCovariance} {
 		rows, columns := f.count(), f.count()
 		for range rows {
@@ -249,7 +249,7 @@ func unpackSensitivities(parameters, results []byte) (Sensitivities, error) {
 	if f.bad || len(f.b) > 0 {
 		return s, fmt.Errorf("block of parameters: found %d bytes left over or missing", len(f.b))
 	}
-	f = floats{b: results}
+	f = newFloats(results)
 	for len(f.b) > 0 && !f.bad {
 		var r ResultSensitivity
 		head := f.take(2)
@@ -266,10 +266,20 @@ func unpackSensitivities(parameters, results []byte) (Sensitivities, error) {
 	return s, nil
 }
 
-// floats reads packed float64; bad is set when they run out.
+// floats reads packed float64; bad is set when they run out. What is taken are
+// parts of one slice.
 type floats struct {
-	b   []byte
+	b   []byte // what is left, in bytes
+	all []float64
 	bad bool
+}
+
+func newFloats(b []byte) floats {
+	f := floats{b: b, all: make([]float64, len(b)/8)}
+	for i := range f.all {
+		f.all[i] = math.Float64frombits(binary.LittleEndian.Uint64(b[8*i:]))
+	}
+	return f
 }
 
 func (f *floats) take(n int) []float64 {
@@ -277,11 +287,8 @@ func (f *floats) take(n int) []float64 {
 		f.bad = true
 		return nil
 	}
-	values := make([]float64, n)
-	for i := range values {
-		values[i] = math.Float64frombits(binary.LittleEndian.Uint64(f.b[8*i:]))
-	}
-	f.b = f.b[8*n:]
+	values := f.all[:n:n]
+	f.all, f.b = f.all[n:], f.b[8*n:]
 	return values
 }
 

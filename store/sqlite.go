@@ -27,6 +27,7 @@ func sqliteEngine() *engine {
 		dialect:    goose.DialectSQLite3,
 		unnumbered: true,
 		withWanted: wantedRows + `json_each($1) j`,
+		joinPacked: `group_concat(s.packed, char(10))`,
 		open:       openSQLite,
 		hasTable:   `SELECT count(*) FROM sqlite_master WHERE type = 'table' AND name = $1`,
 		// It takes some microseconds, and waits no longer than the busy timeout; to watch

@@ -21,6 +21,7 @@ var withoutLaboratory = map[string]string{
 	"renewMigrationLease":  "the lease for migrating, before there are laboratories",
 	"dropMigrationLease":   "the lease for migrating, before there are laboratories",
 	"readSchema":           "the migrations' own table",
+	"selectRebuilds":       "what a migration left to fill, before anybody reads",
 	"hasTable":             "the engine's own catalogue",
 	// Pieces of statements, complete only with what stands beside them.
 	"versionColumns": "columns", "resultColumns": "columns", "jobColumns": "columns",

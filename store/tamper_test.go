@@ -37,6 +37,7 @@ var tableKeys = map[string][]string{
 	"sensitivities": {"laboratory", "calibration", "version"},
 	"reported":      {"code"},
 	"names":         {"laboratory", "kind", "name", "code", "version"},
+	"shares":        {"laboratory", "calibration", "version", "kind", "code", "number"},
 	"uses":          {"laboratory", "session", "unit"},
 	"currents":      {"laboratory", "kind", "code"},
 	"ledger_heads":  {"laboratory"},

@@ -52,6 +52,8 @@ func keyColumns(t string) int {
 		return 5
 	case "results":
 		return 4
+	case "shares":
+		return 6
 	case "sensitivities", "uses", "currents":
 		return 3
 	}

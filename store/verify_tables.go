@@ -82,6 +82,10 @@ var orphans = []orphan{
 		`SELECT d.code FROM reported d
 			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = 'report' AND v.code = d.report AND v.version = d.version
 			WHERE d.laboratory = $1 AND v.version IS NULL ORDER BY d.code`},
+	{"shares", "no version it comes from", []string{"%s", " %s", " %s", " %s", " %s", " %s"},
+		`SELECT d.laboratory, d.calibration, d.version, d.kind, d.code, d.number FROM shares d
+			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = d.kind AND v.code = d.code AND v.version = d.number
+			WHERE d.laboratory = $1 AND v.version IS NULL ORDER BY d.calibration, d.version, d.code, d.number`},
 	{"uses", "no session it comes from", []string{"%s", " %s", " %s"},
 		`SELECT d.laboratory, d.session, d.unit FROM uses d
 			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = 'session' AND v.code = d.session AND v.version = 1

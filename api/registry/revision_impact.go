@@ -73,9 +73,10 @@ const Material = 0.5
 func SpreadLimits() [5]float64 { return [5]float64{0.1, 0.25, 0.5, 1, 2} }
 
 // PreviewRevision says what a proposal would move, and stores nothing. Yield is
-// called in the order of the ledger, in which everything stands after what it
-// rests on, for each calibration, assigned value and final value in force and
-// each reported delta beyond the threshold; an error of it ends the preview.
+// called for each calibration and assigned value in force, in the order of the
+// ledger, in which everything stands after what it rests on; and, after the
+// calibrations they rest on, for each final value in force and each reported
+// delta; beyond the threshold. An error of it ends the preview.
 // Memory does not grow with the number of calibrations or deltas.
 func (r *Registry) PreviewRevision(ctx context.Context, actor Actor, p Proposal, yield func(Affected) error) (RevisionSummary, error) {
 	var out RevisionSummary
@@ -100,13 +101,16 @@ func (r *Registry) PreviewRevision(ctx context.Context, actor Actor, p Proposal,
 func (r *Registry) impactOf(ctx context.Context, v *store.View, c *changes, p Proposal, yield func(Affected) error) (RevisionSummary, error) {
 	im := newImpact(v, c, p, yield)
 	im.summary.Laboratory, im.summary.Position = c.laboratory, c.body.Position
-	q := store.AffectedQuery{Laboratory: c.laboratory, Roots: c.roots(), AsOf: &c.body.FrozenAt, After: -1}
+	q := store.AffectedQuery{Laboratory: c.laboratory, Roots: c.roots(), AsOf: &c.body.FrozenAt, After: -1, FitsOnly: !p.Full}
 	var values []store.Ref
 	for ref := range c.values {
 		values = append(values, ref)
 	}
 	var err error
 	if im.summary.Judged, err = v.Judged(ctx, c.laboratory, values); err != nil {
+		return im.summary, err
+	}
+	if im.moved, err = v.Moved(ctx, c.laboratory, maxMoved); err != nil {
 		return im.summary, err
 	}
 	if p.Full {
@@ -132,6 +136,9 @@ func (r *Registry) impactOf(ctx context.Context, v *store.View, c *changes, p Pr
 		}
 		return im.batch(ctx, batch)
 	})
+	if err == nil {
+		err = im.restingAtLast()
+	}
 	im.summary.Largest = im.ranked()
 	return im.summary, err
 }

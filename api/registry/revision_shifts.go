@@ -23,6 +23,7 @@ type impact struct {
 	values       map[store.Ref]shift
 	calibrations recent[calibrationShift]
 	finals       recent[shift]
+	resting
 	// Of the batch: derivatives, final values, and the lines of reports.
 	blocks map[store.Ref]store.CalibrationBlock
 	shares map[store.Ref]store.FinalShares
@@ -136,6 +137,9 @@ func (im *impact) batch(ctx context.Context, batch []store.AffectedVersion) erro
 		if err != nil {
 			return err
 		}
+	}
+	if im.full == nil {
+		return im.restOn(ctx, calibrations)
 	}
 	return nil
 }
