@@ -106,8 +106,9 @@ func reader(b *testing.B, handler http.Handler, path, token string) func() {
 }
 
 // BenchmarkImport brings sessions of 5,000 readings through HTTP, and beside it
-// the bare insert of as many rows with one prepared statement in one
-// transaction: quality.md asks for half its rate.
+// the bare insert of the same rows with one prepared statement in one
+// transaction: quality.md asks for half its rate. They take turns, and the
+// fastest are compared.
 func BenchmarkImport(b *testing.B) {
 	const rows = 5000
 	bench := openBench(b)
@@ -123,44 +124,47 @@ func BenchmarkImport(b *testing.B) {
 		}
 		return text.String()
 	}
-	b.Run("deltamoor", func(b *testing.B) {
-		for b.Loop() {
-			b.StopTimer()
-			text := file()
-			b.StartTimer()
-			bench.post(registry.Analyst, "/v1/sessions/import?instrument=EA1&method=C-solid&name=big.csv", text, "Content-Type", csvType)
-		}
-		b.ReportMetric(float64(rows)*float64(b.N)/b.Elapsed().Seconds(), "readings/s")
-	})
-	b.Run("bare", func(b *testing.B) {
-		db, err := sql.Open("sqlite", "file:"+filepath.Join(b.TempDir(), "bare.db")+"?_pragma=journal_mode(WAL)&_pragma=synchronous(FULL)&_txlock=immediate")
+	db, err := sql.Open("sqlite", "file:"+filepath.Join(b.TempDir(), "bare.db")+"?_pragma=journal_mode(WAL)&_pragma=synchronous(FULL)&_txlock=immediate")
+	if err != nil {
+		b.Fatal(err)
+	}
+	b.Cleanup(func() { db.Close() })
+	if _, err := db.Exec(`CREATE TABLE readings (laboratory TEXT NOT NULL, session TEXT NOT NULL, number INTEGER NOT NULL, analysis TEXT NOT NULL, preparation TEXT NOT NULL,
+		position INTEGER, peak INTEGER, quantity TEXT NOT NULL, role TEXT NOT NULL, material TEXT NOT NULL, unit TEXT NOT NULL, sample TEXT NOT NULL, compound TEXT NOT NULL,
+		grouping TEXT NOT NULL, measured_at INTEGER, raw REAL NOT NULL, u REAL, size REAL, extra TEXT, PRIMARY KEY (laboratory, session, number)) STRICT, WITHOUT ROWID`); err != nil {
+		b.Fatal(err)
+	}
+	bare := func() {
+		tx, err := db.Begin()
 		if err != nil {
 			b.Fatal(err)
 		}
-		b.Cleanup(func() { db.Close() })
-		if _, err := db.Exec("CREATE TABLE readings (laboratory TEXT NOT NULL, session TEXT NOT NULL, number INTEGER NOT NULL, quantity TEXT, role TEXT, material TEXT, measured_at INTEGER, raw REAL, u REAL, size REAL, PRIMARY KEY (laboratory, session, number)) STRICT, WITHOUT ROWID"); err != nil {
+		statement, err := tx.Prepare("INSERT INTO readings VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)")
+		if err != nil {
 			b.Fatal(err)
 		}
-		session := 0
-		for b.Loop() {
-			session++
-			tx, err := db.Begin()
-			if err != nil {
-				b.Fatal(err)
-			}
-			statement, err := tx.Prepare("INSERT INTO readings VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10)")
-			if err != nil {
-				b.Fatal(err)
-			}
-			for i := range rows {
-				if _, err := statement.Exec("TST", fmt.Sprint(session), i+1, "d13C", "anchor", "FJO-GLY", int64(i), float64(i%80)-40, 0.05, 5.0); err != nil {
-					b.Fatal(err)
-				}
-			}
-			if err := tx.Commit(); err != nil {
+		for i := range rows {
+			number := fmt.Sprint(i + 1)
+			if _, err := statement.Exec("TST", fmt.Sprintf("S%09d", day), i+1, number, number, int64(i+1), nil, "d13C", "anchor", "FJO-GLY", "", "", "", "", int64(i), float64(i%80)-40, 0.05, 5.0, nil); err != nil {
 				b.Fatal(err)
 			}
 		}
-		b.ReportMetric(float64(rows)*float64(b.N)/b.Elapsed().Seconds(), "readings/s")
-	})
+		if err := tx.Commit(); err != nil {
+			b.Fatal(err)
+		}
+	}
+	best := [2]time.Duration{time.Hour, time.Hour}
+	for b.Loop() {
+		text := file()
+		for i, run := range []func(){func() {
+			bench.post(registry.Analyst, "/v1/sessions/import?instrument=EA1&method=C-solid&name=big.csv", text, "Content-Type", csvType)
+		}, bare} {
+			begun := time.Now()
+			run()
+			best[i] = min(best[i], time.Since(begun))
+		}
+	}
+	b.ReportMetric(rows/best[0].Seconds(), "readings/s")
+	b.ReportMetric(rows/best[1].Seconds(), "bare-readings/s")
+	b.ReportMetric(100*float64(best[1])/float64(best[0]), "%-of-bare-rate")
 }

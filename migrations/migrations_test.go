@@ -29,7 +29,7 @@ func list(t *testing.T, engine string) []migrations.Migration {
 	return l
 }
 
-func TestBothEnginesHaveTheSameMigrationsWithoutGaps(t *testing.T) {
+func TestBothEnginesHaveTheSameMigrationsInOrder(t *testing.T) {
 	lite, pg := list(t, migrations.SQLite), list(t, migrations.Postgres)
 	if diff := cmp.Diff(lite, pg); diff != "" {
 		t.Errorf("the folders differ (-sqlite +postgres):\n%s", diff)
@@ -37,14 +37,16 @@ func TestBothEnginesHaveTheSameMigrationsWithoutGaps(t *testing.T) {
 	if len(lite) == 0 {
 		t.Error("there are no migrations")
 	}
+	last := int64(0)
 	for i, m := range lite {
-		if m.Number != int64(i+1) || !strings.HasPrefix(m.Name, fmt.Sprintf("%04d_", m.Number)) {
-			t.Errorf("migration %d is %s, number %d", i+1, m.Name, m.Number)
+		if m.Number <= last || !strings.HasPrefix(m.Name, fmt.Sprintf("%04d_", m.Number)) {
+			t.Errorf("migration %d is %s, number %d after %d", i+1, m.Name, m.Number, last)
 		}
+		last = m.Number
 	}
 	newest, err := migrations.Newest(migrations.SQLite)
-	if err != nil || newest != int64(len(lite)) {
-		t.Errorf("newest is %d, %v, want %d", newest, err, len(lite))
+	if err != nil || newest != last {
+		t.Errorf("newest is %d, %v, want %d", newest, err, last)
 	}
 	if _, err := migrations.Files("mysql"); err == nil {
 		t.Error("there are migrations for an engine that is none")

@@ -3,12 +3,14 @@ package store
 import (
 	"context"
 	"database/sql"
+	"database/sql/driver"
 	"errors"
 	"fmt"
 	"net/url"
 	"os"
 	"path/filepath"
 	"runtime"
+	"slices"
 	"strings"
 	"time"
 
@@ -145,31 +147,94 @@ func sqliteClass(err error) errorClass {
 // readingsPerStatement bounds the parameters of one statement.
 const readingsPerStatement = 40
 
-func insertReadings(ctx context.Context, _ *sql.Conn, tx *sql.Tx, rows [][]any) error {
-	width := len(readingColumns)
-	many, err := tx.PrepareContext(ctx, readingsTable.statement(sqliteEngine(), readingsPerStatement, ""))
-	if err != nil {
-		return err
-	}
-	defer many.Close()
-	args := make([]any, 0, readingsPerStatement*width)
-	for len(rows) >= readingsPerStatement {
-		args = args[:0]
-		for _, r := range rows[:readingsPerStatement] {
-			args = append(args, r...)
-		}
-		if _, err := many.ExecContext(ctx, args...); err != nil {
-			return err
-		}
-		rows = rows[readingsPerStatement:]
-	}
+// insertReadings writes what is the same in all rows into the statement, as far
+// as it is nothing or a code: most of the time goes into binding parameters.
+func insertReadings(ctx context.Context, conn *sql.Conn, _ *sql.Tx, rows [][]any) error {
 	if len(rows) == 0 {
 		return nil
 	}
-	args = args[:0]
-	for _, r := range rows {
-		args = append(args, r...)
+	fixed := make([]string, len(readingColumns))
+	var bound []int
+	for i := range readingColumns {
+		if fixed[i] = literalOf(rows[0][i]); fixed[i] != "" && slices.ContainsFunc(rows, func(r []any) bool { return r[i] != rows[0][i] }) {
+			fixed[i] = ""
+		}
+		if fixed[i] == "" {
+			bound = append(bound, i)
+		}
 	}
-	_, err = tx.ExecContext(ctx, readingsTable.statement(sqliteEngine(), len(rows), ""), args...)
-	return err
+	return conn.Raw(func(driverConn any) error {
+		c, ok := driverConn.(interface {
+			PrepareContext(context.Context, string) (driver.Stmt, error)
+		})
+		if !ok {
+			return fmt.Errorf("store readings: found connection %T, expected one that prepares", driverConn)
+		}
+		var stmt driver.Stmt
+		defer func() {
+			if stmt != nil {
+				_ = stmt.Close()
+			}
+		}()
+		args := make([]driver.NamedValue, readingsPerStatement*len(bound))
+		for i := range args {
+			args[i].Ordinal = i + 1
+		}
+		for size := 0; len(rows) > 0; {
+			n := min(readingsPerStatement, len(rows))
+			if n != size {
+				if stmt != nil {
+					_ = stmt.Close()
+					stmt = nil
+				}
+				var err error
+				if stmt, err = c.PrepareContext(ctx, insertOf(fixed, n)); err != nil {
+					return err
+				}
+				size = n
+			}
+			k := 0
+			for _, r := range rows[:n] {
+				for _, i := range bound {
+					args[k].Value = r[i]
+					k++
+				}
+			}
+			if _, err := stmt.(driver.StmtExecContext).ExecContext(ctx, args[:k]); err != nil {
+				return err
+			}
+			rows = rows[n:]
+		}
+		return nil
+	})
+}
+
+// literalOf is a value as it may stand in a statement; "" where it is bound.
+func literalOf(value any) string {
+	switch x := value.(type) {
+	case nil:
+		return "NULL"
+	case string:
+		for _, c := range []byte(x) {
+			if (c < '0' || c > '9') && (c < 'A' || c > 'Z') && (c < 'a' || c > 'z') {
+				return ""
+			}
+		}
+		if len(x) <= maxCode {
+			return "'" + x + "'"
+		}
+	}
+	return ""
+}
+
+// insertOf is the statement of n rows of which some columns are fixed.
+func insertOf(fixed []string, n int) string {
+	values := make([]string, len(fixed))
+	for i, text := range fixed {
+		if values[i] = text; text == "" {
+			values[i] = "?"
+		}
+	}
+	row := "(" + strings.Join(values, ",") + ")"
+	return "INSERT INTO readings (" + strings.Join(readingColumns, ", ") + ") VALUES " + strings.TrimSuffix(strings.Repeat(row+",", n), ",")
 }

@@ -182,10 +182,14 @@ func (c *chain) preview(p registry.Proposal) (map[string]registry.Affected, regi
 	all := map[string]registry.Affected{}
 	last := int64(-1)
 	summary, err := c.PreviewRevision(c.ctx, c.auditor, p, func(a registry.Affected) error {
-		if a.Position < last {
-			c.t.Errorf("%s at position %d comes after position %d: not the order of the ledger", a.Ref, a.Position, last)
+		if p.Full || a.Kind == store.KindCalibration || a.Kind == store.KindValue {
+			if a.Position < last {
+				c.t.Errorf("%s at position %d comes after position %d: not the order of the ledger", a.Ref, a.Position, last)
+			}
+			last = a.Position
+		} else if last < 0 {
+			c.t.Errorf("%s comes before any calibration", a.Ref)
 		}
-		last = a.Position
 		name := a.Ref.String()
 		if a.Reported != "" {
 			name = a.Reported
