@@ -177,7 +177,7 @@ func (b *bench) everything(j journey) {
 		calibration, calibration + "/versions", calibration + "/versions/1", calibration + "/results", calibration + "/decisions", calibration + "/trace",
 		"/v1/samples", "/v1/samples/" + j.sample, "/v1/samples/" + j.sample + "/versions", "/v1/samples/" + j.sample + "/versions/1",
 		"/v1/finals", final, final + "/versions", final + "/versions/1", final + "/decisions", final + "/trace",
-		"/v1/reports", report, report + "/versions", report + "/versions/1", report + "/decisions", "/v1/reported/" + j.reported, "/v1/reported/" + j.reported + "/trace",
+		"/v1/reports", report, report + "/versions", report + "/versions/1", report + "/decisions", "/v1/reported/" + j.reported, "/v1/reported/" + j.reported + "/trace", "/v1/reported/" + j.reported + "/today",
 		"/v1/laboratories", "/v1/laboratories/TST", "/v1/people", "/v1/people/ana", "/v1/people/ana/versions", "/v1/people/ana/versions/1",
 		"/v1/ledger", "/v1/ledger/entries", "/v1/ledger/entries/3/inclusion", "/v1/ledger/consistency?first=3", "/v1/uploads/" + j.upload} {
 		b.get(registry.Manager, path)

@@ -19,6 +19,11 @@ type MomentParams struct {
 	ValidAt time.Time `query:"valid_at" required:"false" doc:"What held then: statements that begin to hold later do not count. Left out: now."`
 }
 
+// AsOfParam is the time up to which what was said counts.
+type AsOfParam struct {
+	AsOf time.Time `query:"as_of" required:"false" doc:"What had been said by then. Left out: now."`
+}
+
 func (p MomentParams) moment() store.Moment {
 	return store.Moment{AsOf: instantOf(p.AsOf), ValidAt: instantOf(p.ValidAt)}
 }

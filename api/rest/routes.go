@@ -162,6 +162,7 @@ func (f *face) routes() {
 	handle(f, o(get, "/reports/{code}/decisions", "listReportDecisions", "samples", "List the decisions on a report", listing[VersionDecision]), decisionsOn(f, reportKind))
 	handle(f, o(post, "/reports/{code}/decisions", "decideReport", "samples", "Withdraw a report", creates, conditional), decisionOn(f, reportKind))
 	handleClaimed(f, o(get, "/reported/{code}", "getReported", "samples", "Read a reported delta by its permanent code"), f.reportedShort, f.reported)
+	handle(f, o(get, "/reported/{code}/today", "getReportedToday", "trust", "Read a reported delta as it would be with the assigned values in force"), f.today)
 	handle(f, o(get, "/reported/{code}/trace", "traceReported", "trust", "Trace a reported delta to where its chain ends", answers[Trace], also("text/plain", "Indented lines.")), f.traceReported)
 
 	handle(f, o(get, "/revisions", "listRevisions", "trust", "List revisions", listing[Revision]), recordsOf(f, revisionKind))
