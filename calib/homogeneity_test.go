@@ -24,8 +24,9 @@ func TestSampleHomogeneityIsOneSourceForEverySessionOfASample(t *testing.T) {
 		}
 		return s
 	}
-	fit := func(s Session, h float64, except ...string) *Result {
-		r, err := Fit(s, Model{Weights: WeightsDeclared}, Policy{SampleHomogeneity: SampleHomogeneity{StandardUncertainty: h, DegreesOfFreedom: 12, Scale: "d13C-VPDB", Except: except}})
+	fit := func(s Session, h float64, materials ...string) *Result {
+		s.Materials = materials
+		r, err := Fit(s, Model{Weights: WeightsDeclared}, Policy{SampleHomogeneity: SampleHomogeneity{StandardUncertainty: h, DegreesOfFreedom: 12, Scale: "d13C-VPDB"}})
 		if err != nil {
 			t.Fatal(err)
 		}

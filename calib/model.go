@@ -97,9 +97,6 @@ type SampleHomogeneity struct {
 	StandardUncertainty float64
 	// DegreesOfFreedom of it; 0 when known.
 	DegreesOfFreedom float64
-	// Except lists subjects that are measured as unknowns and are no samples:
-	// reference materials, whose heterogeneity is that of their units.
-	Except []string
 	// Scale is part of the source's identity: sample:<subject>/<Scale>.
 	Scale string
 	// Group is the identity of the version that states it; "" is the scale's.

@@ -33,6 +33,11 @@ type Session struct {
 
 	Readings []Reading
 
+	// Materials lists subjects that are measured as unknowns and are no samples:
+	// reference materials, whose heterogeneity is that of their units and not
+	// [Policy.SampleHomogeneity]. Anchors and controls need not be in it.
+	Materials []string
+
 	// ReadingCovariance, in the order of Readings (‰²), replaces the readings'
 	// own StandardUncertainty; declared weights only; nil for none.
 	ReadingCovariance [][]float64

@@ -133,7 +133,7 @@ func (c *calibrated) fillSubject(s *SubjectResult, g subjectGroup, pred predicti
 	if nu := between.DegreesOfFreedom; nu > 0 {
 		below += float64(2*float64(b2*b2)) / nu
 	}
-	if own := c.in.policy.SampleHomogeneity; own.StandardUncertainty > 0 && c.in.readings[g.readings[0]].Role == Sample && !slices.Contains(own.Except, s.Subject) {
+	if own := c.in.policy.SampleHomogeneity; own.StandardUncertainty > 0 && c.in.readings[g.readings[0]].Role == Sample && !slices.Contains(c.in.session.Materials, s.Subject) {
 		s.Homogeneity = own.StandardUncertainty
 		h2 := float64(own.StandardUncertainty * own.StandardUncertainty)
 		variance += h2

@@ -319,8 +319,9 @@ func (a *assembly) input() (calib.Session, calib.Policy, error) {
 			p.BetweenSession.Group = fmt.Sprintf("between_session:%s.%d/%s", a.method.Code, a.method.Ref.Version, a.spec.Scale)
 		}
 	}
+	s.Materials = a.materials(calib.Sample)
 	if h := a.sampled; h != nil {
-		p.SampleHomogeneity = calib.SampleHomogeneity{StandardUncertainty: h.StandardUncertainty, Scale: a.spec.Scale, Except: a.materials(calib.Sample)}
+		p.SampleHomogeneity = calib.SampleHomogeneity{StandardUncertainty: h.StandardUncertainty, Scale: a.spec.Scale}
 		if h.DegreesOfFreedom != nil {
 			p.SampleHomogeneity.DegreesOfFreedom = *h.DegreesOfFreedom
 			p.SampleHomogeneity.Group = fmt.Sprintf("sample_homogeneity:%s.%d/%s", a.method.Code, a.method.Ref.Version, a.spec.Scale)
