@@ -34,7 +34,7 @@ type AffectedQuery struct {
 }
 
 // An AffectedVersion is a calibration, value, final value or report that rests
-// on a root, through anchors, members and lines alone.
+// on a root, through anchors, members, lines and conversions alone.
 type AffectedVersion struct {
 	Ref
 	Position int64
@@ -53,7 +53,7 @@ const selectAffected = `), up (laboratory, kind, code, version) AS (
 		UNION
 		SELECT e.laboratory, e.from_kind, e.from_code, e.from_version FROM up u CROSS JOIN edges e
 		WHERE e.laboratory = $2 AND e.to_laboratory = u.laboratory AND e.to_kind = u.kind AND e.to_code = u.code AND e.to_version = u.version
-			AND e.part IN ('anchor', 'member', 'line') AND e.from_kind IN ('calibration', 'value', 'final', 'report')
+			AND e.part IN ('anchor', 'member', 'line', 'converted') AND e.from_kind IN ('calibration', 'value', 'final', 'report')
 	)
 	SELECT v.kind, v.code, v.version, v.position, v.hash, c.newest, c.state, c.in_force, c.held
 	FROM up u CROSS JOIN versions v CROSS JOIN currents c

@@ -19,6 +19,7 @@ type Revision struct {
 	Values     []RevisedValue      `json:"values,omitempty"`
 	Units      []SuspectUnit       `json:"units,omitempty"`
 	Methods    []ReplacedMethod    `json:"methods,omitempty"`
+	Factors    []ReplacedFactor    `json:"factors,omitempty"`
 	Exclusions []RevisionExclusion `json:"exclusions,omitempty"`
 	// Position is the size of the ledger at which the affected set is frozen, and
 	// FrozenAt the time of its last entry: nothing recorded later belongs to the set.
@@ -59,6 +60,13 @@ type SuspectUnit struct {
 
 // A ReplacedMethod says which version of a method a calibration should have been made by.
 type ReplacedMethod struct {
+	Old Ref `json:"old"`
+	New Ref `json:"new"`
+}
+
+// A ReplacedFactor says which determination of an H3 factor should have been
+// used. Deltas that a program formed with the old one have it undone first.
+type ReplacedFactor struct {
 	Old Ref `json:"old"`
 	New Ref `json:"new"`
 }

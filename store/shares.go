@@ -4,6 +4,7 @@ import (
 	"context"
 	"fmt"
 	"math"
+	"slices"
 	"strconv"
 	"strings"
 )
@@ -27,6 +28,8 @@ type RestingShare struct {
 	Value, StandardUncertainty float64
 	// Position in the ledger of the version the row comes from.
 	Position int64
+	// Scale of a converted value; "" for one on the calibration's own scale.
+	Scale string
 }
 
 var sharesTable = table{"shares", []string{"laboratory", "calibration", "version", "kind", "code", "number", "packed"}}
@@ -61,6 +64,9 @@ func sharesOf(raw Raw, finals []Version[Final], codes []string) ([][]any, error)
 				Value: f.Value.Value, StandardUncertainty: f.Value.StandardUncertainty, Position: raw.Position}
 			if raw.Kind == KindReport {
 				s.Report = raw.Ref
+			}
+			if slices.ContainsFunc(f.Inputs, func(in Input) bool { return in.Part == "converted" }) {
+				s.Scale = f.Value.Scale
 			}
 			s.pack(b)
 		}
@@ -97,6 +103,10 @@ func (s *RestingShare) pack(b *strings.Builder) {
 		b.WriteString(s.Report.Code)
 		number(int64(s.Report.Version))
 		number(int64(s.ReportLine))
+	}
+	if s.Scale != "" {
+		b.WriteString(" =")
+		b.WriteString(s.Scale)
 	}
 }
 
@@ -151,10 +161,13 @@ func unpackShares(laboratory, packed string, f func(*RestingShare) error) error 
 		s.Final = Ref{Key: Key{Laboratory: laboratory, Kind: KindFinal, Code: word()}}
 		s.Final.Version, s.Line, s.Members, s.Position = int(number()), int(number()), int(number()), number()
 		s.Weight, s.Value, s.StandardUncertainty = float(), float(), float()
-		if line != "" {
+		if line != "" && line[0] != '=' {
 			s.Kind = KindReport
 			s.Report = Ref{Key: Key{Laboratory: laboratory, Kind: KindReport, Code: word()}}
 			s.Report.Version, s.ReportLine = int(number()), int(number())
+		}
+		if line != "" {
+			s.Scale = strings.TrimPrefix(word(), "=")
 		}
 		if !ok {
 			return fmt.Errorf("packed shares: found a line that cannot be read")

@@ -125,19 +125,11 @@ func (c *Comparison) judge(numbers []uncertain.Number, groups []uncertain.Group)
 
 // finalNumber is the uncertain number of a final value, with every source it rests on.
 func finalNumber(ctx context.Context, v source, f store.Version[store.Final]) (uncertain.Number, []uncertain.Group, error) {
-	from, rel, ok, err := converted(ctx, v, f)
+	from, rel, isConverted, err := converted(ctx, v, f.Inputs)
 	if err != nil {
 		return uncertain.Number{}, nil, err
 	}
-	if ok {
-		n, groups, err := finalNumber(ctx, v, from)
-		if err != nil {
-			return n, nil, err
-		}
-		n, _, err = convert(rel, from.Value.Scale, n)
-		return n, groups, err
-	}
-	_, members, err := againFinal(ctx, v, f)
+	again, members, err := againFinal(ctx, v, f)
 	if err != nil {
 		return uncertain.Number{}, nil, err
 	}
@@ -149,6 +141,21 @@ func finalNumber(ctx context.Context, v source, f store.Version[store.Final]) (u
 	for i, m := range f.Value.Members {
 		weights[i] = m.Weight
 	}
+	if !isConverted {
+		n, err := uncertain.Linear(0, weights, numbers)
+		return n, groups, err
+	}
+	for i, m := range again.Members { // those of the original
+		weights[i] = m.Weight
+	}
 	n, err := uncertain.Linear(0, weights, numbers)
+	if err != nil {
+		return n, nil, err
+	}
+	original, err := decodeVersion[store.Final](ctx, v, from)
+	if err != nil {
+		return n, nil, err
+	}
+	n, _, err = convert(rel, original.Value.Scale, n)
 	return n, groups, err
 }

@@ -290,20 +290,23 @@ func (r *Registry) ConvertFinal(ctx context.Context, actor Actor, final string, 
 		if err != nil {
 			return err
 		}
+		if _, _, ok, err := converted(ctx, v, from.Inputs); ok || err != nil {
+			if err == nil {
+				err = Refuse(Conflict, "final value %s was converted itself: convert the one it was made from", store.FormatCode(final))
+			}
+			return err
+		}
 		rel, err := relationAt(ctx, v, actor.Laboratory, q.Relation, q.Version, store.Moment{})
 		if err != nil {
 			return err
 		}
-		inputs := []store.Input{{Part: "converted", Ref: from.Ref}, {Part: "relation", Ref: rel.Ref}}
-		i := slices.IndexFunc(from.Inputs, func(in store.Input) bool { return in.Part == "sample" })
-		if i < 0 {
-			return fmt.Errorf("%s names no sample", from.Ref)
-		}
-		inputs = slices.Insert(inputs, 0, from.Inputs[i])
-		body, err := convertedFinal(ctx, v, from, rel)
+		next := from
+		next.Inputs = append(slices.Clone(from.Inputs), store.Input{Part: "converted", Ref: from.Ref}, store.Input{Part: "relation", Ref: rel.Ref})
+		body, _, err := convertedFinal(ctx, v, next, from.Value.Scale, rel)
 		if err != nil {
 			return err
 		}
+		inputs := next.Inputs
 		name := store.FinalName(body.Sample, body.Scale, body.Measurand)
 		keys, err := v.Resolve(ctx, actor.Laboratory, store.KindFinal, name)
 		if err != nil {
@@ -329,42 +332,80 @@ func (r *Registry) ConvertFinal(ctx context.Context, actor Actor, final string, 
 	return reread[store.Final](ctx, r, actor, store.KindFinal, code)
 }
 
-// convertedFinal is a final value on the other side of a relation.
-func convertedFinal(ctx context.Context, v source, from store.Version[store.Final], rel store.Version[store.Relation]) (store.Final, error) {
-	n, groups, err := finalNumber(ctx, v, from)
+// convertedFinal is a final value on the other side of a relation from the
+// scale of its members, which it names itself: they carry weights in its own
+// per mil, so that it moves with them as any other does.
+func convertedFinal(ctx context.Context, v source, f store.Version[store.Final], from string, rel store.Version[store.Relation]) (store.Final, []member, error) {
+	body, members, err := againFinal(ctx, v, f)
 	if err != nil {
-		return store.Final{}, err
+		return body, nil, err
 	}
-	y, to, err := convert(rel, from.Value.Scale, n)
+	numbers, groups, err := memberNumbers(ctx, v, members)
 	if err != nil {
-		return store.Final{}, err
+		return body, nil, err
 	}
-	body := store.Final{Sample: from.Value.Sample, Quantity: from.Value.Quantity, Scale: to, Measurand: from.Value.Measurand,
-		Rule: fmt.Sprintf("converted from %s by %s", from.Value.Scale, versionName(rel.Ref)), Members: []store.FinalMember{}, Flags: from.Value.Flags,
-		Value: y.Value, StandardUncertainty: y.StandardUncertainty()}
-	expanded, err := uncertain.Expand(y, groups, uncertain.Coverage{Probability: from.Value.Probability})
+	weights := make([]float64, len(members))
+	for i, m := range body.Members {
+		weights[i] = m.Weight
+	}
+	n, err := uncertain.Linear(0, weights, numbers)
 	if err != nil {
-		return body, err
+		return body, nil, err
+	}
+	probability := body.Probability
+	y, to, err := convert(rel, from, n)
+	if err != nil {
+		return body, nil, err
+	}
+	slope, err := slopeFrom(rel, from)
+	if err != nil {
+		return body, nil, err
+	}
+	for i := range body.Members {
+		body.Members[i].Weight *= slope
+	}
+	body.Scale, body.Rule = to, fmt.Sprintf("converted from %s by %s", from, versionName(rel.Ref))
+	body.Value, body.StandardUncertainty = y.Value, y.StandardUncertainty()
+	expanded, err := uncertain.Expand(y, groups, uncertain.Coverage{Probability: probability})
+	if err != nil {
+		return body, nil, err
 	}
 	body.K, body.Expanded, body.Probability, body.EffectiveDF = expanded.CoverageFactor, expanded.U, expanded.Probability, finite(expanded.DegreesOfFreedom)
-	return body, nil
+	return body, members, nil
 }
 
-// converted gives what a converted final value was made of; ok is false for one that was not.
-func converted(ctx context.Context, v source, f store.Version[store.Final]) (from store.Version[store.Final], rel store.Version[store.Relation], ok bool, err error) {
-	for _, in := range f.Inputs {
+// slopeFrom is the derivative of a converted delta by the original on a scale.
+func slopeFrom(rel store.Version[store.Relation], from string) (float64, error) {
+	k, err := relationOf(rel)
+	if from == rel.Value.To {
+		return 1 / k.Factor, err
+	}
+	return k.Factor, err
+}
+
+// converted gives what something converted was made from, and by which
+// relation; ok is false for what was not.
+func converted(ctx context.Context, v source, inputs []store.Input) (from store.Ref, rel store.Version[store.Relation], ok bool, err error) {
+	for _, in := range inputs {
 		switch in.Part {
 		case "converted":
-			ok = true
-			from, err = decodeVersion[store.Final](ctx, v, in.Ref)
+			from, ok = in.Ref, true
 		case "relation":
-			rel, err = decodeVersion[store.Relation](ctx, v, in.Ref)
-		}
-		if err != nil {
-			return from, rel, ok, err
+			if rel, err = decodeVersion[store.Relation](ctx, v, in.Ref); err != nil {
+				return from, rel, ok, err
+			}
 		}
 	}
 	return from, rel, ok, nil
+}
+
+// againConverted computes a converted final value again.
+func againConverted(ctx context.Context, v source, f store.Version[store.Final], from store.Ref, rel store.Version[store.Relation]) (store.Final, []member, error) {
+	original, err := decodeVersion[store.Final](ctx, v, from)
+	if err != nil {
+		return store.Final{}, nil, err
+	}
+	return convertedFinal(ctx, v, f, original.Value.Scale, rel)
 }
 
 // ConvertValue states the value of a material on another scale from its value
@@ -464,19 +505,11 @@ func scaledUnits(b *store.ValueComponent, factor float64, to string, groups []un
 	return &out
 }
 
-// convertedFrom gives what a converted value was made of; ok is false for one that was typed.
-func convertedFrom(ctx context.Context, v source, val store.Version[store.Value]) (old store.Version[store.Value], rel store.Version[store.Relation], ok bool, err error) {
-	for _, in := range val.Inputs {
-		switch in.Part {
-		case "converted":
-			ok = true
-			old, err = decodeVersion[store.Value](ctx, v, in.Ref)
-		case "relation":
-			rel, err = decodeVersion[store.Relation](ctx, v, in.Ref)
-		}
-		if err != nil {
-			return old, rel, ok, err
-		}
+// againConvertedValue computes a converted value again from the one it was made from.
+func againConvertedValue(ctx context.Context, v source, from store.Ref, rel store.Version[store.Relation]) (store.Value, error) {
+	old, err := decodeVersion[store.Value](ctx, v, from)
+	if err != nil {
+		return store.Value{}, err
 	}
-	return old, rel, ok, nil
+	return convertedValue(old, rel)
 }

@@ -15,6 +15,7 @@ type changes struct {
 	body       store.Revision
 	values     map[store.Ref]*changedValue // by the old version, without hash
 	methods    map[store.Ref]store.Ref     // without and with hash
+	factors    map[store.Ref]store.Ref     // the same
 	units      map[string]*store.Instant
 	readings   map[string][]int
 	// direct are calibrations that change by themselves, with the component that
@@ -66,7 +67,7 @@ func since(from, started *store.Instant) bool {
 // compile loads what a revision names and finds the calibrations it changes
 // directly: by a bottle, a method version or a reading.
 func compile(ctx context.Context, v *store.View, laboratory string, body store.Revision) (*changes, error) {
-	c := &changes{laboratory: laboratory, body: body, values: map[store.Ref]*changedValue{}, methods: map[store.Ref]store.Ref{},
+	c := &changes{laboratory: laboratory, body: body, values: map[store.Ref]*changedValue{}, methods: map[store.Ref]store.Ref{}, factors: map[store.Ref]store.Ref{},
 		units: map[string]*store.Instant{}, readings: map[string][]int{}, direct: map[store.Ref]int{}}
 	records := map[string]bool{}
 	for _, r := range body.Values {
@@ -133,6 +134,15 @@ func compile(ctx context.Context, v *store.View, laboratory string, body store.R
 		c.methods[m.Old.Bare()] = m.New
 		if err := c.start(ctx, v, m.Old.Key, m.Old.Version, "method", c.next()); err != nil {
 			return nil, err
+		}
+	}
+	for _, f := range body.Factors {
+		c.factors[f.Old.Bare()] = f.New
+		component := c.next()
+		for _, part := range []string{"factor", "factor earlier"} {
+			if err := c.start(ctx, v, f.Old.Key, f.Old.Version, part, component); err != nil {
+				return nil, err
+			}
 		}
 	}
 	for _, x := range body.Exclusions {

@@ -79,6 +79,12 @@ func (e *evaluation) next(ctx context.Context, a store.AffectedVersion) error {
 		if err != nil {
 			return err
 		}
+		if from, rel, ok, err := converted(ctx, e.v, old.Inputs); ok || err != nil {
+			if err != nil {
+				return err
+			}
+			return e.fixConverted(ctx, old, from, rel)
+		}
 		members, err := membersOf(ctx, e.v, old.Inputs, func(_ int, c store.Version[store.Calibration]) int { return resultOf(c.Value, old.Value.Material) })
 		if err != nil {
 			return err
@@ -95,6 +101,34 @@ func (e *evaluation) next(ctx context.Context, a store.AffectedVersion) error {
 	case store.KindFinal:
 		return e.fixFinal(ctx, a.Ref, out.draft)
 	}
+	return nil
+}
+
+// fixConverted moves a converted value with the one it was made from.
+func (e *evaluation) fixConverted(ctx context.Context, old store.Version[store.Value], from store.Ref, rel store.Version[store.Relation]) error {
+	origin, err := decodeVersion[store.Value](ctx, e.v, from)
+	if err != nil {
+		return err
+	}
+	slope, err := slopeFrom(rel, origin.Value.Scale)
+	if err != nil {
+		return err
+	}
+	was, _, err := numberOf(origin)
+	if err != nil {
+		return err
+	}
+	number, _, err := numberOf(old)
+	if err != nil {
+		return err
+	}
+	now := was.Value
+	if change := e.values[from.Bare()]; change != nil && change.applies(old.ValidFrom) {
+		now += change.delta
+	} else if x, ok := e.fixedValues[from.Bare()]; ok {
+		now = x
+	}
+	e.fixedValues[old.Ref.Bare()] = number.Value + slope*(now-was.Value)
 	return nil
 }
 

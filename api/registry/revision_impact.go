@@ -20,7 +20,7 @@ type Affected struct {
 	// Value and StandardUncertainty as they stand (‰).
 	Value, StandardUncertainty float64
 	// Shift (‰) is the change predicted to first order; Parts are what each change
-	// of the revision brings, in the order values, units, methods, exclusions, and
+	// of the revision brings, in the order values, units, methods, factors, exclusions, and
 	// add up to it. Ratio is |Shift|/u, +Inf where u is 0 and the value moves.
 	Shift, Ratio float64
 	Parts        []float64

@@ -64,6 +64,18 @@ func (c *changes) again(ctx context.Context, src source, of store.Version[store.
 				touched = touched || in.Part == "anchor"
 				in.Ref = r.ref
 			}
+		case "factor":
+			if to, ok := c.factors[in.Ref.Bare()]; ok {
+				in.Ref, touched = to, true
+			}
+		case "factor earlier":
+			// The file's deltas were formed with it: it stays, to be undone, and the
+			// right one is applied, unless another was applied here already.
+			to, ok := c.factors[in.Ref.Bare()]
+			if ok && !slices.ContainsFunc(of.Inputs, func(in store.Input) bool { return in.Part == "factor" }) {
+				next.Inputs = append(next.Inputs, in)
+				in, touched = store.Input{Part: "factor", Ref: to}, true
+			}
 		case "method":
 			if to, ok := c.methods[in.Ref.Bare()]; ok {
 				method, err := decodeVersion[store.Method](ctx, src, to)
@@ -169,17 +181,21 @@ func (c *changes) fixedFit(ctx context.Context, src source, of, next store.Versi
 			kept[value.Value.Material] = true
 		}
 	}
-	for _, in := range of.Inputs {
+	for _, in := range of.Inputs { // the anchors as they were, since they move by moved
 		if in.Part == "anchor" {
 			value, err := decodeVersion[store.Value](ctx, src, in.Ref)
 			if err != nil {
 				return nil, "", err
 			}
-			if !kept[value.Value.Material] {
-				continue
+			if kept[value.Value.Material] {
+				frozen.Inputs = append(frozen.Inputs, in)
 			}
 		}
-		frozen.Inputs = append(frozen.Inputs, in)
+	}
+	for _, in := range next.Inputs {
+		if in.Part != "anchor" {
+			frozen.Inputs = append(frozen.Inputs, in)
+		}
 	}
 	a, err := assembleStored(ctx, src, frozen)
 	if err != nil {

@@ -154,7 +154,9 @@ func (im *impact) rests(s *store.RestingShare, by shift, state store.State, scal
 		out.Ref, out.Line, out.Reported = s.Report, s.ReportLine, s.Code
 		counts = &im.summary.Reported
 	} else {
-		out.Scale = scale
+		if out.Scale = scale; s.Scale != "" {
+			out.Scale = s.Scale
+		}
 		if !im.counts(state) {
 			im.summary.Passed++
 			return nil

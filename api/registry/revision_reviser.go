@@ -171,6 +171,16 @@ func (rv *reviser) members(ctx context.Context, inputs []store.Input) (next []st
 				}
 			}
 		}
+		// Of the original of a converted value only the draft is named; whether
+		// anything moves is said by the members, which both have.
+		if in.Part == "converted" && in.Kind == store.KindFinal {
+			draft, err := rv.drafted(ctx, in.Key, nil)
+			if err == nil {
+				in.Ref = draft
+			} else if !errors.Is(err, store.ErrNotFound) {
+				return nil, false, "", err
+			}
+		}
 		next = append(next, in)
 	}
 	return next, touched, "", nil
@@ -209,6 +219,17 @@ func (rv *reviser) final(ctx context.Context, ref store.Ref) (revised, error) {
 	if err := combineMembers(ctx, rv.src, members, &body); err != nil {
 		return out, err
 	}
+	from, rel, ok, err := converted(ctx, rv.src, inputs)
+	if err != nil {
+		return out, err
+	}
+	if ok {
+		next := of
+		next.Inputs, next.Value.Members = inputs, body.Members
+		if body, _, err = againConverted(ctx, rv.src, next, from, rel); err != nil {
+			return out, err
+		}
+	}
 	out.draft, err = rv.state(ctx, raw, inputs, body)
 	return out, err
 }
@@ -242,12 +263,16 @@ func (rv *reviser) value(ctx context.Context, ref store.Ref) (revised, error) {
 	if err != nil {
 		return out, err
 	}
-	if of.Value.Basis != "assignment" || of.Value.BackLoaded {
-		return out, nil
+	from, rel, isConverted, err := converted(ctx, rv.src, of.Inputs)
+	if err != nil || of.Value.Basis != "assignment" && !isConverted || of.Value.BackLoaded {
+		return out, err
 	}
 	last, err := rv.lastOfItsPeriod(ctx, raw)
 	if err != nil || !last {
 		return out, err
+	}
+	if isConverted {
+		return rv.convertedValue(ctx, raw, of, from, rel)
 	}
 	var inputs []store.Input
 	if inputs, out.touched, out.untold, err = rv.members(ctx, of.Inputs); err != nil || !out.touched || out.untold != "" {
@@ -268,6 +293,43 @@ func (rv *reviser) value(ctx context.Context, ref store.Ref) (revised, error) {
 	}
 	if err != nil {
 		return out, err
+	}
+	out.draft, err = rv.state(ctx, raw, inputs, body)
+	return out, err
+}
+
+// convertedValue converts a value again from what its origin became.
+func (rv *reviser) convertedValue(ctx context.Context, raw store.Raw, of store.Version[store.Value], from store.Ref, rel store.Version[store.Relation]) (revised, error) {
+	var out revised
+	r, err := rv.replace(ctx, from, of.ValidFrom)
+	if err != nil || r.same {
+		return out, err
+	}
+	out.touched = true
+	switch {
+	case r.untold != "":
+		out.untold = fmt.Sprintf("it was converted from %s, whose new value cannot be told: %s", versionName(from), r.untold)
+		return out, nil
+	case r.dropped:
+		out.untold = fmt.Sprintf("it was converted from %s, which is withdrawn", versionName(from))
+		return out, nil
+	}
+	body, err := againConvertedValue(ctx, rv.src, r.ref, rel)
+	if refused := (*Error)(nil); errors.As(err, &refused) && refused.Meaning == Invalid {
+		out.untold = refused.Message
+		return out, nil
+	}
+	if err != nil {
+		return out, err
+	}
+	var inputs []store.Input
+	for _, in := range of.Inputs {
+		if in.Part == "converted" {
+			in.Ref = r.ref
+		}
+		if in.Part != "revision" {
+			inputs = append(inputs, in)
+		}
 	}
 	out.draft, err = rv.state(ctx, raw, inputs, body)
 	return out, err

@@ -369,6 +369,12 @@ func (im *impact) value(ctx context.Context, a store.AffectedVersion, raw store.
 	if err != nil {
 		return err
 	}
+	if from, rel, ok, err := converted(ctx, im.v, val.Inputs); ok || err != nil {
+		if err != nil {
+			return err
+		}
+		return im.convertedValue(ctx, a, val, from, rel)
+	}
 	members, err := membersOf(ctx, im.v, val.Inputs, func(_ int, c store.Version[store.Calibration]) int { return resultOf(c.Value, val.Value.Material) })
 	if err != nil {
 		return err
@@ -385,10 +391,42 @@ func (im *impact) value(ctx context.Context, a store.AffectedVersion, raw store.
 		}
 		s.add(one, weights[i], im.parts)
 	}
+	return im.valueMoves(ctx, a, val, s)
+}
+
+// convertedValue moves with the value it was made from, by the relation's slope.
+func (im *impact) convertedValue(ctx context.Context, a store.AffectedVersion, val store.Version[store.Value], from store.Ref, rel store.Version[store.Relation]) error {
+	scale, err := decodeVersion[store.Value](ctx, im.v, from)
+	if err != nil {
+		return err
+	}
+	slope, err := slopeFrom(rel, scale.Value.Scale)
+	if err != nil {
+		return err
+	}
+	below, ok := im.values[from.Bare()]
+	if change := im.changes.values[from.Bare()]; change != nil && change.applies(val.ValidFrom) {
+		below, ok = shift{moved: true, parts: make([]float64, im.parts)}, true
+		below.parts[change.part] = change.delta
+		if change.Withdrawn {
+			below.why = fmt.Sprintf("%s is withdrawn", versionName(from))
+		}
+	}
+	var s shift
+	if ok {
+		s.add(below, slope, im.parts)
+	}
+	return im.valueMoves(ctx, a, val, s)
+}
+
+// valueMoves hands out an assigned value that moves, and keeps its shift for
+// what rests on it.
+func (im *impact) valueMoves(ctx context.Context, a store.AffectedVersion, val store.Version[store.Value], s shift) error {
 	if !s.moved {
 		return nil
 	}
 	im.values[a.Ref.Bare()] = s
+	var err error
 	if a.State, _, err = im.v.State(ctx, a.Ref, store.Moment{AsOf: &im.body.FrozenAt}); err != nil {
 		return err
 	}

@@ -16,6 +16,7 @@ type Proposal struct {
 	Values     []ProposedValue
 	Units      []store.SuspectUnit
 	Methods    []ProposedMethod
+	Factors    []ProposedFactor
 	Exclusions []store.RevisionExclusion
 	Reason     string
 
@@ -66,13 +67,20 @@ type ProposedMethod struct {
 	Version, Use int
 }
 
+// A ProposedFactor says that sessions of an instrument that rest on one
+// determination of its H3 factor should rest on another, which is recorded.
+type ProposedFactor struct {
+	Instrument   string
+	Version, Use int
+}
+
 // revisionOf turns a proposal into the stored form, frozen at the view's head.
 func revisionOf(ctx context.Context, v *store.View, laboratory string, p Proposal) (store.Revision, error) {
 	body := store.Revision{Phase: store.RevisionProposed, Units: slices.Clone(p.Units), Exclusions: slices.Clone(p.Exclusions)}
 	var c complaints
-	total := len(p.Values) + len(p.Units) + len(p.Methods) + len(p.Exclusions)
+	total := len(p.Values) + len(p.Units) + len(p.Methods) + len(p.Factors) + len(p.Exclusions)
 	if total == 0 || total > MaxChanges {
-		c.add("body", fmt.Sprintf("%d changes", total), "1 to %d values, units, methods and exclusions that change", MaxChanges)
+		c.add("body", fmt.Sprintf("%d changes", total), "1 to %d values, units, methods, factors and exclusions that change", MaxChanges)
 	}
 	seen := map[store.Ref]bool{}
 	for i, q := range p.Values {
@@ -108,21 +116,18 @@ func revisionOf(ctx context.Context, v *store.View, laboratory string, p Proposa
 		}
 	}
 	for i, m := range p.Methods {
-		var refs [2]store.Ref
-		for j, number := range []int{m.Version, m.Use} {
-			raw, err := v.Version(ctx, store.Key{Laboratory: laboratory, Kind: store.KindMethod, Code: m.Method}, number)
-			if ignoreNotFound(err) != nil {
-				return body, err
-			}
-			if err != nil {
-				c.add(fmt.Sprintf("body.methods[%d]", i), fmt.Sprintf("%s.%d", m.Method, number), "a recorded version of a method of this laboratory")
-			}
-			refs[j] = raw.Ref
+		old, use, err := replacedVersion(ctx, v, store.Key{Laboratory: laboratory, Kind: store.KindMethod, Code: m.Method}, m.Version, m.Use, fmt.Sprintf("body.methods[%d]", i), "a method", &c)
+		if err != nil {
+			return body, err
 		}
-		if m.Version == m.Use {
-			c.add(fmt.Sprintf("body.methods[%d].use", i), fmt.Sprint(m.Use), "another version than the wrong one")
+		body.Methods = append(body.Methods, store.ReplacedMethod{Old: old, New: use})
+	}
+	for i, f := range p.Factors {
+		old, use, err := replacedVersion(ctx, v, store.Key{Laboratory: laboratory, Kind: store.KindFactor, Code: f.Instrument}, f.Version, f.Use, fmt.Sprintf("body.factors[%d]", i), "an H3 factor", &c)
+		if err != nil {
+			return body, err
 		}
-		body.Methods = append(body.Methods, store.ReplacedMethod{Old: refs[0], New: refs[1]})
+		body.Factors = append(body.Factors, store.ReplacedFactor{Old: old, New: use})
 	}
 	for i, x := range p.Exclusions {
 		place := fmt.Sprintf("body.exclusions[%d]", i)
@@ -160,6 +165,25 @@ func revisionOf(ctx context.Context, v *store.View, laboratory string, p Proposa
 	head, err := v.Head(ctx, laboratory)
 	body.Position, body.FrozenAt = head.Size, head.At
 	return body, err
+}
+
+// replacedVersion finds the wrong and the right version of a record.
+func replacedVersion(ctx context.Context, v *store.View, key store.Key, version, use int, place, what string, c *complaints) (old, next store.Ref, err error) {
+	var refs [2]store.Ref
+	for i, number := range []int{version, use} {
+		raw, err := v.Version(ctx, key, number)
+		if ignoreNotFound(err) != nil {
+			return old, next, err
+		}
+		if err != nil {
+			c.add(place, fmt.Sprintf("%s.%d", key.Code, number), "a recorded version of %s of this laboratory", what)
+		}
+		refs[i] = raw.Ref
+	}
+	if version == use {
+		c.add(place+".use", fmt.Sprint(use), "another version than the wrong one")
+	}
+	return refs[0], refs[1], nil
 }
 
 // resolve finds the version that changes; nil after a complaint.

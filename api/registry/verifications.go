@@ -148,19 +148,17 @@ func (c *recheck) version(ctx context.Context, v source, raw store.Raw) error {
 		if err != nil {
 			return err
 		}
-		from, rel, ok, err := converted(ctx, v, stored)
+		from, rel, ok, err := converted(ctx, v, stored.Inputs)
 		if err != nil {
 			return err
 		}
+		remake := againFinal
 		if ok {
-			body, err := convertedFinal(ctx, v, from, rel)
-			if err != nil {
-				return err
+			remake = func(ctx context.Context, v source, f store.Version[store.Final]) (store.Final, []member, error) {
+				return againConverted(ctx, v, f, from, rel)
 			}
-			scale, condition, again = math.Abs(body.Value), 1e6, body
-			break
 		}
-		body, members, err := againFinal(ctx, v, stored)
+		body, members, err := remake(ctx, v, stored)
 		if err != nil {
 			return err
 		}
@@ -168,11 +166,11 @@ func (c *recheck) version(ctx context.Context, v source, raw store.Raw) error {
 	case store.KindValue:
 		stored, err := store.Decode[store.Value](raw)
 		if err == nil && stored.Value.Basis == Conversion {
-			old, rel, ok, err := convertedFrom(ctx, v, stored)
+			from, rel, ok, err := converted(ctx, v, stored.Inputs)
 			if err != nil || !ok {
 				return err
 			}
-			body, err := convertedValue(old, rel)
+			body, err := againConvertedValue(ctx, v, from, rel)
 			if err != nil {
 				return err
 			}
