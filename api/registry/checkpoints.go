@@ -28,10 +28,11 @@ func (r *Registry) Checkpoint(ctx context.Context, actor Actor) (store.Checkpoin
 	if err := actor.need(MayRead); err != nil {
 		return store.Checkpoint{}, err
 	}
-	if r.key == nil {
+	key := r.key.Load()
+	if key == nil {
 		return store.Checkpoint{}, Refuse(Conflict, "this registry has no signing key: its ledgers are unsigned")
 	}
-	return r.SignCheckpoint(ctx, actor.Laboratory, *r.key)
+	return r.SignCheckpoint(ctx, actor.Laboratory, *key)
 }
 
 // SignCheckpoint signs the head of a laboratory's ledger and keeps the note; a

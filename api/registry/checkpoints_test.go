@@ -119,3 +119,18 @@ func TestReplacedKeyIsSignedByTheOldOne(t *testing.T) {
 		t.Errorf("verification with an unsigned key: %+v, want key TST/ledger.3 named", v.Findings)
 	}
 }
+
+// A server may be started before "init" has made the key.
+func TestKeyFoundLaterSignsOnRequest(t *testing.T) {
+	b := openBench(t)
+	r := registry.New(b.store, registry.Options{})
+	if _, err := r.Checkpoint(b.ctx, b.auditor); registry.MeaningOf(err) != registry.Conflict {
+		t.Errorf("without a key: %v, want a refusal", err)
+	}
+	key := testKey(t, 5)
+	r.UseKey(&key)
+	r.UseKey(nil) // a file that cannot be read now takes nothing away
+	if signed, err := r.Checkpoint(b.ctx, b.auditor); err != nil || len(signed.Note) == 0 {
+		t.Errorf("with the key: %q, %v", signed.Note, err)
+	}
+}

@@ -146,9 +146,9 @@ func (r *Registry) pack(ctx context.Context, actor Actor, code string, all bool)
 	if _, err := r.Reported(ctx, actor, code); err != nil {
 		return Pack{}, err
 	}
-	if r.key != nil {
+	if key := r.key.Load(); key != nil {
 		for _, laboratory := range []string{actor.Laboratory, store.Common} {
-			if _, err := r.SignCheckpoint(ctx, laboratory, *r.key); err != nil {
+			if _, err := r.SignCheckpoint(ctx, laboratory, *key); err != nil {
 				return Pack{}, fmt.Errorf("pack %s: %w", store.FormatCode(code), err)
 			}
 		}

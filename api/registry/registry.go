@@ -16,6 +16,7 @@ import (
 	"io"
 	"slices"
 	"strings"
+	"sync/atomic"
 	"time"
 
 	"deltamoor/store"
@@ -28,7 +29,7 @@ type Registry struct {
 	now   func() time.Time
 	rand  io.Reader
 	name  string
-	key   *ledger.Key
+	key   atomic.Pointer[ledger.Key]
 
 	holders known[[2]store.Hash, saidOfHolder]
 	claims  known[store.Hash, Claim]
@@ -54,7 +55,8 @@ const DefaultName = "deltamoor.local"
 
 // New makes a registry over an open store, which stays the caller's to close.
 func New(s *store.Store, o Options) *Registry {
-	r := &Registry{store: s, now: o.Now, rand: o.Rand, name: o.Name, key: o.Key}
+	r := &Registry{store: s, now: o.Now, rand: o.Rand, name: o.Name}
+	r.UseKey(o.Key)
 	r.holders.most, r.claims.most, r.lines.most, r.told.most = maxHolders, maxHolders, maxKnownLines, maxTold
 	if r.name == "" {
 		r.name = DefaultName
@@ -66,6 +68,14 @@ func New(s *store.Store, o Options) *Registry {
 		r.rand = rand.Reader
 	}
 	return r
+}
+
+// UseKey signs checkpoints on request from now on with a key: a server may run
+// before its registry is initialised. Nil leaves things as they are.
+func (r *Registry) UseKey(key *ledger.Key) {
+	if key != nil {
+		r.key.Store(key)
+	}
 }
 
 // An Actor is who asks: a person acting in one laboratory with the roles and

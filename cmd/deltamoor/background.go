@@ -70,7 +70,8 @@ const (
 )
 
 // sign signs the heads of all ledgers as they move, with the key that readKey
-// finds each time: "deltamoor init" may come after "deltamoor serve". Several
+// finds each time: "deltamoor init" may come after "deltamoor serve", and what is
+// found then signs on request too. Several
 // servers may do so at once; one head signed twice is one checkpoint.
 func (o *opened) sign(ctx context.Context, log *slog.Logger, readKey func() (*ledger.Key, error)) {
 	signed := map[string]time.Time{} // when this server last did
@@ -82,6 +83,7 @@ func (o *opened) sign(ctx context.Context, log *slog.Logger, readKey func() (*le
 			}
 			return
 		}
+		o.UseKey(key)
 		o.signHeads(ctx, log, *key, signed)
 	})
 }
