@@ -3,6 +3,7 @@ package demo
 import (
 	"bytes"
 	"math"
+	"strconv"
 	"strings"
 	"testing"
 	"time"
@@ -48,5 +49,46 @@ func TestCampaignRecoversTheTruthAndSeesNoStep(t *testing.T) {
 		if !strings.Contains(page.String(), "<td>"+v.ValueText+"</td><td>"+v.ExpandedText+"</td>") {
 			t.Errorf("the certificate's page lacks %s ± %s", v.ValueText, v.ExpandedText)
 		}
+	}
+}
+
+// A shift passes through a campaign by the weights that it stored: they add up
+// to one and give its value, and a small change of a primary value is predicted
+// as the campaign, concluded again with new weights and variances, confirms it.
+func TestShiftsPassThroughACampaignByItsStoredWeights(t *testing.T) {
+	p, s := built(t)
+	v := s.Campaign.Values[scaleC]
+	sum, value := 0.0, 0.0
+	for _, session := range v.Value.Campaign.Sessions {
+		sum += session.Weight
+		value += session.Weight * session.Value
+	}
+	if stated := number(t, v.Value.Value); math.Abs(sum-1) > 1e-12 || math.Abs(value-stated) > 1e-9 {
+		t.Errorf("weights add up to %v and give %v, stated %v", sum, value, stated)
+	}
+	// Another u would change the weights within each fit, which is no shift.
+	primary, err := registry.One[store.Value](t.Context(), p.Registry, s.Auditor, store.KindValue, registry.ValueCode("USGS41", scaleC, registry.Total), 0, store.Moment{})
+	if err != nil {
+		t.Fatal(err)
+	}
+	next := strconv.FormatFloat(number(t, primary.Value.Value)+0.01, 'f', -1, 64)
+	seen := false
+	_, err = p.Registry.PreviewRevision(t.Context(), s.Auditor, registry.Proposal{Full: true, Values: []registry.ProposedValue{
+		{Material: "USGS41", Scale: scaleC, Value: store.Decimal(next), Stated: *primary.Value.Stated}}}, func(a registry.Affected) error {
+		if a.Kind != store.KindValue || a.Code != v.Code {
+			return nil
+		}
+		seen = true
+		// A hundredth of the change itself is far beyond the second order and the change of weights.
+		if a.Why != "" || a.Full == nil || a.Full.Why != "" || a.Shift == 0 || math.Abs(a.Shift-a.Full.Shift) > 0.01*math.Abs(a.Shift) {
+			t.Errorf("predicted %v (%s), concluded again %+v", a.Shift, a.Why, a.Full)
+		}
+		return nil
+	})
+	if err != nil {
+		t.Fatal(err)
+	}
+	if !seen {
+		t.Error("the campaign's value does not rest on USGS41")
 	}
 }
