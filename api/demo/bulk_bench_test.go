@@ -21,14 +21,21 @@ const benchFolder = "DELTAMOOR_BENCH_FOLDER"
 // benchLarge asks for the median laboratory too, which takes an hour to build.
 const benchLarge = "DELTAMOOR_BENCH_LARGE"
 
-// A bulkPlace is a registry of copied chains.
-func bulkPlace(b *testing.B, calibrations, deltas int) (*Place, *Summary) {
+// bulkFolder is where a registry of copied chains is; without a folder to keep
+// it in, one for this run.
+func bulkFolder(b *testing.B, calibrations, deltas int) string {
 	b.Helper()
 	folder := os.Getenv(benchFolder)
 	if folder == "" {
-		folder = b.TempDir()
+		folder = filepath.Join(keptFolder, "bench")
 	}
-	folder = filepath.Join(folder, fmt.Sprintf("bulk-%d-%d", calibrations, deltas))
+	return filepath.Join(folder, fmt.Sprintf("bulk-%d-%d", calibrations, deltas))
+}
+
+// A bulkPlace is a registry of copied chains.
+func bulkPlace(b *testing.B, calibrations, deltas int) (*Place, *Summary) {
+	b.Helper()
+	folder := bulkFolder(b, calibrations, deltas)
 	kept := filepath.Join(folder, "summary.json")
 	text, err := os.ReadFile(kept)
 	built := err == nil
