@@ -215,8 +215,10 @@ type component struct {
 }
 
 // choose estimates τ² on the spread, sets it against the long-term component,
-// and names its group. Cov(τ̂²) = 2/tr(PP) is stored also where τ̂² is 0: a
-// truncated zero is not evidence of none.
+// and names its group. Var(τ̂²) = 2/tr(PP) is stored also where τ̂² is 0, since a
+// truncated zero is not evidence of none: there P is taken at the negative root
+// that the truncation cut off, as what varies is the scatter that was found.
+// For equal sessions that is 2(s²)²/(m − 1) on either side of 0.
 func (at *combiner) choose(s *spread, group string) (component, error) {
 	tau2, ok := estimate(s, at.policy.Estimator)
 	if !ok {
@@ -224,7 +226,11 @@ func (at *combiner) choose(s *spread, group string) (component, error) {
 	}
 	c := component{variance: tau2}
 	if at.policy.Estimator != NoBetween && len(s.z) > 0 {
-		_, pp := s.traces(tau2)
+		at := tau2
+		if at == 0 {
+			at = s.untruncated()
+		}
+		_, pp := s.traces(at)
 		c.group = group
 		c.groups = []uncertain.Group{{ID: group, Variances: []float64{tau2}, Covariance: [][]float64{{2 / pp}}}}
 	}

@@ -117,14 +117,32 @@ func TestSessionEffectsAreSourcesOfTheCampaign(t *testing.T) {
 	near(t, "k", a.Expanded.CoverageFactor, 3.18244630528371, 1e-9) // t 0.975, ν 3: R qt(0.975, 3)
 }
 
-func TestTruncatedZeroKeepsItsDegreesOfFreedom(t *testing.T) {
-	a := analyse(t, Campaign{Assignment: "A", Members: independent(t, []float64{1, 1.001, 0.999, 1}, []float64{0.05, 0.05, 0.05, 0.05})})
+func TestTruncatedZeroKeepsTheVarianceOfTheScatterThatWasFound(t *testing.T) {
+	const u = 0.05
+	of := func(d float64) (*Analysis, float64) {
+		y := []float64{1 + d, 1 - d, 1 + d, 1 - d}
+		return analyse(t, Campaign{Assignment: "A", Members: independent(t, y, []float64{u, u, u, u})}), 4 * d * d / 3
+	}
+	a, s2 := of(0.03)
 	if a.BetweenSession != 0 {
 		t.Fatalf("τ̂ = %g, want 0", a.BetweenSession)
 	}
-	g := a.Groups[0]
-	near(t, "Var(τ̂²)", g.Covariance[0][0], 2*math.Pow(0.05, 4)/3, 1e-13)
-	near(t, "ν", a.Expanded.DegreesOfFreedom, 3, 1e-12)
+	// Equal sessions: the scatter s² on m − 1 = 3 has the variance 2(s²)²/3, and u⁴ = (u²/4)² gives ν = 3(u²/s²)².
+	near(t, "Var(τ̂²)", a.Groups[0].Covariance[0][0], 2*s2*s2/3, 1e-12)
+	near(t, "ν", a.Expanded.DegreesOfFreedom, 3*math.Pow(u*u/s2, 2), 1e-12)
+	// Nothing jumps where the estimate becomes 0: there d² = 3u²/4.
+	edge := u * math.Sqrt(0.75)
+	below, _ := of(edge * (1 - 1e-9))
+	above, _ := of(edge * (1 + 1e-9))
+	if below.BetweenSession != 0 || above.BetweenSession == 0 {
+		t.Fatalf("τ̂ %g and %g about the edge, want 0 and more", below.BetweenSession, above.BetweenSession)
+	}
+	near(t, "U at the edge", below.Expanded.U, above.Expanded.U, 1e-7)
+	near(t, "ν at the edge", above.Expanded.DegreesOfFreedom, 3, 1e-7)
+	// Values that agree exactly leave nothing to estimate: u is that of the sessions.
+	if same, _ := of(0); same.BetweenSession != 0 || same.Expanded.DegreesOfFreedom < 1e6 {
+		t.Errorf("equal values: τ̂ %g, ν %g, want 0 and no bound", same.BetweenSession, same.Expanded.DegreesOfFreedom)
+	}
 }
 
 func TestLongTermComponentIsUsedWhenLarger(t *testing.T) {

@@ -38,9 +38,23 @@ type DecisionInput struct {
 	HomogeneityNot string
 	Stability      *Stability
 	StabilityNot   string
+	// Prior is what holds while the stability study still runs; nil where the
+	// study is complete, or none is needed.
+	Prior *PriorStability
 	// Trend is nil where the stability study has no significant slope.
 	Trend    *TrendAnswer
 	Coverage uncertain.Coverage
+}
+
+// A PriorStability is the uncertainty of stability taken over from elsewhere,
+// such as an alike material, for as long as a lot's own study runs.
+type PriorStability struct {
+	// StandardUncertainty is u_lts (‰) for ShelfLife, in the unit of the study.
+	StandardUncertainty, ShelfLife float64
+	// DegreesOfFreedom of it; 0 where it is known.
+	DegreesOfFreedom float64
+	// Group names its variance.
+	Group string
 }
 
 // A BudgetLine is one line of the budget of an assigned value.
@@ -103,7 +117,7 @@ func Decide(in DecisionInput) (*Decision, error) {
 		return nil, &InputError{Place: "lot", Found: "nothing", Expected: "its code"}
 	case in.Homogeneity == nil && in.HomogeneityNot == "":
 		return nil, &InputError{Place: "homogeneity", Found: "no study", Expected: "a study, or the reason why none is needed"}
-	case in.Stability == nil && in.StabilityNot == "":
+	case in.Stability == nil && in.Prior == nil && in.StabilityNot == "":
 		return nil, &InputError{Place: "stability", Found: "no study", Expected: "a study, or the reason why none is needed"}
 	}
 	c := in.Characterisation
@@ -117,7 +131,7 @@ func Decide(in DecisionInput) (*Decision, error) {
 		d.Groups = joinGroups(d.Groups, []uncertain.Group{h.Group})
 		d.Remarks = append(d.Remarks, h.Remarks...)
 	}
-	if in.Stability != nil {
+	if in.Stability != nil || in.Prior != nil {
 		if err := d.stability(in); err != nil {
 			return nil, err
 		}
@@ -144,9 +158,19 @@ func Decide(in DecisionInput) (*Decision, error) {
 	return d, nil
 }
 
-// stability adds u_lts, for the shelf life that is stated in the end.
+// stability adds u_lts, for the shelf life that is stated in the end: that of
+// the study, or the prior one while the study runs. A slope that is significant
+// already counts either way.
 func (d *Decision) stability(in DecisionInput) error {
 	s := in.Stability
+	if p := in.Prior; p != nil {
+		if !(p.StandardUncertainty >= 0) || !finite(p.StandardUncertainty) || !(p.ShelfLife > 0) || !finite(p.ShelfLife) || !(p.DegreesOfFreedom >= 0) || p.Group == "" {
+			return &InputError{Place: "prior", Found: fmt.Sprintf("u %v for %v, degrees of freedom %v, group %q", p.StandardUncertainty, p.ShelfLife, p.DegreesOfFreedom, p.Group), Expected: "a standard uncertainty for a positive shelf life, in a named group"}
+		}
+		if s == nil {
+			s = &Stability{ShelfLife: p.ShelfLife}
+		}
+	}
 	d.ShelfLife = s.ShelfLife
 	d.Remarks = append(d.Remarks, s.Remarks...)
 	switch t := in.Trend; {
@@ -167,7 +191,12 @@ func (d *Decision) stability(in DecisionInput) error {
 		return &InputError{Place: "trend.change", Found: fmt.Sprintf("%q", t.Change), Expected: "shelf_life, storage or value_model"}
 	}
 	d.StabilityUncertainty = s.SlopeUncertainty * d.ShelfLife
-	group := uncertain.NewGroup(s.Group.ID, float64(d.StabilityUncertainty*d.StabilityUncertainty), float64(s.DegreesOfFreedom))
+	id, nu := s.Group.ID, float64(s.DegreesOfFreedom)
+	if p := in.Prior; p != nil {
+		d.StabilityUncertainty = p.StandardUncertainty * (d.ShelfLife / p.ShelfLife)
+		id, nu = p.Group, orDefault(p.DegreesOfFreedom, math.Inf(1))
+	}
+	group := uncertain.NewGroup(id, float64(d.StabilityUncertainty*d.StabilityUncertainty), nu)
 	source, err := uncertain.New(0, uncertain.Term{Sensitivity: 1, Source: uncertain.Source{
 		ID: "stability:" + in.Lot + "/" + in.StudyVersion, Kind: uncertain.KindStability, U: d.StabilityUncertainty, Group: group.ID, Per: []float64{1},
 	}})

@@ -171,3 +171,35 @@ func TestStepOfATenthPerMilIsDetected(t *testing.T) {
 		t.Errorf("no step is called one in %d of 400 campaigns", k)
 	}
 }
+
+func TestPriorStabilityHoldsWhileTheStudyRuns(t *testing.T) {
+	in, _ := decision(t)
+	in.Stability, in.StabilityNot = nil, ""
+	in.Prior = &PriorStability{StandardUncertainty: 0.03, ShelfLife: 730, DegreesOfFreedom: 12, Group: "stability:L/1/prior"}
+	d, err := Decide(in)
+	if err != nil {
+		t.Fatal(err)
+	}
+	near(t, "u_lts", d.StabilityUncertainty, 0.03, 0)
+	near(t, "shelf life", d.ShelfLife, 730, 0)
+	// u² = u_char² + u_bb² + u_lts² (ISO 33405:2024).
+	c, h := d.CharacterisationUncertainty, d.HomogeneityUncertainty
+	near(t, "u²", d.StandardUncertainty*d.StandardUncertainty, c*c+h*h+0.03*0.03, 1e-12)
+	if !slices.ContainsFunc(d.Groups, func(g uncertain.Group) bool { return g.ID == "stability:L/1/prior" && math.Abs(g.Covariance[0][0]-2*math.Pow(0.03, 4)/12) < 1e-18 }) {
+		t.Errorf("groups %+v: want the prior variance on 12 degrees of freedom", d.Groups)
+	}
+	// A slope that is significant already counts, whatever the prior says.
+	in.Stability = &Stability{Slope: 0.001, SlopeUncertainty: 1e-4, Significant: true, ShelfLife: 730, DegreesOfFreedom: 4}
+	if _, err := Decide(in); err == nil {
+		t.Error("a significant slope passed because there is a prior uncertainty")
+	}
+	in.Trend = &TrendAnswer{Change: ShorterShelfLife, ShelfLife: 365, Reason: "half the time until the study ends"}
+	if d, err = Decide(in); err != nil {
+		t.Fatal(err)
+	}
+	near(t, "u_lts of half the shelf life", d.StabilityUncertainty, 0.015, 1e-15)
+	in.Prior.Group = ""
+	if _, err := Decide(in); err == nil {
+		t.Error("a prior without a group was taken")
+	}
+}

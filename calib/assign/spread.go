@@ -2,6 +2,7 @@ package assign
 
 import (
 	"math"
+	"slices"
 
 	"deltamoor/calib/adjust"
 	"deltamoor/calib/uncertain"
@@ -230,6 +231,27 @@ func (s *spread) qq(t float64) float64 {
 		}
 	}
 	return sum
+}
+
+// untruncated is the root of q(t) = degrees of freedom at or below 0, where the
+// values scatter by less than their own variances: q rises without bound
+// towards minus the least variance. 0 where the scatter is not smaller.
+func (s *spread) untruncated() float64 {
+	low, high, target := -slices.Min(s.variance), 0.0, s.df()
+	if !(s.q(0) < target) || low == 0 {
+		return 0
+	}
+	for {
+		middle := low + float64(0.5*(high-low))
+		if middle <= low || middle >= high {
+			return high
+		}
+		if s.q(middle) > target {
+			low = middle
+		} else {
+			high = middle
+		}
+	}
 }
 
 // square is Σ(x − x̄)², of each block about its own mean.

@@ -223,7 +223,7 @@ func (s StabilityStudy) remark(out *Stability, points []StabilityPoint) {
 		add("unstable", Warning, "The value changes with time (slope %.3g per unit of time, p = %.2g).", out.Slope, out.P)
 	}
 	if !s.Isochronous && out.Sessions == 1 {
-		add("not_isochronous", Warning, "The measurements were not made together, and no session is named: what changed between them looks like instability or hides it.")
+		add("not_isochronous", Warning, "The measurements were not made together: what changed between them looks like instability or hides it.")
 	}
 	low, high := points[0].Time, points[0].Time
 	for _, p := range points {
