@@ -76,6 +76,49 @@ type StudyPlan struct {
 	// the results of the campaign's sessions over time.
 	ShelfLifeDays float64   `json:"shelf_life_days,omitempty"`
 	Days          []float64 `json:"days,omitempty"`
+	// Isochronous says that units stored for different times are measured together.
+	Isochronous bool `json:"isochronous,omitempty"`
+	// Stored says how long units were stored where the value could change; then
+	// their portions are the study, with sessions as blocks. None: the results of
+	// the sessions over time.
+	Stored []StoredUnit `json:"stored,omitempty"`
+	// Prior is the u_lts for ShelfLifeDays that holds while the study runs: until
+	// it spans the last of Days.
+	Prior *Component `json:"prior,omitempty"`
+}
+
+// A StoredUnit is a unit of a stability study with its time of storage.
+type StoredUnit struct {
+	Unit string  `json:"unit"`
+	Days float64 `json:"days"`
+}
+
+// Study is the body of a study of units or of stability whose measurements
+// were not made in sessions of the registry, or not all of them: version 2 and on
+// replace what was stated before. It names its campaign as an input.
+type Study struct {
+	Assignment string `json:"assignment"`
+	Scale      string `json:"scale"`
+	Measurand  string `json:"measurand"`
+	// Of is what it studies: homogeneity or stability.
+	Of          string `json:"of"`
+	Isochronous bool   `json:"isochronous,omitempty"`
+	// Measurements in the order they came.
+	Measurements []StudyMeasurement `json:"measurements"`
+	Upload       *Hash              `json:"upload,omitempty"`
+}
+
+// Form of the body.
+func (Study) Form() string { return "study/1" }
+
+// A StudyMeasurement is one measured test portion.
+type StudyMeasurement struct {
+	Unit    string  `json:"unit"` // as the file names it
+	Value   float64 `json:"value"`
+	Session string  `json:"session,omitempty"` // what was measured together; "" for all
+	Portion float64 `json:"portion_mg,omitempty"`
+	Days    float64 `json:"days,omitempty"`  // of storage
+	Order   float64 `json:"order,omitempty"` // of filling; 0 where unknown
 }
 
 // AssignmentLimits are what the data must satisfy; 0 is not asked for.
@@ -122,6 +165,7 @@ type CampaignResult struct {
 	HomogeneityNot string             `json:"homogeneity_not_needed,omitempty"`
 	Stability      *StabilityResult   `json:"stability,omitempty"`
 	StabilityNot   string             `json:"stability_not_needed,omitempty"`
+	Prior          *PriorStability    `json:"stability_prior,omitempty"`
 	Trend          *TrendAnswer       `json:"trend,omitempty"`
 	Step           *StepResult        `json:"step,omitempty"`
 
@@ -201,6 +245,17 @@ type StabilityResult struct {
 	ResidualSD          float64 `json:"residual_sd"`
 	ShelfLifeDays       float64 `json:"shelf_life_days"`
 	StandardUncertainty float64 `json:"u"`
+	Isochronous         bool    `json:"isochronous,omitempty"`
+	Blocks              int     `json:"blocks,omitempty"` // sessions removed as blocks
+}
+
+// PriorStability is the u_lts that a value took over while its study ran.
+type PriorStability struct {
+	StandardUncertainty float64  `json:"u"`
+	DegreesOfFreedom    *float64 `json:"nu,omitempty"`
+	Evidence            string   `json:"evidence"`
+	SpanDays            float64  `json:"span_days"` // of the study so far
+	PlannedDays         float64  `json:"planned_days"`
 }
 
 // TrendAnswer says what was changed because the value drifts, and why.

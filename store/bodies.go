@@ -104,6 +104,11 @@ type Material struct {
 	Note        string          `json:"note,omitempty"`
 	// Stock says how its units are kept and watched; nil asks for nothing.
 	Stock *StockRule `json:"stock,omitempty"`
+	// Succeeds is the code of the material that this one follows, "" for none. It
+	// is no anchor before a campaign measured both side by side, or OverlapWaiver
+	// says why it may be one all the same.
+	Succeeds      string `json:"succeeds,omitempty"`
+	OverlapWaiver string `json:"overlap_waiver,omitempty"`
 }
 
 // A StockRule limits the units of a material and says when it is looked at; 0 asks for nothing.
@@ -232,6 +237,20 @@ type Unit struct {
 	// SuspectSince is the last moment at which it was known to be good, for a unit
 	// that is suspect or quarantined: what used it later is in doubt.
 	SuspectSince *Instant `json:"suspect_since,omitempty"`
+	// Container is what it is: bottle vial ampoule cylinder; "" where not said.
+	Container string `json:"container,omitempty"`
+	// At is when what this version says happened, where that was before it was
+	// recorded; Taken is what was taken from it then.
+	At    *Instant `json:"at,omitempty"`
+	Taken *Amount  `json:"taken,omitempty"`
+	// Excursions are the times it was not stored as it should be, oldest first.
+	Excursions []Excursion `json:"excursions,omitempty"`
+}
+
+// An Excursion is a time at which a unit was not stored as it should be.
+type Excursion struct {
+	At   Instant `json:"at"`
+	What string  `json:"what"`
 }
 
 // Form of the body.

@@ -73,6 +73,8 @@ func bodies(t *testing.T) map[string]store.Draft {
 			Drafted: &store.RevisionSet{Calibrations: 2, Values: 1, Finals: 3, Hash: hash, Untold: []store.UntoldVersion{{Ref: ref(lab, store.KindCalibration, "C1"), Why: "one anchor is left"}}}}},
 		{Kind: store.KindClosing, Code: "X1/R1", Value: store.Closing{Action: "re-issue", Lines: 2, Reissued: "R2"}},
 		assignmentDraft(ref(lab, store.KindMaterial, "GLY")),
+		{Kind: store.KindStudy, Code: "A1/d13C-VPDB/total/stability", Value: store.Study{Assignment: "A1", Scale: "d13C-VPDB", Measurand: "total", Of: "stability", Isochronous: true,
+			Measurements: []store.StudyMeasurement{{Unit: "vial 3", Value: -33.1, Session: "May", Portion: 0.5, Days: 180}}, Upload: &hash}},
 		{Kind: store.KindDocument, Code: hash.String(), Value: store.Upload{Name: "run.csv", MediaType: "text/csv", Size: 12}},
 	}
 	byForm := make(map[string]store.Draft)

@@ -30,6 +30,7 @@ const (
 	KindOutcome     Kind = "outcome"
 	KindCalibration Kind = "calibration"
 	KindAssignment  Kind = "assignment"
+	KindStudy       Kind = "study"
 	KindValueSet    Kind = "valueset"
 	KindFinal       Kind = "final"
 	KindReport      Kind = "report"

@@ -72,6 +72,7 @@ func assemble(ctx context.Context, v *store.View, laboratory string, q FitReques
 		return a, nil, Refuse(Conflict, "session %s has no start: which assigned values held cannot be said", store.FormatCode(a.session.Code))
 	}
 	held := store.Moment{ValidAt: a.session.Value.StartedAt}
+	var waivers []store.Input
 	var c complaints
 	for _, material := range a.materials(calib.Anchor) {
 		value, err := valueInForce(ctx, v, laboratory, material, a.spec.Scale, measurandOf(a.spec), held)
@@ -88,9 +89,20 @@ func assemble(ctx context.Context, v *store.View, laboratory string, q FitReques
 		case value.Value.StandardUncertainty == 0 && !value.Value.Exact && value.Value.Sources == nil:
 			c.add(place, "a value that states no uncertainty", "one with an uncertainty: it cannot pin a line without")
 		default:
+			missing, waiver, err := overlap(ctx, v, value.Version)
+			if err != nil {
+				return a, nil, err
+			}
+			if missing != "" {
+				c.add(place, missing, "such a campaign, or the material's overlap_waiver that says why it may be an anchor without one")
+				continue
+			}
 			a.anchors = append(a.anchors, value.Version)
 			inputs = append(inputs, store.Input{Part: "anchor", Ref: value.Ref})
 			a.flags = append(a.flags, valueFlags(a, value.Version)...)
+			if waiver != nil {
+				waivers = append(waivers, store.Input{Part: partWaiver, Ref: *waiver})
+			}
 		}
 	}
 	if err := Complain("this session cannot be fitted", c); err != nil {
@@ -112,6 +124,12 @@ func assemble(ctx context.Context, v *store.View, laboratory string, q FitReques
 		return a, nil, err
 	}
 	inputs = append(inputs, factors...)
+	for _, in := range waivers {
+		if err := a.waive(ctx, v, in.Ref); err != nil {
+			return a, nil, err
+		}
+	}
+	inputs = append(inputs, waivers...)
 	units, err := a.units(ctx, v, laboratory)
 	if err != nil {
 		return a, nil, err
@@ -194,10 +212,15 @@ func assembleStored(ctx context.Context, v source, c store.Version[store.Calibra
 		a.flags = append(a.flags, valueFlags(a, value)...)
 	}
 	for _, in := range c.Inputs {
-		if in.Part == "unit" {
-			if err := a.flagUnit(ctx, v, in.Ref); err != nil {
-				return a, err
-			}
+		var err error
+		switch in.Part {
+		case partWaiver:
+			err = a.waive(ctx, v, in.Ref)
+		case "unit":
+			err = a.flagUnit(ctx, v, in.Ref)
+		}
+		if err != nil {
+			return a, err
 		}
 	}
 	return a, a.loadReadings(ctx, v, c.Laboratory)

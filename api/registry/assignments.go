@@ -85,7 +85,7 @@ func completePlan(ctx context.Context, v *store.View, laboratory string, plan st
 	if err := Complain("this campaign cannot be planned", c); err != nil {
 		return plan, nil, err
 	}
-	inputs, key, err := candidateInputs(ctx, v, laboratory, plan)
+	inputs, key, err := candidateInputs(ctx, v, laboratory, &plan)
 	if err != nil {
 		return plan, nil, err
 	}
@@ -147,8 +147,9 @@ func completePlan(ctx context.Context, v *store.View, laboratory string, plan st
 	return plan, inputs, Complain("this campaign cannot be planned", c)
 }
 
-// candidateInputs finds the candidate, its predecessor and the units drawn.
-func candidateInputs(ctx context.Context, v *store.View, laboratory string, plan store.Assignment) ([]store.Input, store.Key, error) {
+// candidateInputs finds the candidate, its predecessor and the units drawn. A
+// material that follows another has that for its predecessor.
+func candidateInputs(ctx context.Context, v *store.View, laboratory string, plan *store.Assignment) ([]store.Input, store.Key, error) {
 	key, err := findMaterial(ctx, v, laboratory, plan.Material)
 	if err != nil {
 		return nil, key, placed(err, "body.material", plan.Material)
@@ -158,6 +159,13 @@ func candidateInputs(ctx context.Context, v *store.View, laboratory string, plan
 		return nil, key, missing(err, key)
 	}
 	inputs := []store.Input{{Part: "material", Ref: m.Ref}}
+	candidate, err := store.Decode[store.Material](m)
+	if err != nil {
+		return nil, key, err
+	}
+	if plan.Predecessor == "" && candidate.Value.OverlapWaiver == "" {
+		plan.Predecessor = candidate.Value.Succeeds
+	}
 	if plan.Predecessor != "" {
 		before, err := findMaterial(ctx, v, laboratory, plan.Predecessor)
 		if err != nil {
@@ -172,13 +180,26 @@ func candidateInputs(ctx context.Context, v *store.View, laboratory string, plan
 		}
 		inputs = append(inputs, store.Input{Part: "predecessor", Ref: p.Ref})
 	}
+	type named struct{ place, code string }
+	var units []named
 	for i, code := range plan.Units {
+		units = append(units, named{fmt.Sprintf("body.units[%d]", i), code})
+	}
+	for i, q := range plan.Quantities {
+		for j, s := range q.Stability.Stored {
+			if !slices.ContainsFunc(units, func(n named) bool { return n.code == s.Unit }) {
+				units = append(units, named{fmt.Sprintf("body.quantities[%d].stability.stored[%d].unit", i, j), s.Unit})
+			}
+		}
+	}
+	for _, n := range units {
+		place, code := n.place, n.code
 		unit, err := newest[store.Unit](ctx, v, store.Key{Laboratory: laboratory, Kind: store.KindUnit, Code: code})
 		if err != nil {
-			return nil, key, placed(err, fmt.Sprintf("body.units[%d]", i), code)
+			return nil, key, placed(err, place, code)
 		}
 		if unit.Value.Material != key.Code {
-			return nil, key, Complain("this campaign cannot be planned", []Complaint{{Place: fmt.Sprintf("body.units[%d]", i), Found: "a unit of " + unit.Value.Material, Expected: "a unit of " + key.Code}})
+			return nil, key, Complain("this campaign cannot be planned", []Complaint{{Place: place, Found: "a unit of " + unit.Value.Material, Expected: "a unit of " + key.Code}})
 		}
 		inputs = append(inputs, store.Input{Part: "unit", Ref: unit.Ref})
 	}
@@ -231,6 +252,26 @@ func checkQuantityPlan(c *complaints, place string, q *store.AssignmentQuantity)
 	if q.Stability.NotNeeded == "" && !(q.Stability.ShelfLifeDays > 0) {
 		c.add(place+".stability.shelf_life_days", fmt.Sprint(q.Stability.ShelfLifeDays), "the shelf life to be stated, or why no study is needed (not_needed)")
 	}
+	if s := q.Stability; len(s.Stored) > MaxPlanned {
+		c.add(place+".stability.stored", fmt.Sprint(len(s.Stored)), "at most %d units", MaxPlanned)
+	}
+	for i, s := range q.Stability.Stored {
+		if !(s.Days >= 0) || math.IsInf(s.Days, 0) {
+			c.add(fmt.Sprintf("%s.stability.stored[%d].days", place, i), fmt.Sprint(s.Days), "days of storage, 0 or more")
+		}
+	}
+	if p := q.Stability.Prior; p != nil {
+		if !(p.StandardUncertainty > 0) || math.IsInf(p.StandardUncertainty, 0) {
+			c.add(place+".stability.prior.u", fmt.Sprint(p.StandardUncertainty), "u_lts for the shelf life, above 0")
+		}
+		if p.DegreesOfFreedom != nil && !(*p.DegreesOfFreedom >= 1) {
+			c.add(place+".stability.prior.nu", fmt.Sprint(*p.DegreesOfFreedom), "degrees of freedom of 1 or more, or nothing when u is known")
+		}
+		c.text(place+".stability.prior.evidence", p.Evidence, 1000)
+		if len(q.Stability.Days) == 0 && len(q.Stability.Stored) == 0 {
+			c.add(place+".stability.days", "nothing", "the days of the study, so that it can be said when the prior uncertainty ends")
+		}
+	}
 	if len(q.Stability.Days) > MaxPlanned || q.Homogeneity.Units > MaxPlanned || q.Homogeneity.Measurements > MaxPlanned {
 		c.add(place, "a plan beyond bounds", "at most %d units, measurements and days", MaxPlanned)
 	}
@@ -249,89 +290,6 @@ func policyOf(q store.AssignmentQuantity) assign.Policy {
 		p.LongTerm = &g
 	}
 	return p
-}
-
-// A PlanProspect is what a plan can be expected to give for one value, and what
-// each change of it buys.
-type PlanProspect struct {
-	Scale, Measurand string
-	Prospect         assign.Prospect
-	// Options are changes of the plan, what lowers U most first.
-	Options []assign.Option
-}
-
-// Prospects evaluates a plan that is stored, by its planning values and the
-// anchors' values in force now.
-func (r *Registry) Prospects(ctx context.Context, actor Actor, code string) ([]PlanProspect, error) {
-	item, err := One[store.Assignment](ctx, r, actor, store.KindAssignment, code, 0, store.Moment{})
-	if err != nil {
-		return nil, err
-	}
-	return r.ProspectsOf(ctx, actor, item.Value)
-}
-
-// ProspectsOf evaluates a plan without storing anything.
-func (r *Registry) ProspectsOf(ctx context.Context, actor Actor, plan store.Assignment) ([]PlanProspect, error) {
-	var out []PlanProspect
-	err := r.read(ctx, actor, func(ctx context.Context, v *store.View) error {
-		out = nil
-		body, _, err := completePlan(ctx, v, actor.Laboratory, plan)
-		if err != nil {
-			return err
-		}
-		for _, q := range body.Quantities {
-			p, err := engineerPlan(ctx, v, actor.Laboratory, body, q)
-			if err != nil {
-				return err
-			}
-			prospect, err := assign.Evaluate(p)
-			if err != nil {
-				return Refuse(Invalid, "the plan for %s cannot be evaluated: %v", q.Scale, err)
-			}
-			options, err := assign.Options(p)
-			if err != nil {
-				return Refuse(Invalid, "changes of the plan for %s cannot be evaluated: %v", q.Scale, err)
-			}
-			out = append(out, PlanProspect{Scale: q.Scale, Measurand: q.Measurand, Prospect: *prospect, Options: options})
-		}
-		return nil
-	})
-	return out, err
-}
-
-func engineerPlan(ctx context.Context, v *store.View, laboratory string, plan store.Assignment, q store.AssignmentQuantity) (assign.Plan, error) {
-	policy := policyOf(q)
-	p := assign.Plan{Candidate: q.Planning.Value, Sessions: plan.Sessions, Replicates: plan.Replicates, AnchorReplicates: q.Planning.AnchorReplicates,
-		Repeatability: q.Planning.Repeatability, BetweenSession: q.Planning.BetweenSession, LongTerm: policy.LongTerm, BetweenUnit: q.Planning.BetweenUnits, Policy: policy}
-	if q.Homogeneity.NotNeeded == "" {
-		p.Units, p.UnitMeasurements = q.Homogeneity.Units, q.Homogeneity.Measurements
-	}
-	if q.Stability.NotNeeded == "" {
-		p.StabilityTimes, p.StabilityMeasurements, p.ShelfLife = q.Stability.Days, 1, q.Stability.ShelfLifeDays
-	}
-	groups := map[string]bool{}
-	for i, material := range slices.Concat(q.Anchors, q.Offered) {
-		value, err := valueInForce(ctx, v, laboratory, material, q.Scale, q.Measurand, store.Moment{})
-		if err != nil {
-			return p, err
-		}
-		n, gs, err := numberOf(value.Version)
-		if err != nil {
-			return p, err
-		}
-		for _, g := range gs {
-			if !groups[g.ID] {
-				groups[g.ID] = true
-				p.Groups = append(p.Groups, g)
-			}
-		}
-		if i < len(q.Anchors) {
-			p.Anchors = append(p.Anchors, assign.PlannedAnchor{Name: material, Value: n})
-		} else {
-			p.Offered = append(p.Offered, assign.PlannedAnchor{Name: material, Value: n})
-		}
-	}
-	return p, nil
 }
 
 // quantityOf picks a value of a plan by scale and measurand.

@@ -21,6 +21,7 @@ type campaignData struct {
 	overlap     []member // the predecessor in the same sessions
 	predecessor *store.Version[store.Value]
 	units       map[string]store.Unit
+	studies     map[string]store.Version[store.Study] // by what they study
 	validFrom   *store.Instant
 
 	trend        *store.TrendAnswer
@@ -50,16 +51,17 @@ func (d campaignData) value(ctx context.Context, v source) (store.Value, error) 
 	in := assign.DecisionInput{Lot: body.Material, StudyVersion: d.plan.Code, Characterisation: analysis,
 		HomogeneityNot: out.HomogeneityNot, StabilityNot: out.StabilityNot, Coverage: policyOf(d.quantity).Coverage}
 	if out.HomogeneityNot == "" {
-		if in.Homogeneity, err = homogeneityOf(d.plan, d.quantity, ws, d.units); err != nil {
+		if in.Homogeneity, err = d.homogeneity(ws); err != nil {
 			return body, d.refuse("the study of the units cannot be evaluated", err)
 		}
 	}
 	span := 0.0
 	if out.StabilityNot == "" {
-		if in.Stability, span, err = stabilityOf(d.plan, d.quantity, ws); err != nil {
+		if in.Stability, span, err = d.stability(ws); err != nil {
 			return body, d.refuse("the study over time cannot be evaluated", err)
 		}
-		if t := d.trend; t != nil && in.Stability.Significant {
+		in.Prior, out.Prior = d.prior(span)
+		if t := d.trend; t != nil && in.Stability != nil && in.Stability.Significant {
 			in.Trend = &assign.TrendAnswer{Change: assign.Change(t.Change), ShelfLife: t.ShelfLifeDays, Reason: t.Reason}
 			out.Trend = t
 		}
@@ -108,7 +110,15 @@ func (d campaignData) fill(body *store.Value, out *store.CampaignResult, a *assi
 		nu := float64(s.DegreesOfFreedom)
 		body.ULongTerm = &store.ValueComponent{StandardUncertainty: dec.StabilityUncertainty, DegreesOfFreedom: &nu, Group: s.Group.ID}
 		out.Stability = &store.StabilityResult{Points: s.DegreesOfFreedom + 1 + s.Sessions, Slope: s.Slope, USlope: s.SlopeUncertainty, DegreesOfFreedom: s.DegreesOfFreedom, P: s.P,
-			Significant: s.Significant, SpanDays: span, ResidualSD: s.ResidualStandardDeviation, ShelfLifeDays: s.ShelfLife, StandardUncertainty: s.StandardUncertainty}
+			Significant: s.Significant, SpanDays: span, ResidualSD: s.ResidualStandardDeviation, ShelfLifeDays: s.ShelfLife, StandardUncertainty: s.StandardUncertainty,
+			Isochronous: d.isochronous()}
+		if s.Sessions > 1 {
+			out.Stability.Blocks = s.Sessions
+		}
+	}
+	if p := in.Prior; p != nil {
+		body.ULongTerm = &store.ValueComponent{StandardUncertainty: dec.StabilityUncertainty, DegreesOfFreedom: out.Prior.DegreesOfFreedom, Group: p.Group}
+		used[p.Group] = true
 	}
 	for _, g := range dec.Groups {
 		if used[g.ID] {
@@ -259,7 +269,7 @@ func (d campaignData) checks(out *store.CampaignResult, ws []witness) []store.Ca
 
 // againCampaign computes a campaign's value again from the inputs it names.
 func againCampaign(ctx context.Context, v source, val store.Version[store.Value]) (store.Value, []member, error) {
-	d := campaignData{units: map[string]store.Unit{}, validFrom: val.ValidFrom, note: val.Value.Note,
+	d := campaignData{units: map[string]store.Unit{}, studies: map[string]store.Version[store.Study]{}, validFrom: val.ValidFrom, note: val.Value.Note,
 		trend: val.Value.Campaign.Trend, deviation: val.Value.Campaign.Deviation, circular: val.Value.Campaign.Circular}
 	if s := val.Value.Campaign.Step; s != nil {
 		d.stepDecision = s.Decision
@@ -277,6 +287,10 @@ func againCampaign(ctx context.Context, v source, val store.Version[store.Value]
 			var u store.Version[store.Unit]
 			u, err = decodeVersion[store.Unit](ctx, v, in.Ref)
 			d.units[u.Code] = u.Value
+		case partStudy:
+			var s store.Version[store.Study]
+			s, err = decodeVersion[store.Study](ctx, v, in.Ref)
+			d.studies[s.Value.Of] = s
 		}
 		if err != nil {
 			return store.Value{}, nil, err

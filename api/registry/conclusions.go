@@ -70,6 +70,7 @@ func (r *Registry) ConcludeAssignment(ctx context.Context, actor Actor, code str
 			inputs = append(inputs, store.Input{Part: "predecessor", Ref: d.predecessor.Ref})
 		}
 		inputs = append(inputs, g.unitRefs...)
+		inputs = append(inputs, g.studyRefs...)
 		for _, m := range d.members {
 			inputs = append(inputs, store.Input{Part: "member", Ref: m.calibration.Ref}, store.Input{Part: "outcome", Ref: m.outcome})
 		}
@@ -88,6 +89,8 @@ type gathered struct {
 	data     campaignData
 	item     Item[store.Assignment]
 	unitRefs []store.Input
+	// studyRefs are the studies that were stated for the campaign.
+	studyRefs []store.Input
 	// unready says why further results do not count.
 	unready []string
 	// direct are the paths by which the candidate anchors its own calibrations.
@@ -99,7 +102,7 @@ type gathered struct {
 // gather finds the members of a campaign: accepted, approved results of the
 // candidate, by the plan's methods, in sessions that began after its approval.
 func gather(ctx context.Context, v *store.View, laboratory, code, scale, measurand string) (gathered, error) {
-	g := gathered{data: campaignData{units: map[string]store.Unit{}}}
+	g := gathered{data: campaignData{units: map[string]store.Unit{}, studies: map[string]store.Version[store.Study]{}}}
 	key := store.Key{Laboratory: laboratory, Kind: store.KindAssignment, Code: code}
 	raw, state, err := v.InForce(ctx, key, store.Moment{})
 	if ignoreNotFound(err) != nil {
@@ -167,6 +170,9 @@ func gather(ctx context.Context, v *store.View, laboratory, code, scale, measura
 		}
 	}
 	if err := g.loadUnits(ctx, v, laboratory); err != nil {
+		return g, err
+	}
+	if err := g.loadStudies(ctx, v, laboratory); err != nil {
 		return g, err
 	}
 	return g, g.circularity(ctx, v)

@@ -10,7 +10,8 @@ import (
 
 // A DueItem is something that has to be looked at by a day.
 type DueItem struct {
-	// What: expiry, recheck, successor, opened_too_often, open_too_long, in_doubt.
+	// What: expiry, recheck, suspect, successor, opened_too_often, open_too_long,
+	// storage_excursion, in_doubt.
 	What     string
 	Material string
 	Code     string // of the value or unit concerned
@@ -97,23 +98,50 @@ func dueOf(ctx context.Context, v *store.View, laboratory string, key store.Key,
 			key.Code, f.Earliest.Time().Format("2006-01-02"), f.RunsOut.Time().Format("2006-01-02"), rule.LeadDays, begin.Time().Format("2006-01-02"))
 	}
 	if rule.RecheckDays > 0 {
-		last := s.Material.RecordedAt
-		for after := ""; ; {
-			rows, next, err := v.Results(ctx, store.ResultQuery{Laboratory: laboratory, Subject: key.Code, After: after, Limit: MaxPage})
-			if err != nil {
-				return err
-			}
-			for _, row := range rows {
-				if row.At != nil {
-					last = max(last, *row.At)
-				}
-			}
-			if after = next; after == "" {
-				break
-			}
+		return recheckOf(ctx, v, laboratory, s.Material, now, add)
+	}
+	return nil
+}
+
+// recheckOf tells when the values of a material are to be checked, and what the
+// checks so far propose.
+func recheckOf(ctx context.Context, v *store.View, laboratory string, m Item[store.Material], now store.Instant, add func(what, material, code string, at store.Instant, format string, args ...any)) error {
+	rule := m.Value.Stock
+	raws, _, err := v.List(ctx, store.ListQuery{Laboratory: laboratory, Kind: store.KindValue, Prefix: m.Code + "/", Limit: MaxPage})
+	if err != nil {
+		return err
+	}
+	valued := false
+	for _, raw := range raws {
+		if raw.State == store.Withdrawn {
+			continue
 		}
-		at := last + store.Instant(rule.RecheckDays*microsPerDay)
-		add("recheck", key.Code, key.Code, at, "%s was last measured on %s and is to be checked every %g days.", key.Code, last.Time().Format("2006-01-02"), rule.RecheckDays)
+		it, err := item[store.Value](ctx, v, raw.Raw, store.Moment{})
+		if err != nil {
+			return err
+		}
+		mon, err := monitor(ctx, v, laboratory, m, it, now)
+		if err != nil {
+			return err
+		}
+		valued = true
+		if mon.Next != nil {
+			sentence := "%s on %s is to be checked every %g days"
+			if n := len(mon.Points); n > 0 {
+				sentence += "; it was last measured on " + mon.Points[n-1].At.Time().Format("2006-01-02")
+			}
+			if mon.Overdue {
+				sentence += "; that is overdue"
+			}
+			add("recheck", m.Code, it.Code, *mon.Next, sentence+".", m.Code, it.Value.Scale, rule.RecheckDays)
+		}
+		if mon.Proposal != "" {
+			add("suspect", m.Code, it.Code, now, "%s.", mon.Proposal)
+		}
+	}
+	if !valued {
+		at := m.RecordedAt + store.Instant(rule.RecheckDays*microsPerDay)
+		add("recheck", m.Code, m.Code, at, "%s is to be checked every %g days and has no value yet.", m.Code, rule.RecheckDays)
 	}
 	return nil
 }

@@ -2,6 +2,7 @@ package registry
 
 import (
 	"context"
+	"encoding/json"
 	"fmt"
 	"slices"
 	"strings"
@@ -61,6 +62,7 @@ func unitPer(b *store.ValueComponent) []float64 {
 type portion struct {
 	unit  string
 	value float64
+	mass  float64 // mg, as the readings say; 0 where they do not
 }
 
 // A witness is one session's evidence for the value of a material.
@@ -86,7 +88,7 @@ func witnessOf(ctx context.Context, v source, m member) (witness, error) {
 		return w, fmt.Errorf("%s: %w", m.calibration.Ref, err)
 	}
 	res := m.calibration.Value.Results[m.line]
-	own := map[string]string{} // unit by the portion's name
+	own := map[string]portion{} // by the portion's name
 	a.readings = slices.Clone(a.readings)
 	for i, rd := range a.readings {
 		if rd.Material != res.Subject || rd.Role != res.Role {
@@ -96,7 +98,12 @@ func witnessOf(ctx context.Context, v source, m member) (witness, error) {
 		if rd.Preparation == "" && rd.Analysis == "" {
 			name = strings.Join([]string{rd.Material, rd.Unit, fmt.Sprint(rd.Number)}, "\x1f")
 		}
-		own[name] = rd.Unit
+		p := own[name]
+		p.unit = rd.Unit
+		if x := amountOf(rd); x > p.mass {
+			p.mass = x
+		}
+		own[name] = p
 		a.readings[i].Material = name
 	}
 	a.controls = nil
@@ -105,8 +112,9 @@ func witnessOf(ctx context.Context, v source, m member) (witness, error) {
 		return w, err
 	}
 	for _, s := range r.Subjects {
-		if unit, ok := own[s.Subject]; ok {
-			w.portions = append(w.portions, portion{unit, s.Value})
+		if p, ok := own[s.Subject]; ok {
+			p.value = s.Value
+			w.portions = append(w.portions, p)
 		}
 	}
 	return w, nil
@@ -155,54 +163,18 @@ func campaignOf(code string, q store.AssignmentQuantity, ws []witness) assign.Ca
 	return c
 }
 
-// homogeneityOf is the study of the units that the readings name. Readings
-// without a unit tell nothing about units and are left out of it.
-func homogeneityOf(plan store.Version[store.Assignment], q store.AssignmentQuantity, ws []witness, units map[string]store.Unit) (*assign.Homogeneity, error) {
-	study := assign.HomogeneityStudy{Group: "homogeneity:" + plan.Value.Material + "/" + plan.Code, Level: q.Level}
-	at := map[string]int{}
-	for _, w := range ws {
-		for _, p := range w.portions {
-			if p.unit == "" {
-				continue
-			}
-			i, ok := at[p.unit]
-			if !ok {
-				i = len(study.Units)
-				at[p.unit] = i
-				u := assign.Unit{Code: p.unit}
-				if order := units[p.unit].FillingOrder; order > 0 {
-					x := float64(order)
-					u.FillingOrder = &x
-				}
-				study.Units = append(study.Units, u)
-			}
-			study.Units[i].Measurements = append(study.Units[i].Measurements, assign.Measurement{Value: p.value, Session: w.session()})
-		}
+// amountOf is the mass of a reading's test portion in mg; 0 where it is not said.
+func amountOf(rd store.Reading) float64 {
+	if rd.Extra == "" {
+		return 0
 	}
-	return assign.AnalyseHomogeneity(study)
-}
-
-// stabilityOf follows the sessions' results over time, in days from the first.
-// Each session gives one point, so that what differs between sessions is in
-// the scatter about the line.
-func stabilityOf(plan store.Version[store.Assignment], q store.AssignmentQuantity, ws []witness) (*assign.Stability, float64, error) {
-	study := assign.StabilityStudy{Group: "stability:" + plan.Value.Material + "/" + plan.Code, ShelfLife: q.Stability.ShelfLifeDays, Level: q.Level}
-	first, last := store.Instant(0), store.Instant(0)
-	for _, w := range ws {
-		if at := w.calibration.Value.StartedAt; at != nil {
-			if first == 0 || *at < first {
-				first = *at
-			}
-			last = max(last, *at)
-		}
+	var extra struct {
+		Amount float64 `json:"amount"`
 	}
-	for _, w := range ws {
-		if at := w.calibration.Value.StartedAt; at != nil {
-			study.Points = append(study.Points, assign.StabilityPoint{Time: daysBetween(first, *at), Value: w.number.Value})
-		}
+	if json.Unmarshal([]byte(rd.Extra), &extra) != nil || !(extra.Amount > 0) {
+		return 0
 	}
-	s, err := assign.AnalyseStability(study)
-	return s, daysBetween(first, last), err
+	return extra.Amount
 }
 
 func daysBetween(a, b store.Instant) float64 { return float64(b-a) / 86400e6 }

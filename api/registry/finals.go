@@ -120,41 +120,14 @@ func acceptedResults(ctx context.Context, v *store.View, laboratory, subject, sc
 				continue
 			}
 			seen[row.Calibration] = true
-			key := store.Key{Laboratory: laboratory, Kind: store.KindCalibration, Code: row.Calibration}
-			raw, state, err := v.InForce(ctx, key, store.Moment{})
-			if ignoreNotFound(err) != nil {
-				return nil, nil, err
-			}
-			if err != nil || state != store.Approved {
-				unready = append(unready, fmt.Sprintf("calibration %s is not approved", store.FormatCode(row.Calibration)))
-				continue
-			}
-			c, err := store.Decode[store.Calibration](raw)
+			more, why, err := acceptedIn(ctx, v, laboratory, row.Calibration, subject)
 			if err != nil {
 				return nil, nil, err
 			}
-			outcome, err := newest[store.Outcome](ctx, v, store.Key{Laboratory: laboratory, Kind: store.KindOutcome, Code: OutcomeCode(c.Value.Session, c.Value.Quantity)})
-			if ignoreNotFound(err) != nil {
-				return nil, nil, err
+			if why != "" {
+				unready = append(unready, why)
 			}
-			if err != nil {
-				unready = append(unready, fmt.Sprintf("the outcome of session %s for %s is not stated", store.FormatCode(c.Value.Session), c.Value.Quantity))
-				continue
-			}
-			if outcome.Value.Outcome == "rejected" {
-				unready = append(unready, fmt.Sprintf("session %s was rejected for %s", store.FormatCode(c.Value.Session), c.Value.Quantity))
-				continue
-			}
-			for i, res := range c.Value.Results {
-				if res.Subject != subject {
-					continue
-				}
-				if outcome.Value.Outcome == "in part" && !within(readingsBehind(c.Value, res.Readings), outcome.Value.From, outcome.Value.To) {
-					unready = append(unready, fmt.Sprintf("session %s is accepted from reading %d to %d only", store.FormatCode(c.Value.Session), outcome.Value.From, outcome.Value.To))
-					continue
-				}
-				members = append(members, member{calibration: c, line: i, outcome: outcome.Ref})
-			}
+			members = append(members, more...)
 		}
 		if after = next; after == "" {
 			return members, unready, nil
@@ -177,6 +150,43 @@ func readingsBehind(c store.Calibration, heads []int) []int {
 		}
 	}
 	return out
+}
+
+// acceptedIn finds the results of a subject in one calibration that may enter a
+// combined value, and says why others may not; "" where all may.
+func acceptedIn(ctx context.Context, v *store.View, laboratory, calibration, subject string) (members []member, unready string, err error) {
+	raw, state, err := v.InForce(ctx, store.Key{Laboratory: laboratory, Kind: store.KindCalibration, Code: calibration}, store.Moment{})
+	if ignoreNotFound(err) != nil {
+		return nil, "", err
+	}
+	if err != nil || state != store.Approved {
+		return nil, fmt.Sprintf("calibration %s is not approved", store.FormatCode(calibration)), nil
+	}
+	c, err := store.Decode[store.Calibration](raw)
+	if err != nil {
+		return nil, "", err
+	}
+	outcome, err := newest[store.Outcome](ctx, v, store.Key{Laboratory: laboratory, Kind: store.KindOutcome, Code: OutcomeCode(c.Value.Session, c.Value.Quantity)})
+	if ignoreNotFound(err) != nil {
+		return nil, "", err
+	}
+	if err != nil {
+		return nil, fmt.Sprintf("the outcome of session %s for %s is not stated", store.FormatCode(c.Value.Session), c.Value.Quantity), nil
+	}
+	if outcome.Value.Outcome == "rejected" {
+		return nil, fmt.Sprintf("session %s was rejected for %s", store.FormatCode(c.Value.Session), c.Value.Quantity), nil
+	}
+	for i, res := range c.Value.Results {
+		if res.Subject != subject {
+			continue
+		}
+		if outcome.Value.Outcome == "in part" && !within(readingsBehind(c.Value, res.Readings), outcome.Value.From, outcome.Value.To) {
+			unready = fmt.Sprintf("session %s is accepted from reading %d to %d only", store.FormatCode(c.Value.Session), outcome.Value.From, outcome.Value.To)
+			continue
+		}
+		members = append(members, member{calibration: c, line: i, outcome: outcome.Ref})
+	}
+	return members, unready, nil
 }
 
 func within(readings []int, from, to int) bool {

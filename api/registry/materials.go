@@ -15,7 +15,9 @@ import (
 // MaterialKinds are what a material can be.
 var MaterialKinds = []string{"defining", "international", "working", "gas", "control"}
 
-var hazardPattern = regexp.MustCompile(`^(H[2-4][0-9]{2}[A-Za-z]{0,2}|EUH[0-9]{3}[A-Z]?)$`)
+// hazardPattern holds the codes of hazard statements and of precautionary ones,
+// which are combined by a plus sign.
+var hazardPattern = regexp.MustCompile(`^(H[2-4][0-9]{2}[A-Za-z]{0,2}(\+H[2-4][0-9]{2}){0,2}|EUH[0-9]{3}[A-Z]?|P[1-5][0-9]{2}(\+P[1-5][0-9]{2}){0,3})$`)
 
 var roleWords = []string{string(calib.Anchor), string(calib.Control), string(calib.Monitor), string(calib.Blank), string(calib.Gas), string(calib.Conditioning), string(calib.Sample)}
 
@@ -28,7 +30,7 @@ func (r *Registry) StateMaterial(ctx context.Context, actor Actor, code string, 
 	c.oneOf("body.kind", m.Kind, MaterialKinds...)
 	for i, h := range m.Hazards {
 		if !hazardPattern.MatchString(h) {
-			c.add(fmt.Sprintf("body.hazards[%d]", i), quote(h), "a GHS hazard statement code such as H220")
+			c.add(fmt.Sprintf("body.hazards[%d]", i), quote(h), "the code of a GHS hazard statement such as H220, or of a precautionary one such as P280")
 		}
 	}
 	for i, roles := range m.Roles {
@@ -48,6 +50,9 @@ func (r *Registry) StateMaterial(ctx context.Context, actor Actor, code string, 
 			if err := codeFree(ctx, &tx.View, key); err != nil {
 				return err
 			}
+		}
+		if err := checkSuccession(ctx, &tx.View, key, &m); err != nil {
+			return err
 		}
 		_, err := appendVersion(ctx, tx, actor, key, e, nil, m)
 		return err
@@ -184,6 +189,7 @@ func (r *Registry) AddUnits(ctx context.Context, actor Actor, u store.Unit, coun
 			c.add("body.content.value", string(u.Content.Value), "a content of 0 or more")
 		}
 	}
+	checkContainer(&c, "body.container", u.Container)
 	if count < 1 || count > MaxUnits {
 		c.add("body.count", fmt.Sprint(count), "1 to %d units in one act", MaxUnits)
 	}
@@ -235,46 +241,7 @@ func (r *Registry) AddUnits(ctx context.Context, actor Actor, u store.Unit, coun
 
 // ChangeUnit states a further version of a unit: opened, moved, quarantined, empty.
 func (r *Registry) ChangeUnit(ctx context.Context, actor Actor, code string, state, location string, content *store.Amount, e Edit) (Item[store.Unit], error) {
-	var out Item[store.Unit]
-	key := store.Key{Laboratory: actor.Laboratory, Kind: store.KindUnit, Code: code}
-	err := r.write(ctx, actor, MayImport, func(ctx context.Context, tx *store.Tx) error {
-		old, err := newest[store.Unit](ctx, &tx.View, key)
-		if err != nil {
-			return err
-		}
-		body := old.Value
-		if state != "" && state != body.State {
-			if _, ok := unitSteps[state]; !ok {
-				return Complain("unknown state", []Complaint{{Place: "body.state", Found: quote(state), Expected: "one of sealed, open, in-use, suspect, quarantined, empty, disposed"}})
-			}
-			if !slices.Contains(unitSteps[body.State], state) {
-				return Refuse(Conflict, "unit %s is %s and cannot become %s; from there it can become %s", store.FormatCode(code), body.State, state, strings.Join(append(unitSteps[body.State], "nothing else"), ", "))
-			}
-			body.State = state
-		}
-		if opens(old.Value.State, state) {
-			body.Openings++
-			if body.OpenedAt == nil {
-				at := store.InstantOf(r.now())
-				body.OpenedAt = &at
-			}
-		}
-		if location != "" {
-			body.Location = location
-		}
-		if content != nil {
-			body.Content = content
-		}
-		if e.After == 0 {
-			e.After = old.Ref.Version
-		}
-		_, err = appendVersion(ctx, tx, actor, key, e, old.Inputs, body)
-		return err
-	})
-	if err != nil {
-		return out, err
-	}
-	return reread[store.Unit](ctx, r, actor, store.KindUnit, code)
+	return r.UseUnit(ctx, actor, code, UnitUse{State: state, Location: location, Left: content}, e)
 }
 
 // Units lists the units of the laboratory; material narrows it to one material's.
@@ -345,6 +312,15 @@ func List[T store.Body](ctx context.Context, r *Registry, actor Actor, laborator
 		return err
 	})
 	return page, err
+}
+
+// ignoreUnknown lets pass that a name means nothing, or several things.
+func ignoreUnknown(err error) error {
+	var ambiguous *AmbiguousError
+	if errors.As(err, &ambiguous) {
+		return nil
+	}
+	return ignoreNotFound(err)
 }
 
 func ignoreNotFound(err error) error {

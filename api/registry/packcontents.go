@@ -135,9 +135,9 @@ func boundUpload(raw store.Raw) *store.Hash {
 		Document *store.Hash `json:"document"`
 	}
 	switch raw.Kind {
-	case store.KindSession, store.KindValue, store.KindMaterial:
+	case store.KindSession, store.KindStudy, store.KindValue, store.KindMaterial:
 		if json.Unmarshal(raw.Value, &body) == nil {
-			if raw.Kind == store.KindSession {
+			if raw.Kind == store.KindSession || raw.Kind == store.KindStudy {
 				return body.Upload
 			}
 			return body.Document

@@ -249,6 +249,12 @@ func (p *packer) version(ctx context.Context, ref store.Ref) error {
 			return err
 		}
 		return p.upload(ctx, raw.Laboratory, *s.Value.Upload, others)
+	case store.KindStudy:
+		s, err := store.Decode[store.Study](raw)
+		if err != nil || s.Value.Upload == nil {
+			return err
+		}
+		return p.upload(ctx, raw.Laboratory, *s.Value.Upload, false)
 	case store.KindValue:
 		value, err := store.Decode[store.Value](raw)
 		if err != nil || value.Value.Document == nil {

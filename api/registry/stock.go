@@ -170,6 +170,17 @@ func stockOf(ctx context.Context, v *store.View, laboratory string, key store.Ke
 				}
 			}
 		}
+		for _, k := range took.taken {
+			if ok && base == took.takenBase && k.at > took.statedAt {
+				x -= k.amount
+			}
+		}
+		if hasPortion && took.takenBase == portionBase {
+			portions = append(portions, took.taken...)
+		}
+		if ok && base == took.takenBase {
+			stated = append(stated, took.taken...)
+		}
 		if ok {
 			x = max(x, 0)
 			u.Left, out.LeftUnit = &x, base
@@ -199,6 +210,9 @@ func stockOf(ctx context.Context, v *store.View, laboratory string, key store.Ke
 type withdrawn struct {
 	stated, emptied []consumption
 	statedAt        store.Instant // of the last statement of its content
+	// taken is what was logged outside sessions, in takenBase.
+	taken     []consumption
+	takenBase string
 }
 
 type sessionUse struct {
@@ -230,14 +244,21 @@ func unitStock(ctx context.Context, v *store.View, laboratory, code string, sess
 			if u.Value.State == "empty" && known {
 				x, base, ok = 0, beforeBase, true
 			}
+			at := u.RecordedAt
+			if u.Value.At != nil {
+				at = *u.Value.At
+			}
 			if u.Value.State == "empty" && len(t.emptied) == 0 {
-				t.emptied = append(t.emptied, consumption{u.RecordedAt, 1})
+				t.emptied = append(t.emptied, consumption{at, 1})
 			}
 			if ok && known && base == beforeBase && x < before {
-				t.stated = append(t.stated, consumption{u.RecordedAt, before - x})
+				t.stated = append(t.stated, consumption{at, before - x})
 			}
 			if ok && (!known || x != before) {
-				t.statedAt = u.RecordedAt
+				t.statedAt = max(t.statedAt, at)
+			}
+			if amount, of, ok := inBase(u.Value.Taken); ok {
+				t.taken, t.takenBase = append(t.taken, consumption{at, amount}), of
 			}
 			before, beforeBase, known = x, base, ok
 		}

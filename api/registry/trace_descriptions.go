@@ -113,6 +113,13 @@ func describeVersion(raw store.Raw) (*description, error) {
 			return nil, err
 		}
 		n.Title, n.Detail = "campaign "+store.FormatCode(raw.Code), p.Value.Title
+	case store.KindStudy:
+		s, err := store.Decode[store.Study](raw)
+		if err != nil {
+			return nil, err
+		}
+		n.Title = fmt.Sprintf("study of %s for campaign %s", s.Value.Of, store.FormatCode(s.Value.Assignment))
+		n.Detail = fmt.Sprintf("%d measurements on %s", len(s.Value.Measurements), s.Value.Scale)
 	case store.KindExclusion:
 		x, err := store.Decode[store.Exclusion](raw)
 		if err != nil {

@@ -47,6 +47,12 @@ func unitFlags(unit store.Version[store.Unit], rule *store.StockRule, used *stor
 		flags = append(flags, calib.Flag{Code: "open_too_long", Severity: calib.Warning, Subject: u.Material,
 			Message: fmt.Sprintf("Unit %s had been open for %.0f days; its material allows %g.", name, daysBetween(*u.OpenedAt, *used), rule.MaximumAgeDays), Advice: "Take a fresh unit and check it beside this one."})
 	}
+	for _, x := range u.Excursions {
+		if used == nil || *used >= x.At {
+			flags = append(flags, calib.Flag{Code: "storage_excursion", Severity: calib.Warning, Subject: u.Material,
+				Message: fmt.Sprintf("Unit %s was not stored as it should be on %s: %s", name, x.At.Time().Format("2006-01-02"), x.What), Advice: "Check it beside a unit that was."})
+		}
+	}
 	if (u.State == "suspect" || u.State == "quarantined") && (u.SuspectSince == nil || used == nil || *used >= *u.SuspectSince) {
 		flags = append(flags, calib.Flag{Code: "unit_in_doubt", Severity: calib.Serious, Subject: u.Material,
 			Message: fmt.Sprintf("Unit %s is %s: %s", name, u.State, nameOr(unit.Reason, "no reason was given")), Advice: "Decide about the unit before the session."})

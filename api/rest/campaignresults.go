@@ -47,6 +47,8 @@ type CampaignResult struct {
 	HomogeneityNot    string             `json:"homogeneity_not_needed,omitempty"`
 	Stability         *CampaignTrend     `json:"stability,omitempty"`
 	StabilityNot      string             `json:"stability_not_needed,omitempty"`
+	Prior             *CampaignPrior     `json:"stability_prior,omitempty" doc:"Holds while the study over time runs."`
+	MinimumPortion    float64            `json:"minimum_portion_mg,omitempty" doc:"The largest test portion measured: smaller ones were not shown to be enough."`
 	Trend             *TrendAnswer       `json:"trend,omitempty"`
 	Step              *CampaignStep      `json:"step,omitempty" doc:"Between predecessor and candidate."`
 	Budget            []CampaignBudget   `json:"budget"`
@@ -121,6 +123,17 @@ type CampaignTrend struct {
 	ResidualSD          float64 `json:"residual_sd"`
 	ShelfLifeDays       float64 `json:"shelf_life_days"`
 	StandardUncertainty float64 `json:"u"`
+	Isochronous         bool    `json:"isochronous,omitempty" doc:"Units stored for different times, measured together."`
+	Blocks              int     `json:"blocks,omitempty" doc:"Sessions removed as blocks."`
+}
+
+// CampaignPrior is the uncertainty of stability that a value took over while its study runs.
+type CampaignPrior struct {
+	StandardUncertainty float64  `json:"u"`
+	DegreesOfFreedom    *float64 `json:"nu" doc:"Null where u is known."`
+	Evidence            string   `json:"evidence"`
+	SpanDays            float64  `json:"span_days" doc:"Of the study so far."`
+	PlannedDays         float64  `json:"planned_days"`
 }
 
 // CampaignStep is the step between the predecessor and the candidate.
@@ -169,7 +182,7 @@ func showCampaign(r *store.CampaignResult) *CampaignResult {
 		HartungKnapp: r.HartungKnapp, InstrumentP: r.InstrumentP, InstrumentsDiffer: r.InstrumentsDiffer, HomogeneityNot: r.HomogeneityNot, StabilityNot: r.StabilityNot,
 		Budget:    convert(r.Budget, func(b store.CampaignBudget) CampaignBudget { return CampaignBudget(b) }),
 		Checks:    convert(r.Checks, func(c store.CampaignCheck) CampaignCheck { return CampaignCheck(c) }),
-		Deviation: r.Deviation, Circular: convert(r.Circular, same), ShelfLifeDays: r.ShelfLifeDays, DriftPerDay: r.DriftPerDay,
+		Deviation: r.Deviation, MinimumPortion: r.MinimumPortion, Circular: convert(r.Circular, same), ShelfLifeDays: r.ShelfLifeDays, DriftPerDay: r.DriftPerDay,
 		Remarks: convert(r.Remarks, func(m store.CampaignRemark) CampaignRemark {
 			return CampaignRemark{m.Code, m.Severity, convert(m.Subjects, showSubjectCode), m.Sentence}
 		})}
@@ -189,6 +202,10 @@ func showCampaign(r *store.CampaignResult) *CampaignResult {
 	if s := r.Stability; s != nil {
 		trend := CampaignTrend(*s)
 		out.Stability = &trend
+	}
+	if p := r.Prior; p != nil {
+		prior := CampaignPrior(*p)
+		out.Prior = &prior
 	}
 	if t := r.Trend; t != nil {
 		answer := TrendAnswer(*t)
