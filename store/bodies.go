@@ -391,6 +391,7 @@ type Columns struct {
 	Time        string `json:"time,omitempty"`
 	Date        string `json:"date,omitempty"` // where date and time are two columns: joined with a space
 	Amount      string `json:"amount,omitempty"`
+	AmountUnit  string `json:"amount_unit,omitempty"` // of its figures: mg ug g; "" means mg, in which they are kept
 	Compound    string `json:"compound,omitempty"`
 	Retention   string `json:"retention,omitempty"`
 	Width       string `json:"width,omitempty"`

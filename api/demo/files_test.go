@@ -43,7 +43,7 @@ func TestFilesAreReadAsTheyWereWritten(t *testing.T) {
 					name = want.subject
 				}
 				if got.Name != name || got.Unit != want.unit || got.Warning != want.remark || got.Quantity != quantity || got.Raw != want.raw[quantity] ||
-					got.Size == nil || *got.Size != want.size[quantity] || got.Amount == nil || *got.Amount != want.amount || got.Position == nil || *got.Position != want.position ||
+					got.Size == nil || *got.Size != want.size[quantity] || got.Amount == nil || *got.Amount != want.amount/1000 || got.Position == nil || *got.Position != want.position ||
 					got.Time == nil || !got.Time.Time().Equal(want.at) || (got.Role == "conditioning") != (want.role != "") {
 					t.Errorf("row %d came back as %+v, want %+v", i+1, got, want)
 				}

@@ -10,7 +10,7 @@ import (
 // writes UTF-8 with commas, and its second program a workbook.
 func combustionMapping() *store.Mapping {
 	return &store.Mapping{Format: "csv", Encoding: "iso-8859-1", Delimiter: ";", Decimal: ",", Zone: zone, TimeLayout: "DD.MM.YYYY hh:mm:ss",
-		Columns: store.Columns{Position: "Siège", Name: "Étiquette", Role: "Tâche", Unit: "Bocal", Preparation: "Creuset", Time: "Départ", Amount: "Pesée (µg)", Warning: "Remarque"},
+		Columns: store.Columns{Position: "Siège", Name: "Étiquette", Role: "Tâche", Unit: "Bocal", Preparation: "Creuset", Time: "Départ", Amount: "Pesée (µg)", AmountUnit: "ug", Warning: "Remarque"},
 		Quantities: []store.QuantityColumns{
 			{Quantity: "d15N", Raw: "N2 brut", Size: "N2 aire (nAs)", Optional: true},
 			{Quantity: "d13C", Raw: "CO2 brut", Size: "CO2 aire (nAs)", Optional: true},
@@ -20,7 +20,7 @@ func combustionMapping() *store.Mapping {
 
 func furnaceMapping() *store.Mapping {
 	return &store.Mapping{Format: "csv", Encoding: "utf-8", Delimiter: ",", Decimal: ".", Zone: "UTC",
-		Columns:    store.Columns{Position: "slot", Name: "crimp holds", Role: "warm-up", Unit: "from bottle", Preparation: "tube", Time: "dropped (UTC)", Amount: "filled/µg", Warning: "seen"},
+		Columns:    store.Columns{Position: "slot", Name: "crimp holds", Role: "warm-up", Unit: "from bottle", Preparation: "tube", Time: "dropped (UTC)", Amount: "filled/µg", AmountUnit: "ug", Warning: "seen"},
 		Quantities: []store.QuantityColumns{{Quantity: "d2H", Raw: "H2 against gas/‰", Size: "H2 charge/nC", Intensity: "H2 top/nA", GasIntensity: "gas plateau/nA", GasRatio: "gas 3:2/ppm"}},
 		RoleWords:  map[string]calib.Role{"yes": calib.Conditioning}}
 }

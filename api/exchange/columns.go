@@ -147,6 +147,7 @@ type columns struct {
 
 	name, role, unit, analysis, preparation, position, peak        column
 	time, date, amount, compound, retention, width, group, warning column
+	amountUnit                                                     string
 
 	quantities []quantityColumns
 }
@@ -210,7 +211,7 @@ func findColumns(message string, m store.Mapping, row int, cells []cell) (*colum
 	f.peak = find(k.Peak, "the peak")
 	f.time = find(k.Time, "the time")
 	f.date = find(k.Date, "the date")
-	f.amount = find(k.Amount, "the amount")
+	f.amount, f.amountUnit = find(k.Amount, "the amount"), k.AmountUnit
 	f.compound = find(k.Compound, "the compound")
 	f.retention = find(k.Retention, "the retention")
 	f.width = find(k.Width, "the width of the peak")

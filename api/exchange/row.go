@@ -40,7 +40,7 @@ func (t *tableReader) readRow(cells []cell) {
 		Position:    t.whole(cells, f.position),
 		Peak:        t.whole(cells, f.peak),
 		Time:        t.time(cells),
-		Amount:      t.optional(cells, f.amount, false),
+		Amount:      t.amount(cells),
 		Compound:    t.text(cells, f.compound),
 		Retention:   t.optional(cells, f.retention, false),
 		Width:       t.optional(cells, f.width, false),
@@ -287,4 +287,20 @@ func (t *tableReader) dateAndTime(date, clockTime cell) (store.Instant, string) 
 		second = render(timeLayout, at)
 	}
 	return t.clock.read(first + " " + second)
+}
+
+// amount is the test portion of a row in mg.
+func (t *tableReader) amount(cells []cell) *float64 {
+	x := t.optional(cells, t.columns.amount, false)
+	if x == nil {
+		return nil
+	}
+	v := *x
+	switch t.columns.amountUnit {
+	case "ug":
+		v /= 1000
+	case "g":
+		v *= 1000
+	}
+	return &v
 }

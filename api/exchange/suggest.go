@@ -219,7 +219,12 @@ func headingWords() []headingWord {
 		{func(m *store.Mapping, h string) { m.Columns.Peak = h }, []string{"peak", "peaknumber", "peakno"}, ""},
 		{func(m *store.Mapping, h string) { m.Columns.Time = h }, []string{"time", "datetime", "measuredat", "started", "start", "clock"}, ""},
 		{func(m *store.Mapping, h string) { m.Columns.Date = h }, []string{"date", "day"}, ""},
-		{func(m *store.Mapping, h string) { m.Columns.Amount = h }, []string{"amount", "mass", "weight", "amountmg", "massmg", "weightmg", "amountug"}, ""},
+		{func(m *store.Mapping, h string) {
+			m.Columns.Amount = h
+			if strings.HasSuffix(strings.Trim(strings.ToLower(h), " )]"), "ug") {
+				m.Columns.AmountUnit = "ug"
+			}
+		}, []string{"amount", "mass", "weight", "amountmg", "massmg", "weightmg", "amountug"}, ""},
 		{func(m *store.Mapping, h string) { m.Columns.Compound = h }, []string{"compound", "component"}, ""},
 		{func(m *store.Mapping, h string) { m.Columns.Retention = h }, []string{"retention", "retentiontime", "retentions"}, ""},
 		{func(m *store.Mapping, h string) { m.Columns.Width = h }, []string{"width", "peakwidth", "widths"}, ""},

@@ -139,7 +139,7 @@ func assemble(ctx context.Context, v *store.View, laboratory string, q FitReques
 			return a, nil, err
 		}
 	}
-	return a, append(inputs, units...), nil
+	return a, append(inputs, units...), a.flagPortions(ctx, v)
 }
 
 func lastReason(value Item[store.Value]) string {
@@ -223,7 +223,10 @@ func assembleStored(ctx context.Context, v source, c store.Version[store.Calibra
 			return a, err
 		}
 	}
-	return a, a.loadReadings(ctx, v, c.Laboratory)
+	if err := a.loadReadings(ctx, v, c.Laboratory); err != nil {
+		return a, err
+	}
+	return a, a.flagPortions(ctx, v)
 }
 
 func specOf(m store.Method, quantity, measurand string) (store.MethodQuantity, error) {

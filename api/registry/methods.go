@@ -205,6 +205,7 @@ func checkMapping(c *complaints, m store.Method) {
 	c.oneOf("body.import.format", mapping.Format, "", "csv", "tsv", "xlsx")
 	c.oneOf("body.import.encoding", mapping.Encoding, "", "utf-8", "utf-16le", "utf-16be", "windows-1252", "iso-8859-1")
 	c.oneOf("body.import.decimal", mapping.Decimal, "", ".", ",")
+	c.oneOf("body.import.columns.amount_unit", mapping.Columns.AmountUnit, "", "mg", "ug", "g")
 	if len([]rune(mapping.Delimiter)) > 1 {
 		c.add("body.import.delimiter", quote(mapping.Delimiter), "one character")
 	}

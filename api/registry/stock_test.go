@@ -187,3 +187,117 @@ func TestQuarantineReachesBackToTheLastGoodDate(t *testing.T) {
 		t.Errorf("due %v: want the bottle in doubt and the value that expires 30 days after 20 March", what)
 	}
 }
+
+func TestPortionsBelowTheMinimumFlagTheirReadings(t *testing.T) {
+	b := openBench(t)
+	b.method("C-solid", carbonMethod())
+	b.working("PEAT-LO", 1)
+	m, err := b.FindMaterial(b.ctx, b.manager, "PEAT-LO", store.Moment{})
+	b.must(err)
+	body := m.Value
+	body.Minimum = &store.Amount{Value: "400", Unit: "ug"}
+	_, err = b.StateMaterial(b.ctx, b.manager, "PEAT-LO", body, registry.Edit{After: 1, Reason: "from its homogeneity"})
+	b.must(err)
+	b.stated("PEAT-LO", "-28.00")
+	ends := []place{{"USGS40", "", "", -26.39}, {"USGS41", "", "", 37.63}}
+	table := layOut(4, slices.Concat(ends, []place{{"PEAT-LO", "control", "", -28}, {"PEAT-LO", "control", "", -28}, {"IAEA-CH-6", "", "", -10.45}}, ends)...)
+	for i, mg := range []float64{0.39, 0.40} {
+		table.Readings[2+i].Amount = &mg
+	}
+	answer, err := b.ImportReadings(b.ctx, b.analyst, registry.ImportRequest{New: &registry.SessionRequest{Instrument: "EA1", Method: "C-solid"}, Bytes: []byte("x"), Table: table})
+	b.must(err)
+	c, err := b.Fit(b.ctx, b.analyst, registry.FitRequest{Session: answer.Session.Code, Quantity: "d13C"})
+	b.must(err)
+	i := slices.IndexFunc(c.Value.Flags, func(f calib.Flag) bool { return f.Code == "portion_below_minimum" })
+	if i < 0 || !slices.Equal(c.Value.Flags[i].Readings, []int{3}) {
+		t.Errorf("flags %+v: want reading 3, of 0.39 mg where 0.40 mg is the least", c.Value.Flags)
+	}
+	b.verified()
+}
+
+func TestUsesOutsideSessionsCountAllOrNone(t *testing.T) {
+	b := openBench(t)
+	b.method("C-solid", carbonMethod())
+	unit := b.watched("PEAT-LO", 1)[0] // 10.0 g
+	b.clock = time.Date(2026, 5, 1, 9, 0, 0, 0, time.UTC)
+	row := func(day int, taken, left string) registry.UseRow {
+		u := registry.UseRow{Unit: unit, Reason: "given to a colleague", UnitUse: registry.UnitUse{At: on(day)}, Place: func(f string) string { return fmt.Sprintf("row %d, column %q", day, f) }}
+		if taken != "" {
+			u.Taken = &store.Amount{Value: store.Decimal(taken), Unit: "mg"}
+		}
+		if left != "" {
+			u.Left = &store.Amount{Value: store.Decimal(left), Unit: "g"}
+		}
+		return u
+	}
+	before := b.roots()
+	for want, bad := range map[string]registry.UseRow{
+		`row 9, column "taken"`:  row(9, "-1", ""),
+		`row 10, column "unit"`:  {Unit: "no such jar", Reason: "x", Place: func(f string) string { return fmt.Sprintf("row 10, column %q", f) }},
+		`row 90, column "at"`:    row(90, "1", ""),
+		`row 11, column "state"`: {Unit: unit, Reason: "x", UnitUse: registry.UnitUse{State: "lost"}, Place: func(f string) string { return fmt.Sprintf("row 11, column %q", f) }},
+	} {
+		if _, err := b.LogUses(b.ctx, b.analyst, []registry.UseRow{row(5, "500", ""), bad}); registry.MeaningOf(err) != registry.Invalid || !strings.Contains(err.Error(), want) {
+			t.Errorf("%v, want a complaint at %s", err, want)
+		}
+	}
+	if b.roots() != before {
+		t.Error("refused uses changed the ledger")
+	}
+	rows := []registry.UseRow{row(5, "500", ""), row(15, "500", ""), row(25, "500", ""), row(35, "1000", "")}
+	rows[3].Excursion = "the door of the cabinet stood open"
+	units, err := b.LogUses(b.ctx, b.analyst, rows)
+	b.must(err)
+	if len(units) != 1 || units[0].Ref.Version != 5 || len(units[0].Value.Excursions) != 1 {
+		t.Errorf("%d units, %+v", len(units), units[0].Value)
+	}
+	s, err := b.Stock(b.ctx, b.auditor, "PEAT-LO")
+	b.must(err)
+	// The content of 10 g was stated on 2 March, before every use: 10 − 2.5 g are left.
+	if x := *s.Units[0].Left; math.Abs(x-7.5) > 1e-9 || s.Forecast == nil || s.Forecast.Events != 4 {
+		t.Errorf("%v g left, forecast %+v (%s); want 7.5 g from four uses", x, s.Forecast, s.WithoutForecast)
+	}
+	// A statement of what is left begins anew.
+	_, err = b.LogUses(b.ctx, b.analyst, []registry.UseRow{row(40, "", "7.1"), row(45, "100", "")})
+	b.must(err)
+	s, err = b.Stock(b.ctx, b.auditor, "PEAT-LO")
+	b.must(err)
+	if x := *s.Units[0].Left; math.Abs(x-7.0) > 1e-9 {
+		t.Errorf("%v g left, want 7.1 − 0.1 g", x)
+	}
+	if a := b.used(50, unit); !slices.ContainsFunc(a.Flags, func(f calib.Flag) bool { return f.Code == "storage_excursion" }) {
+		t.Errorf("flags %+v of a session after the excursion", a.Flags)
+	}
+	if a := b.used(30, unit); slices.ContainsFunc(a.Flags, func(f calib.Flag) bool { return f.Code == "storage_excursion" }) {
+		t.Errorf("flags %+v of a session before the excursion", a.Flags)
+	}
+}
+
+func TestUnitsComeInAsAListAllOrNone(t *testing.T) {
+	b := openBench(t)
+	b.method("C-solid", carbonMethod())
+	b.working("PEAT-LO", 1)
+	row := func(i int, u store.Unit) registry.UnitRow {
+		return registry.UnitRow{Unit: u, Place: func(f string) string { return fmt.Sprintf("row %d, column %q", i, f) }}
+	}
+	good := row(2, store.Unit{Material: "PEAT-LO", Label: "vial A", Container: "vial", Content: &store.Amount{Value: "2.50", Unit: "g"}, FillingOrder: 7})
+	before := b.roots()
+	for want, bad := range map[string]registry.UnitRow{
+		`row 3, column "container"`: row(3, store.Unit{Material: "PEAT-LO", Label: "x", Container: "bag"}),
+		`row 4, column "label"`:     row(4, store.Unit{Material: "PEAT-LO", Label: "Vial  A"}),
+		`row 5, column "material"`:  row(5, store.Unit{Material: "NOBODY", Label: "x"}),
+		`row 6, column "content"`:   row(6, store.Unit{Material: "PEAT-LO", Label: "x", Content: &store.Amount{Value: "-1", Unit: "g"}}),
+	} {
+		if _, err := b.ImportUnits(b.ctx, b.manager, []registry.UnitRow{good, bad}); registry.MeaningOf(err) != registry.Invalid || !strings.Contains(err.Error(), want) {
+			t.Errorf("%v, want a complaint at %s", err, want)
+		}
+	}
+	if b.roots() != before {
+		t.Error("refused units changed the ledger")
+	}
+	units, err := b.ImportUnits(b.ctx, b.manager, []registry.UnitRow{good, row(3, store.Unit{Material: "PEAT-LO", Label: "vial B"})})
+	b.must(err)
+	if len(units) != 2 || units[0].Value.Container != "vial" || units[0].Value.Content.Value != "2.50" || units[0].Value.FillingOrder != 7 || units[1].Value.State != "sealed" {
+		t.Errorf("units %+v", units)
+	}
+}

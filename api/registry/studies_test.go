@@ -13,7 +13,9 @@ import (
 	"deltamoor/store"
 )
 
-func placesOfBody(i int, field string) string { return fmt.Sprintf("body.measurements[%d].%s", i, field) }
+func placesOfBody(i int, field string) string {
+	return fmt.Sprintf("body.measurements[%d].%s", i, field)
+}
 
 // A lot whose units were stored for 0, 200 and 400 days and measured together
 // in two sessions that differ by 1 ‰: the sessions are blocks.

@@ -35,6 +35,42 @@ func (a *assembly) flagUnit(ctx context.Context, v source, ref store.Ref) error 
 	return nil
 }
 
+// flagPortions flags readings of anchors and controls whose test portion was
+// below the least that is their material, by the version that the value names.
+func (a *assembly) flagPortions(ctx context.Context, v source) error {
+	values := slices.Clone(a.anchors)
+	for _, code := range slices.Sorted(mapKeys(a.controls)) {
+		if value := a.controls[code]; !slices.ContainsFunc(values, func(o store.Version[store.Value]) bool { return o.Value.Material == value.Value.Material }) {
+			values = append(values, value)
+		}
+	}
+	for _, value := range values {
+		ref, err := inputOf(value.Inputs, "material")
+		if err != nil {
+			continue // a value recorded without its material's version has no least portion
+		}
+		m, err := decodeVersion[store.Material](ctx, v, ref)
+		if err != nil {
+			return err
+		}
+		least, base, ok := inBase(m.Value.Minimum)
+		if !ok || base != "g" {
+			continue
+		}
+		var below []int
+		for _, rd := range a.readings {
+			if x := amountOf(rd); rd.Material == m.Code && !a.excluded[rd.Number] && x > 0 && x < least*1000 {
+				below = append(below, rd.Number)
+			}
+		}
+		if len(below) > 0 {
+			a.flags = append(a.flags, calib.Flag{Code: "portion_below_minimum", Severity: calib.Warning, Subject: m.Code, Readings: below,
+				Message: fmt.Sprintf("%d portions of %s were below %s %s, the least that is the material.", len(below), m.Code, m.Value.Minimum.Value, m.Value.Minimum.Unit), Advice: "Weigh more: its homogeneity is not known for less."})
+		}
+	}
+	return nil
+}
+
 func unitFlags(unit store.Version[store.Unit], rule *store.StockRule, used *store.Instant) []calib.Flag {
 	var flags []calib.Flag
 	u := unit.Value

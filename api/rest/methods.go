@@ -150,6 +150,7 @@ type Columns struct {
 	Time        string `json:"time,omitempty" maxLength:"200"`
 	Date        string `json:"date,omitempty" maxLength:"200"`
 	Amount      string `json:"amount,omitempty" maxLength:"200"`
+	AmountUnit  string `json:"amount_unit,omitempty" enum:"mg,ug,g" doc:"Of the figures in that column; left out: mg, in which they are kept."`
 	Compound    string `json:"compound,omitempty" maxLength:"200"`
 	Retention   string `json:"retention,omitempty" maxLength:"200"`
 	Width       string `json:"width,omitempty" maxLength:"200" doc:"Of the peak, in the unit of its retention."`

@@ -36,7 +36,7 @@ type Reading struct {
 	Raw          float64    `json:"raw" doc:"Raw delta against the working gas (‰)."`
 	U            *float64   `json:"u,omitempty" doc:"Standard uncertainty of raw (‰)."`
 	Size         *float64   `json:"size,omitempty"`
-	Amount       *float64   `json:"amount,omitempty"`
+	Amount       *float64   `json:"amount,omitempty" doc:"Test portion (mg)."`
 	Retention    *float64   `json:"retention,omitempty"`
 	Width        *float64   `json:"width,omitempty" doc:"Of the peak."`
 	WidthBy      string     `json:"width_by,omitempty" enum:"base,half-height"`
@@ -312,7 +312,7 @@ type NewReading struct {
 	Position     *int       `json:"position,omitempty"`
 	Peak         *int       `json:"peak,omitempty"`
 	Time         *time.Time `json:"time,omitempty"`
-	Amount       *float64   `json:"amount,omitempty"`
+	Amount       *float64   `json:"amount,omitempty" doc:"Test portion (mg)."`
 	Compound     string     `json:"compound,omitempty"`
 	Retention    *float64   `json:"retention,omitempty"`
 	Width        *float64   `json:"width,omitempty" doc:"Of the peak."`
