@@ -17,7 +17,8 @@ var permissions = map[string]registry.Permission{
 	"addMaterial": registry.MayManage, "changeMaterial": registry.MayManage, "addUnits": registry.MayManage, "changeUnit": registry.MayImport,
 	"addValue": registry.MayManage, "changeValue": registry.MayManage, "assignValue": registry.MayManage,
 	"planAssignment": registry.MayManage, "changeAssignment": registry.MayManage, "concludeAssignment": registry.MayManage, "decideAssignment": registry.MayApprove,
-	"backLoadValues": registry.MayManage, "quarantineUnit": registry.MayImport,
+	"backLoadValues": registry.MayManage, "quarantineUnit": registry.MayImport, "importUnits": registry.MayManage, "logUses": registry.MayImport, "stateStudy": registry.MayImport,
+	"evaluatePlan": registry.MayRead, "simulatePlan": registry.MayRead, "compareValues": registry.MayRead,
 	"addInstrument": registry.MayManage, "changeInstrument": registry.MayManage, "addMethod": registry.MayManage, "changeMethod": registry.MayManage,
 	"addSession": registry.MayImport, "importSession": registry.MayImport, "importReadings": registry.MayImport, "addSamples": registry.MayImport,
 	"exclude": registry.MayFit, "stateOutcome": registry.MayFit, "fitSession": registry.MayFit, "addFinal": registry.MayFit, "changeFinal": registry.MayFit,
@@ -153,7 +154,7 @@ func (b *bench) fill(j journey, path string, op *operation) string {
 	if strings.Contains(out, "{") || strings.Contains(out, "//") {
 		b.t.Fatalf("nobody has said what to put into %s: add it to fill", path)
 	}
-	given := map[string]string{"instrument": "EA1", "method": "C-solid", "first": "2"}
+	given := map[string]string{"instrument": "EA1", "method": "C-solid", "first": "2", "scale": "d13C-VPDB-LSVEC", "of": "homogeneity"}
 	sep := "?"
 	for _, p := range op.Parameters {
 		if p.In == "query" && p.Required {
@@ -178,7 +179,12 @@ func body(operationID string, j journey) string {
 		"assignValue":    map[string]any{"valid_from": "2025-01-01T00:00:00Z", "reason": "r"},
 		"planAssignment": campaignPlan(), "changeAssignment": with(campaignPlan(), "reason", "r"),
 		"concludeAssignment": map[string]any{"scale": "d13C-VPDB-LSVEC", "valid_from": "2025-01-01T00:00:00Z"},
-		"quarantineUnit":     map[string]any{"reason": "r", "since": "2025-01-01T00:00:00Z"},
+		"evaluatePlan":       campaignPlan(), "simulatePlan": campaignPlan(),
+		"compareValues":  map[string]any{"values": []any{map[string]any{"material": "FJO-GLY", "scale": "d13C-VPDB-LSVEC"}, map[string]any{"material": "USGS41", "scale": "d13C-VPDB-LSVEC"}}},
+		"importUnits":    map[string]any{"units": []any{map[string]any{"material": "FJO-GLY", "label": "x"}}},
+		"logUses":        map[string]any{"uses": []any{map[string]any{"unit": j.unit, "reason": "r"}}},
+		"stateStudy":     map[string]any{"measurements": []any{map[string]any{"unit": "a", "value": 1}, map[string]any{"unit": "a", "value": 1}, map[string]any{"unit": "b", "value": 1}}},
+		"quarantineUnit": map[string]any{"reason": "r", "since": "2025-01-01T00:00:00Z"},
 		"backLoadValues": map[string]any{"values": []any{map[string]any{"material": "FJO-GLY", "scale": "d13C-VPDB-LSVEC", "value": 1, "stated": map[string]any{"text": "0.1", "kind": "standard"},
 			"basis": "literature", "evidence": "e", "valid_from": "2025-01-01T00:00:00Z"}}},
 		"addRelation": relation("NEW"), "changeRelation": with(relation(""), "reason", "r"),

@@ -1,6 +1,8 @@
 package api_test
 
 import (
+	"crypto/sha256"
+	"encoding/base64"
 	"encoding/json"
 	"encoding/xml"
 	"fmt"
@@ -80,6 +82,8 @@ func (b *bench) campaign() {
 	if math.Abs(math.Sqrt(parts)-u) > 1e-12 {
 		t.Errorf("prospect u %v, its parts give %v", u, math.Sqrt(parts))
 	}
+	b.plans(plan)
+	b.studies(plan, units)
 	session := b.campaignDay(1, units)
 	conclusion := map[string]any{"scale": "d13C-VPDB-LSVEC", "valid_from": "2026-06-10T00:00:00Z"}
 	b.wantProblem(b.do(request{role: registry.Manager, method: "POST", path: plan + "/values", body: conclusion}), 422, "invalid", "sessions")
@@ -118,12 +122,14 @@ func (b *bench) campaign() {
 		t.Errorf("the XML says %+v, the value %v", document.Reals[:2], value.at(t, "value"))
 	}
 
+	b.links()
 	stock := b.get(registry.Auditor, "/v1/materials/FJO-ACE/stock")
-	if n := len(stock.at(t, "units.0.uses").([]any)); n != 3 || stock.at(t, "forecast") != nil {
+	if n := usesOf(stock.at(t, "units").([]any), units[0]); n != 3 || stock.at(t, "forecast") != nil {
 		t.Errorf("%d uses logged of the first vial, forecast %v: want 3 sessions", n, stock.at(t, "forecast"))
 	}
 	b.get(registry.Auditor, "/v1/materials/FJO-ACE/labels?units="+units[0])
 	b.get(registry.Auditor, "/v1/due")
+	b.printed()
 	b.get(registry.Auditor, "/v1/due?days=400&format=csv")
 	unit := "/v1/units/" + units[0]
 	b.post(registry.Analyst, unit+"/quarantine", map[string]any{"reason": "the lid was loose", "since": "2026-06-02T00:00:00Z"}, "If-Match", b.newestTag(unit))
@@ -138,6 +144,129 @@ func (b *bench) campaign() {
 	}
 	b.wantProblem(b.do(request{role: registry.Manager, method: "POST", path: "/v1/values/import", body: map[string]any{"values": []any{map[string]any{"material": "NOBODY", "scale": "d15N-AIR", "value": 1,
 		"stated": map[string]any{"text": "0.1", "kind": "standard"}, "basis": "literature", "evidence": "x", "valid_from": "2015-01-01T00:00:00Z"}}}}), 422, "invalid", "body.values[0].material")
+}
+
+// usesOf counts the sessions that used a unit.
+func usesOf(units []any, code string) int {
+	for _, u := range units {
+		m := u.(map[string]any)
+		if m["unit"].(map[string]any)["code"] == code {
+			return len(m["uses"].([]any))
+		}
+	}
+	return -1
+}
+
+// plans asks what is to be expected of plans, stored and not.
+func (b *bench) plans(plan string) {
+	b.t.Helper()
+	t := b.t
+	stored, unstored := b.get(registry.Auditor, plan+"/prospects"), b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/assignments/prospects", body: campaignPlan()})
+	if got, want := unstored.at(t, "values.0.prospect.U"), stored.at(t, "values.0.prospect.U"); got != want {
+		t.Errorf("a plan has U %v unstored and %v stored", got, want)
+	}
+	more := campaignPlan()
+	more["sessions"] = 12
+	if got := b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/assignments/prospects", body: more}).at(t, "values.0.prospect.u_sessions").(float64); got >= stored.at(t, "values.0.prospect.u_sessions").(float64) {
+		t.Errorf("twelve sessions leave %v", got)
+	}
+	for _, path := range []string{plan + "/simulation?trials=400&seed=7", plan + "/simulation?trials=400"} {
+		s := b.get(registry.Auditor, path)
+		if c := s.at(t, "values.0.coverage_characterisation").(float64); c < 0.9 || c > 1 {
+			t.Errorf("%s: coverage %v of 400 campaigns", path, c)
+		}
+	}
+	a := b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/assignments/simulation?trials=400&seed=7", body: campaignPlan()})
+	if got, want := a.at(t, "values.0.U_median"), b.get(registry.Auditor, plan+"/simulation?trials=400&seed=7").at(t, "values.0.U_median"); got != want {
+		t.Errorf("one seed gives %v and %v", got, want)
+	}
+	b.wantProblem(b.do(request{role: registry.Auditor, method: "POST", path: "/v1/assignments/prospects", body: with(campaignPlan(), "material", "NOBODY")}), 422, "invalid", "body.material")
+}
+
+// studies brings a study of the units as a table and as JSON, good and broken,
+// and lists of units and uses alike.
+func (b *bench) studies(plan string, units []string) {
+	b.t.Helper()
+	t := b.t
+	path := plan + "/studies?scale=d13C-VPDB-LSVEC&of=homogeneity&name=units.csv"
+	const good = "unit;value;portion_mg;order\nvial 1;-28,01;0,5;1\nvial 1;-28,03;0,6;1\nvial 2;-28,02;0,5;2\nvial 2;-27,99;0,5;2\n"
+	b.wantProblem(b.do(request{role: registry.Analyst, method: "POST", path: path, body: strings.Replace(good, "-28,03", "about 28", 1), headers: pairs([]string{"Content-Type", csvType})}), 422, "invalid", `row 3, column "value"`)
+	b.wantProblem(b.do(request{role: registry.Analyst, method: "POST", path: strings.Replace(path, "homogeneity", "stability", 1), body: good, headers: pairs([]string{"Content-Type", csvType})}), 409, "conflict", "")
+	b.post(registry.Analyst, path, good, "Content-Type", csvType)
+	tag := b.get(registry.Auditor, plan+"/studies").text(t, "items.0.code")
+	if !strings.HasSuffix(tag, "/d13C-VPDB-LSVEC/total/homogeneity") {
+		t.Errorf("study %q", tag)
+	}
+	b.wantProblem(b.do(request{role: registry.Analyst, method: "POST", path: path, body: good, headers: pairs([]string{"Content-Type", csvType})}), 428, "unconditional", "")
+	again := map[string]any{"measurements": []any{map[string]any{"unit": "vial 1", "value": -28.01, "portion_mg": 0.5}, map[string]any{"unit": "vial 1", "value": -28.03, "portion_mg": 0.6},
+		map[string]any{"unit": "vial 2", "value": -28.02, "portion_mg": 0.5}, map[string]any{"unit": "vial 2", "value": -27.99, "portion_mg": 0.5}}}
+	b.post(registry.Analyst, path+"&reason=without+order", again, "If-Match", "\"1-0\"")
+
+	const more = "Material,Label,Container,Content,Content_unit,Filling_order\nFJO-ACE,ampoule 3,ampoule,0.50,g,3\nFJO-ACE,ampoule 4,ampoule,0.50,g,4\n"
+	b.wantProblem(b.do(request{role: registry.Manager, method: "POST", path: "/v1/units/import?name=u.csv", body: strings.Replace(more, "ampoule 4,ampoule", "ampoule 4,sack", 1), headers: pairs([]string{"Content-Type", csvType})}), 422, "invalid", `row 3, column "container"`)
+	a := b.post(registry.Manager, "/v1/units/import?name=u.csv", more, "Content-Type", csvType)
+	if a.text(t, "items.0.container") != "ampoule" || !strings.Contains(string(a.Body), `"value":0.50,`) {
+		t.Errorf("units %s", a.Body)
+	}
+	b.post(registry.Manager, "/v1/units/import", map[string]any{"units": []any{map[string]any{"material": "FJO-ACE", "label": "ampoule 5"}}})
+	ampoule := a.text(t, "items.0.code")
+	uses := "unit,reason,at,state,taken,amount_unit,excursion\n" + ampoule + ",opened for a trial,2025-06-01,open,0.1,g,\nampoule 4,left on the bench,2025-06-02,,,,25 °C over night\n"
+	b.wantProblem(b.do(request{role: registry.Analyst, method: "POST", path: "/v1/units/uses?name=log.csv", body: strings.Replace(uses, "0.1,g", "0.1,pinch", 1), headers: pairs([]string{"Content-Type", csvType})}), 422, "invalid", `row 2, column "taken"`)
+	b.wantProblem(b.do(request{role: registry.Analyst, method: "POST", path: "/v1/units/uses?name=log.csv", body: strings.Replace(uses, "ampoule 4", "ampoule 9", 1), headers: pairs([]string{"Content-Type", csvType})}), 422, "invalid", `row 3, column "unit"`)
+	a = b.post(registry.Analyst, "/v1/units/uses?name=log.csv", uses, "Content-Type", csvType)
+	if a.text(t, "items.0.state") != "open" || a.text(t, "items.1.excursions.0.what") != "25 °C over night" {
+		t.Errorf("uses %s", a.Body)
+	}
+	b.post(registry.Analyst, "/v1/units/uses", map[string]any{"uses": []any{map[string]any{"unit": ampoule, "reason": "used up", "state": "empty"}}})
+}
+
+// links asks how the values hang together.
+func (b *bench) links() {
+	b.t.Helper()
+	t := b.t
+	value := "/v1/materials/FJO-ACE/values/d13C-VPDB-LSVEC/total"
+	series := b.get(registry.Auditor, value+"/series")
+	if series.at(t, "items.0.shift") != nil {
+		t.Errorf("the first version has a shift: %s", series.Body)
+	}
+	b.get(registry.Auditor, value+"/series?format=csv")
+	monitor := b.get(registry.Auditor, "/v1/materials/FJO-GLY/values/d13C-VPDB-LSVEC/total/monitor")
+	if monitor.at(t, "trend") != nil || monitor.text(t, "without") == "" {
+		t.Errorf("monitor of an anchor: %s", monitor.Body)
+	}
+	a := b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/values/covariance", body: map[string]any{"values": []any{
+		map[string]any{"material": "FJO-ACE", "scale": "d13C-VPDB-LSVEC", "version": 1}, map[string]any{"material": "FJO-GLY", "scale": "d13C-VPDB-LSVEC"}}}})
+	if c := a.at(t, "covariance.0.1").(float64); c <= 0 {
+		t.Errorf("a value and its own anchor have the covariance %v", c)
+	}
+	if d := b.get(registry.Auditor, "/v1/materials/FJO-GLY/depth").at(t, "items.0.depth").(float64); d != 1 {
+		t.Errorf("a certificate's value has the depth %v", d)
+	}
+	h := b.get(registry.Auditor, "/v1/materials/FJO-ACE/handling?language=fr")
+	// The sentence of H302 in French, as in the statements of GHS/CLP.
+	if got := h.text(t, "hazards.0.text"); got != "Nocif en cas d’ingestion." && got != "Nocif en cas d'ingestion." {
+		t.Errorf("H302 in French: %q", got)
+	}
+}
+
+// printed asks for every page and looks that it carries its own style and no script.
+func (b *bench) printed() {
+	b.t.Helper()
+	plan := "/v1/assignments/" + b.get(registry.Auditor, "/v1/assignments").text(b.t, "items.0.code")
+	for path, want := range map[string]string{"/v1/materials/FJO-ACE/certificate?valid_at=2026-07-01T00:00:00Z": "H302 Harmful if swallowed.", "/v1/materials/FJO-ACE/labels": "FJO-ACE</text>",
+		"/v1/due?days=4000": "What falls due", plan + "/prospects": "What buys the most"} {
+		a := b.want(200, request{role: registry.Auditor, method: "GET", path: path, headers: map[string]string{"Accept": "text/html"}})
+		page, policy := string(a.Body), a.Header.Get("Content-Security-Policy")
+		start, end := strings.Index(page, "<style>")+len("<style>"), strings.Index(page, "</style>")
+		if !strings.HasPrefix(page, "<!DOCTYPE html>") || !strings.Contains(page, want) || strings.Contains(page, "<script") || end < start {
+			b.t.Errorf("%s: no page with %q: %.400s", path, want, page)
+			continue
+		}
+		sum := sha256.Sum256([]byte(page[start:end]))
+		if hash := base64.StdEncoding.EncodeToString(sum[:]); !strings.Contains(policy, hash) || !strings.Contains(policy, "default-src 'none'") {
+			b.t.Errorf("%s: the policy %q does not let in the page's style", path, policy)
+		}
+	}
 }
 
 func with(m map[string]any, name string, value any) map[string]any {

@@ -46,7 +46,7 @@ func TestCampaignRecoversTheTruthAndSeesNoStep(t *testing.T) {
 		t.Fatal(err)
 	}
 	for _, v := range certificate.Values {
-		if !strings.Contains(page.String(), "<td>"+v.ValueText+"</td><td>"+v.ExpandedText+"</td>") {
+		if !strings.Contains(page.String(), `<td class="number">`+v.ValueText+`</td><td class="number">`+v.ExpandedText+"</td>") {
 			t.Errorf("the certificate's page lacks %s ± %s", v.ValueText, v.ExpandedText)
 		}
 	}

@@ -67,7 +67,8 @@ var certificatePage = template.Must(template.New("certificate").Funcs(template.F
 		}
 		return day(*at)
 	},
-	"nu": FormatOptional, "known": func(x *float64) bool { return x == nil },
+	"percent": func(x float64) float64 { return 100 * x },
+	"nu":      FormatOptional, "known": func(x *float64) bool { return x == nil },
 }).Parse(`<article class="certificate">
 <h1>Reference material {{.Certificate.Material}}: assigned values</h1>
 <p>{{.Certificate.LaboratoryName}} (laboratory {{.Certificate.Laboratory}}), {{day .Certificate.IssuedAt}}. Certificate {{.Certificate.Identifier}}.</p>
@@ -80,16 +81,17 @@ var certificatePage = template.Must(template.New("certificate").Funcs(template.F
 {{end}}{{with .Certificate.Lot}}<tr><th scope="row">Lot</th><td>{{.}}</td></tr>
 {{end}}</table>
 <table class="values"><caption>Values</caption>
-<thead><tr><th scope="col">Scale</th><th scope="col">Measurand</th><th scope="col">Value (‰)</th><th scope="col">U (‰)</th><th scope="col">k</th><th scope="col">p</th><th scope="col">Valid from</th><th scope="col">Valid until</th><th scope="col">Basis</th></tr></thead>
+<thead><tr><th scope="col">Scale</th><th scope="col">Measurand</th><th scope="col" class="number">Value (‰)</th><th scope="col" class="number">U (‰)</th><th scope="col" class="number">k</th><th scope="col">Valid from</th><th scope="col">Valid until</th><th scope="col">Basis</th></tr></thead>
 <tbody>
-{{range .Certificate.Values}}<tr><th scope="row">{{.Scale}}</th><td>{{.Measurand}}</td><td>{{.ValueText}}</td><td>{{.ExpandedText}}</td><td>{{printf "%.2f" .K}}</td><td>{{number .P}}</td><td>{{stated .ValidFrom}}</td><td>{{stated .ExpiresAt}}</td><td>{{basis .}}</td></tr>
+{{range .Certificate.Values}}<tr><th scope="row">{{.Scale}}</th><td>{{.Measurand}}</td><td class="number">{{.ValueText}}</td><td class="number">{{.ExpandedText}}</td><td class="number">{{printf "%.2f" .K}}</td><td class="day">{{stated .ValidFrom}}</td><td class="day">{{stated .ExpiresAt}}</td><td>{{basis .}}</td></tr>
 {{end}}</tbody></table>
 {{range .Certificate.Values}}<section><h2>{{.Scale}} ({{.Measurand}})</h2>
-<p>Value {{.Value}} ‰{{if eq .U 0.0}} ({{if .Exact}}exact by definition{{else}}no uncertainty is stated{{end}}){{else}}, u = {{number .U}} ‰ (k = 1), U = {{number .Expanded}} ‰ (k = {{number .K}}, p = {{number .P}}{{if known .NuEff}}, u is known{{else}}, effective degrees of freedom {{nu .NuEff}}{{end}}){{end}}. Version {{.Code}}.{{.Version}}, SHA-256 {{.Hash}}.</p>
-{{if .Budget}}<table class="budget"><caption>Budget</caption><thead><tr><th scope="col">Part</th><th scope="col">u (‰)</th><th scope="col">Share of u²</th></tr></thead><tbody>
-{{range .Budget}}<tr><th scope="row">{{.Line}}</th><td>{{number .StandardUncertainty}}</td><td>{{printf "%.3f" .Share}}</td></tr>
+<p class="stated"><span><b>{{.ValueText}} ‰</b></span><span>U = {{.ExpandedText}}{{if ne .U 0.0}} ‰{{end}}</span>{{if ne .U 0.0}}<span>k = {{printf "%.2f" .K}}</span><span>p = {{number .P}}</span>{{end}}</p>
+<p class="quiet">In full: {{.Value}} ‰{{if eq .U 0.0}} ({{if .Exact}}exact by definition{{else}}no uncertainty is stated{{end}}){{else}}, u = {{number .U}} ‰ (k = 1), U = {{number .Expanded}} ‰ (k = {{number .K}}, p = {{number .P}}{{if known .NuEff}}, u is known{{else}}, effective degrees of freedom {{nu .NuEff}}{{end}}){{end}}. Version {{.Code}}.{{.Version}}, SHA-256 <code>{{.Hash}}</code>.</p>
+{{if .Budget}}<table class="budget"><caption>Budget</caption><thead><tr><th scope="col">Part</th><th scope="col" class="number">u (‰)</th><th scope="col" class="number">Share of u²</th></tr></thead><tbody>
+{{range .Budget}}<tr><th scope="row">{{.Line}}</th><td class="number">{{printf "%.3g" .StandardUncertainty}}</td><td class="number">{{printf "%.1f" (percent .Share)}} %</td></tr>
 {{end}}</tbody></table>
-{{end}}{{if .Campaign}}<p>Campaign {{code .Campaign}}: {{.Sessions}} sessions, {{stated .First}} to {{stated .Last}}. Homogeneity: {{.Homogeneity}}. Stability: {{.Stability}}.</p>
+{{end}}{{if .Campaign}}<p>Campaign {{code .Campaign}}: {{.Sessions}} sessions, {{stated .First}} to {{stated .Last}}. Homogeneity: {{.Homogeneity}}. Stability: {{.Stability}}.{{with .MinimumPortion}} Test portions up to {{number .}} mg were measured; smaller ones were not shown to be enough.{{end}}</p>
 {{else}}{{with .Evidence}}<p>{{.}}</p>
 {{end}}{{end}}{{if .Anchors}}<table class="anchors"><caption>Traceable through</caption><thead><tr><th scope="col">Value</th><th scope="col">Delta (‰)</th><th scope="col">u (‰)</th><th scope="col">Basis</th></tr></thead><tbody>
 {{range .Anchors}}<tr><th scope="row">{{.Version}}</th><td>{{.Value}}</td><td>{{number .U}}</td><td>{{.Basis}}</td></tr>
@@ -104,8 +106,8 @@ var certificatePage = template.Must(template.New("certificate").Funcs(template.F
 </article>
 `))
 
-// WriteCertificatePage writes a certificate as a fragment of HTML.
-func WriteCertificatePage(w io.Writer, c registry.Certificate) error {
+// writeCertificate writes a certificate as a fragment of HTML.
+func writeCertificate(w io.Writer, c registry.Certificate) error {
 	type statement struct{ Name, Text string }
 	page := struct {
 		Certificate registry.Certificate

@@ -180,8 +180,8 @@ func TestCertificatePageSaysWhatTheXMLSays(t *testing.T) {
 		t.Fatal(err)
 	}
 	text := page.String()
-	for _, want := range []string{"Peat &lt;low&gt; &amp; dry", "<td>-28.012</td><td>0.046</td>", "-28.012340 ‰", "U = 0.04559 ‰ (k = 2.35, p = 0.95, effective degrees of freedom 7.25)",
-		"H319 Causes serious eye irritation.", "The safety data sheet decides.", "assigned before deltamoor", "USGS40/d13C-VPDB/total.1", "A1234-567Y8", "2026-03-30", "Mara Ø", "0.5 mg", "u is known", "-428 ‰ (exact by definition)", "21.0 ‰ (no uncertainty is stated)", "<td>none stated</td>"} {
+	for _, want := range []string{"Peat &lt;low&gt; &amp; dry", `<td class="number">-28.012</td><td class="number">0.046</td>`, "-28.012340 ‰", "U = 0.04559 ‰ (k = 2.35, p = 0.95, effective degrees of freedom 7.25)",
+		"H319 Causes serious eye irritation.", "The safety data sheet decides.", "assigned before deltamoor", "USGS40/d13C-VPDB/total.1", "A1234-567Y8", "2026-03-30", "Mara Ø", "0.5 mg", "u is known", "-428 ‰ (exact by definition)", "21.0 ‰ (no uncertainty is stated)", `<td class="number">none stated</td>`} {
 		if !strings.Contains(text, want) {
 			t.Errorf("the page lacks %q", want)
 		}

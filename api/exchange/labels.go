@@ -134,13 +134,13 @@ func (s *svgSheet) label(l registry.UnitLabel, address string, x, y, width, heig
 	s.printf(`"/>` + "\n")
 	left, line := x+side+2, y+4.5
 	room := int((width - side - 3) / 1.35) // letters of 2.6 mm that fit
+	most := func(size float64) int { return max(int(float64(room)*2.6/size), 4) }
 	write := func(size float64, bold bool, text string) {
 		if text = plainText(text); text == "" || line > y+height-1 {
 			return
 		}
-		letters := []rune(text)
-		if most := max(int(float64(room)*2.6/size), 4); len(letters) > most {
-			text = string(letters[:most-1]) + "…"
+		if letters := []rune(text); len(letters) > most(size) {
+			text = string(letters[:most(size)-1]) + "…"
 		}
 		weight := ""
 		if bold {
@@ -158,8 +158,30 @@ func (s *svgSheet) label(l registry.UnitLabel, address string, x, y, width, heig
 	if l.OpenedAt != nil {
 		write(2.6, false, "opened "+day(*l.OpenedAt))
 	}
-	write(2.6, true, strings.Join(l.Hazards, " "))
-	write(2.6, false, l.Storage)
+	for i, text := range []string{strings.Join(l.Hazards, " "), l.Storage} {
+		for text = plainText(text); text != "" && line <= y+height-1; { // the last line that fits says whether more follows
+			part, rest := firstWords(text, most(2.6))
+			if line+2.6*1.35 > y+height-1 {
+				part, rest = text, ""
+			}
+			write(2.6, i == 0, part)
+			text = rest
+		}
+	}
 	s.printf("</g>\n")
 	return nil
+}
+
+// firstWords divides a text behind the last word that fits.
+func firstWords(text string, most int) (part, rest string) {
+	letters := []rune(text)
+	if len(letters) <= most {
+		return text, ""
+	}
+	for i := most; i > 0; i-- {
+		if letters[i] == ' ' {
+			return string(letters[:i]), strings.TrimSpace(string(letters[i:]))
+		}
+	}
+	return string(letters[:most]), string(letters[most:])
 }

@@ -73,6 +73,8 @@ type CertificateValue struct {
 	Deviation   string
 	Homogeneity string // what was done, or why nothing was
 	Stability   string
+	// MinimumPortion is the largest test portion of the homogeneity study, in mg; 0 where none was recorded.
+	MinimumPortion float64
 	// Anchors are what the value is traceable through.
 	Anchors []CertificateAnchor
 }
@@ -125,7 +127,7 @@ func (r *Registry) Certificate(ctx context.Context, actor Actor, q CertificateRe
 		if err != nil {
 			return err
 		}
-		if err := out.material(key, m.Value); err != nil {
+		if err := out.material(key, m); err != nil {
 			return err
 		}
 		raws, _, err := v.List(ctx, store.ListQuery{Laboratory: actor.Laboratory, Kind: store.KindValue, Prefix: key.Code + "/", Limit: MaxPage, Moment: q.Moment})
@@ -170,18 +172,13 @@ func (c *Certificate) versions() string {
 	return strings.Join(parts, "+")
 }
 
-func (c *Certificate) material(key store.Key, m store.Material) error {
+func (c *Certificate) material(key store.Key, m store.Version[store.Material]) error {
+	b := m.Value
 	c.Material, c.MaterialLaboratory = key.Code, key.Laboratory
-	c.Name, c.Substance, c.Formula, c.Matrix, c.Producer, c.Lot = m.Name, m.Substance, m.Formula, m.Matrix, m.Producer, m.Lot
-	c.Status, c.Preparation, c.Storage, c.MinimumPortion = m.Status, m.Preparation, m.Storage, m.Minimum
-	var err error
-	if c.Hazards, err = HazardStatements(c.Language, m.Hazards); err != nil {
-		return err
-	}
-	if c.Caution = cautionOf(m); c.Caution == "" && len(m.Hazards) > 0 {
-		c.Caution = deferral
-	}
-	return nil
+	c.Name, c.Substance, c.Formula, c.Matrix, c.Producer, c.Lot, c.Status = b.Name, b.Substance, b.Formula, b.Matrix, b.Producer, b.Lot, b.Status
+	h, err := handlingOf(m, c.Language)
+	c.Preparation, c.Storage, c.MinimumPortion, c.Hazards, c.Caution = h.Preparation, h.Storage, h.MinimumPortion, h.Hazards, h.Caution
+	return err
 }
 
 const deferral = "The safety data sheet, local rules and trained staff decide how the material is handled."
@@ -232,6 +229,7 @@ func (c *Certificate) value(ctx context.Context, v *store.View, it Item[store.Va
 			}
 		}
 		out.Homogeneity, out.Stability = studies(r)
+		out.MinimumPortion = r.MinimumPortion
 	} else {
 		nu := math.Inf(1)
 		if val.DegreesOfFreedom != nil {
@@ -271,7 +269,20 @@ func studies(r *store.CampaignResult) (homogeneity, stability string) {
 		homogeneity = fmt.Sprintf("%d units, %d measurements", h.Units, h.Measurements)
 	}
 	if s := r.Stability; s != nil {
-		stability = fmt.Sprintf("%d sessions over %.0f days, for a shelf life of %g days", s.Points, s.SpanDays, r.ShelfLifeDays)
+		what := "sessions"
+		if s.Isochronous || s.Blocks > 0 {
+			what = "measurements"
+		}
+		stability = fmt.Sprintf("%d %s over %.0f days, for a shelf life of %g days", s.Points, what, s.SpanDays, r.ShelfLifeDays)
+		if s.Isochronous {
+			stability += "; units stored for different times and measured together"
+		}
+	}
+	if p := r.Prior; p != nil {
+		if stability != "" {
+			stability += "; "
+		}
+		stability += fmt.Sprintf("the study is planned for %.0f days and has run for %.0f; until it ends u = %.3g ‰ is taken from: %s", p.PlannedDays, p.SpanDays, p.StandardUncertainty, p.Evidence)
 	}
 	return homogeneity, stability
 }

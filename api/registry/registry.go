@@ -78,6 +78,9 @@ func (r *Registry) UseKey(key *ledger.Key) {
 	}
 }
 
+// Now is the registry's clock.
+func (r *Registry) Now() store.Instant { return store.InstantOf(r.now()) }
+
 // An Actor is who asks: a person acting in one laboratory with the roles and
 // scopes of a token or sign-in.
 type Actor struct {

@@ -5,7 +5,6 @@ import (
 	"time"
 
 	"deltamoor/api/registry"
-	"deltamoor/calib/assign"
 	"deltamoor/store"
 )
 
@@ -68,9 +67,49 @@ type HomogeneityPlan struct {
 
 // A StabilityPlan plans the study over time, or says why none is needed.
 type StabilityPlan struct {
-	NotNeeded     string    `json:"not_needed,omitempty" maxLength:"1000"`
-	ShelfLifeDays float64   `json:"shelf_life_days,omitempty" minimum:"0"`
-	Days          []float64 `json:"days,omitempty" maxItems:"500" doc:"Days of the measurements, for the prospects."`
+	NotNeeded     string          `json:"not_needed,omitempty" maxLength:"1000"`
+	ShelfLifeDays float64         `json:"shelf_life_days,omitempty" minimum:"0"`
+	Days          []float64       `json:"days,omitempty" maxItems:"500" doc:"Days of the measurements, for the prospects; a prior uncertainty holds until the study spans the last of them."`
+	Isochronous   bool            `json:"isochronous,omitempty" doc:"Units stored for different times are measured together."`
+	Stored        []StoredUnit    `json:"stored,omitempty" maxItems:"500" doc:"Units whose portions are the study, with their time of storage; left out: the results of the sessions over time."`
+	Prior         *PriorStability `json:"prior,omitempty" doc:"Holds while the study runs."`
+}
+
+// A StoredUnit is a unit of a stability study with its time of storage.
+type StoredUnit struct {
+	Unit string  `json:"unit"`
+	Days float64 `json:"days" minimum:"0"`
+}
+
+// A PriorStability is an uncertainty of stability taken over from elsewhere.
+type PriorStability struct {
+	U        float64  `json:"u" minimum:"0" doc:"For the shelf life (‰)."`
+	Nu       *float64 `json:"nu,omitempty" doc:"Left out: u is known."`
+	Evidence string   `json:"evidence" minLength:"1" maxLength:"1000" doc:"Where it comes from."`
+}
+
+func (s StabilityPlan) body() (store.StudyPlan, error) {
+	out := store.StudyPlan{NotNeeded: s.NotNeeded, ShelfLifeDays: s.ShelfLifeDays, Days: s.Days, Isochronous: s.Isochronous}
+	for _, u := range s.Stored {
+		code, err := parseCode("body.quantities.stability.stored", u.Unit, store.KindUnit)
+		if err != nil {
+			return out, err
+		}
+		out.Stored = append(out.Stored, store.StoredUnit{Unit: code, Days: u.Days})
+	}
+	if p := s.Prior; p != nil {
+		out.Prior = &store.Component{StandardUncertainty: p.U, DegreesOfFreedom: p.Nu, Evidence: p.Evidence}
+	}
+	return out, nil
+}
+
+func showStability(s store.StudyPlan) StabilityPlan {
+	out := StabilityPlan{NotNeeded: s.NotNeeded, ShelfLifeDays: s.ShelfLifeDays, Days: s.Days, Isochronous: s.Isochronous,
+		Stored: convertOrNil(s.Stored, func(u store.StoredUnit) StoredUnit { return StoredUnit{store.FormatCode(u.Unit), u.Days} })}
+	if p := s.Prior; p != nil {
+		out.Prior = &PriorStability{p.StandardUncertainty, p.DegreesOfFreedom, p.Evidence}
+	}
+	return out
 }
 
 // Acceptance is what the data must satisfy; what is left out is not asked for.
@@ -98,10 +137,14 @@ func (p AssignmentPlan) body() (store.Assignment, error) {
 		out.Units = append(out.Units, code)
 	}
 	for _, q := range p.Quantities {
+		stability, err := q.Stability.body()
+		if err != nil {
+			return out, err
+		}
 		out.Quantities = append(out.Quantities, store.AssignmentQuantity{Scale: q.Scale, Measurand: q.Measurand, Anchors: q.Anchors, Offered: q.Offered, Estimator: q.Estimator,
 			Weights: q.Weights, Level: q.Level, Probability: q.Probability, CoverageFactor: q.K, Planning: store.PlanningValues(q.Planning),
 			Homogeneity: store.StudyPlan{NotNeeded: q.Homogeneity.NotNeeded, Units: q.Homogeneity.Units, Measurements: q.Homogeneity.Measurements},
-			Stability:   store.StudyPlan{NotNeeded: q.Stability.NotNeeded, ShelfLifeDays: q.Stability.ShelfLifeDays, Days: q.Stability.Days},
+			Stability:   stability,
 			Acceptance:  store.AssignmentLimits(q.Acceptance)})
 	}
 	return out, nil
@@ -115,7 +158,7 @@ func showAssignment(it registry.Item[store.Assignment]) Assignment {
 		v := PlannedValue{Scale: q.Scale, Measurand: q.Measurand, Anchors: convert(q.Anchors, same), Offered: q.Offered, Estimator: q.Estimator, Weights: q.Weights, Level: q.Level,
 			Probability: q.Probability, K: q.CoverageFactor, Planning: PlanningValues(q.Planning),
 			Homogeneity: HomogeneityPlan{NotNeeded: q.Homogeneity.NotNeeded, Units: q.Homogeneity.Units, Measurements: q.Homogeneity.Measurements},
-			Stability:   StabilityPlan{NotNeeded: q.Stability.NotNeeded, ShelfLifeDays: q.Stability.ShelfLifeDays, Days: q.Stability.Days},
+			Stability:   showStability(q.Stability),
 			Acceptance:  Acceptance(q.Acceptance)}
 		if l := q.LongTerm; l != nil {
 			v.LongTerm = &LongTerm{l.StandardUncertainty, l.DegreesOfFreedom, l.Method, l.Version}
@@ -174,60 +217,6 @@ func (f *face) changeAssignment(ctx context.Context, actor registry.Actor, in *s
 		return nil, err
 	}
 	return f.plan(ctx, actor, code, in.Body.AssignmentPlan, registry.Edit{After: before.Ref.Version, Reason: in.Body.Reason})
-}
-
-// A Prospect is what a plan can be expected to give. All u and U in ‰.
-type Prospect struct {
-	U          float64 `json:"u"`
-	Expanded   float64 `json:"U"`
-	K          float64 `json:"k"`
-	P          float64 `json:"p"`
-	USessions  float64 `json:"u_sessions" doc:"The part that more sessions reduce."`
-	UAnchors   float64 `json:"u_anchors"`
-	UBetween   float64 `json:"u_bb" doc:"Homogeneity."`
-	ULongTerm  float64 `json:"u_lts" doc:"Stability."`
-	UUnreduced float64 `json:"u_unreduced" doc:"What no number of sessions goes below."`
-}
-
-func showProspect(p assign.Prospect) Prospect {
-	return Prospect{U: p.StandardUncertainty, Expanded: p.Expanded.U, K: p.Expanded.CoverageFactor, P: p.Expanded.Probability, USessions: p.SessionUncertainty,
-		UAnchors: p.AnchorUncertainty, UBetween: p.HomogeneityUncertainty, ULongTerm: p.StabilityUncertainty, UUnreduced: p.Unreduced}
-}
-
-// A PlanOption is one change of a plan and what it buys.
-type PlanOption struct {
-	Change   string   `json:"change"`
-	Gain     float64  `json:"gain_U" doc:"How much U falls (‰)."`
-	Prospect Prospect `json:"prospect"`
-}
-
-// A PlanProspect is the prospect of one value with its options.
-type PlanProspect struct {
-	Scale     string       `json:"scale"`
-	Measurand string       `json:"measurand"`
-	Prospect  Prospect     `json:"prospect"`
-	Options   []PlanOption `json:"options" doc:"What lowers U most first."`
-}
-
-// PlanProspects are the prospects of a plan's values.
-type PlanProspects struct {
-	Values []PlanProspect `json:"values"`
-}
-
-func (f *face) prospects(ctx context.Context, actor registry.Actor, in *CodeParam) (*plain[PlanProspects], error) {
-	code, err := assignmentKind.code(in.Code)
-	if err != nil {
-		return nil, err
-	}
-	list, err := f.registry.Prospects(ctx, actor, code)
-	if err != nil {
-		return nil, err
-	}
-	return &plain[PlanProspects]{PlanProspects{convert(list, func(p registry.PlanProspect) PlanProspect {
-		return PlanProspect{p.Scale, p.Measurand, showProspect(p.Prospect), convert(p.Options, func(o assign.Option) PlanOption {
-			return PlanOption{o.Change, o.GainU, showProspect(o.Prospect)}
-		})}
-	})}}, nil
 }
 
 // An AssignmentAnalysis is where a campaign stands.

@@ -70,6 +70,7 @@ type CertificateValue struct {
 	Deviation    string              `json:"deviation,omitempty"`
 	Homogeneity  string              `json:"homogeneity,omitempty"`
 	Stability    string              `json:"stability,omitempty"`
+	Minimum      float64             `json:"minimum_portion_mg,omitempty" doc:"The largest test portion of the homogeneity study."`
 	Budget       []CampaignBudget    `json:"budget"`
 	Anchors      []CertificateAnchor `json:"anchors" doc:"What the value is traceable through."`
 }
@@ -100,7 +101,7 @@ func showCertificate(c registry.Certificate) Certificate {
 			out := CertificateValue{Version: versionText(store.KindValue, v.Code, v.Version), Hash: v.Hash.String(), Scale: v.Scale, Measurand: v.Measurand, Quantity: v.Quantity, Value: Decimal(v.Value),
 				K: v.K, P: v.P, NuEff: v.NuEff, ValueText: v.ValueText, ExpandedText: v.ExpandedText, Basis: v.Basis, Evidence: v.Evidence, BackLoaded: v.BackLoaded,
 				ValidFrom: timePointer(v.ValidFrom), ExpiresAt: timePointer(v.ExpiresAt), DriftPerDay: v.DriftPerDay, Sessions: v.Sessions, First: timePointer(v.First), Last: timePointer(v.Last),
-				Estimator: v.Estimator, Deviation: v.Deviation, Homogeneity: v.Homogeneity, Stability: v.Stability,
+				Estimator: v.Estimator, Deviation: v.Deviation, Homogeneity: v.Homogeneity, Stability: v.Stability, Minimum: v.MinimumPortion,
 				Budget: convert(v.Budget, func(b store.CampaignBudget) CampaignBudget { return CampaignBudget(b) }),
 				Anchors: convert(v.Anchors, func(a registry.CertificateAnchor) CertificateAnchor {
 					return CertificateAnchor{a.Material, a.Version, Decimal(a.Value), a.U, a.Basis}
@@ -120,7 +121,7 @@ func showCertificate(c registry.Certificate) Certificate {
 
 // CertificateForm chooses between JSON, page and XML.
 type CertificateForm struct {
-	Format string `query:"format" enum:"json,html,xml" doc:"html is a fragment for printing, xml a digital calibration certificate; the header Accept does the same."`
+	Format string `query:"format" enum:"json,html,xml" doc:"html is a page for printing, xml a digital calibration certificate; the header Accept does the same."`
 	format string
 }
 
@@ -151,7 +152,7 @@ func (f *face) certificate(ctx context.Context, actor registry.Actor, in *struct
 		if err := exchange.WriteCertificatePage(&b, c); err != nil {
 			return nil, err
 		}
-		return textAnswer("text/html; charset=utf-8", b.Bytes()), nil
+		return pageAnswer(b.Bytes()), nil
 	case "xml":
 		if err := exchange.WriteDCC(&b, c, exchange.DCCOptions{Country: in.Country, Release: f.options.Version}); err != nil {
 			return nil, err

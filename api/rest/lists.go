@@ -334,6 +334,21 @@ func (p *FormatParam) Resolve(ctx huma.Context) []error {
 	return nil
 }
 
+// PrintedParam chooses between JSON, CSV and a page for printing.
+type PrintedParam struct {
+	Format string `query:"format" enum:"json,csv,html" doc:"html is a page for printing; the header Accept does the same."`
+	format string
+}
+
+// Resolve settles the form.
+func (p *PrintedParam) Resolve(ctx huma.Context) []error {
+	p.format = p.Format
+	if p.format == "" {
+		p.format = map[string]string{"text/csv": "csv", "text/html": "html"}[accepted(ctx.Header("Accept"), "application/json", "text/csv", "text/html")]
+	}
+	return nil
+}
+
 // csvAnswer writes a list that is at hand as CSV.
 func csvAnswer[T any](f *face, items []T, csv table[T]) *answer {
 	return &answer{Body: func(hc huma.Context) {

@@ -24,10 +24,12 @@ type MaterialBody struct {
 	Status      string          `json:"status,omitempty" maxLength:"100" doc:"The producer's word on it, such as current, exhausted or withdrawn."`
 	Preparation string          `json:"preparation,omitempty" maxLength:"1000"`
 	Storage     string          `json:"storage,omitempty" maxLength:"1000"`
-	Hazards     []string        `json:"hazards,omitempty" maxItems:"50" doc:"GHS hazard statements, by code."`
+	Hazards     []string        `json:"hazards,omitempty" maxItems:"50" doc:"GHS statements by code: of hazards (H, EUH) and precautions (P)."`
 	Minimum     *Amount         `json:"minimum_portion,omitempty" doc:"The smallest portion that is the material."`
 	Roles       []MaterialRoles `json:"roles,omitempty" maxItems:"50" doc:"What it may be used for; a quantity not listed may have any role."`
 	Stock       *StockRule      `json:"stock,omitempty" doc:"How its units are watched."`
+	Succeeds    string          `json:"succeeds,omitempty" maxLength:"40" doc:"The material that this one follows: it is no anchor before an approved campaign measured both side by side."`
+	Waiver      string          `json:"overlap_waiver,omitempty" maxLength:"1000" doc:"Why it may be an anchor without such a campaign; sessions that use it are flagged with the reason and who gave it."`
 	Document    string          `json:"document,omitempty" doc:"SHA-256 of the document it rests on."`
 	Provisional bool            `json:"provisional,omitempty" readOnly:"true"`
 	Note        string          `json:"note,omitempty" maxLength:"2000"`
@@ -61,7 +63,7 @@ func (m MaterialBody) body() (store.Material, error) {
 		Roles: convertOrNil(m.Roles, func(r MaterialRoles) store.MaterialRoles {
 			return store.MaterialRoles{Quantity: r.Quantity, Roles: convert(r.Roles, func(s string) calib.Role { return calib.Role(s) }),
 				From: instantPointer(r.From), To: instantPointer(r.To)}
-		}), Stock: m.Stock.body(), Document: document, Note: m.Note}, err
+		}), Stock: m.Stock.body(), Succeeds: m.Succeeds, OverlapWaiver: m.Waiver, Document: document, Note: m.Note}, err
 }
 
 func showMaterial(it registry.Item[store.Material]) Material {
@@ -71,7 +73,7 @@ func showMaterial(it registry.Item[store.Material]) Material {
 		Status: m.Status, Preparation: m.Preparation, Storage: m.Storage, Hazards: m.Hazards, Minimum: showAmount(m.Minimum),
 		Roles: convertOrNil(m.Roles, func(r store.MaterialRoles) MaterialRoles {
 			return MaterialRoles{Quantity: r.Quantity, Roles: convert(r.Roles, func(s calib.Role) string { return string(s) }), From: timePointer(r.From), To: timePointer(r.To)}
-		}), Stock: showStockRule(m.Stock), Document: hashText(m.Document), Provisional: m.Provisional, Note: m.Note}}
+		}), Stock: showStockRule(m.Stock), Succeeds: m.Succeeds, Waiver: m.OverlapWaiver, Document: hashText(m.Document), Provisional: m.Provisional, Note: m.Note}}
 }
 
 var materialTable = table[Material]{columns("name", "kind", "substance", "formula", "producer", "lot", "aliases", "status", "hazards", "provisional"),

@@ -104,6 +104,16 @@ func file(example reflect.Type, types ...string) option {
 	}
 }
 
+// headed: a table in place of JSON has these headings in its first row, in any
+// order; the first of them must be there.
+func headed(headings string, needed int) option {
+	names := strings.Split(headings, ",")
+	return func(_ *face, op *huma.Operation) {
+		op.Description = "As a table (CSV, TSV or XLSX), the first row holds the headings, in any order: " + strings.Join(names[:needed], ", ") + ", and perhaps " + strings.Join(names[needed:], ", ") +
+			". A file divided by semicolons or tabs may use decimal commas. One fault refuses the whole, naming row and column."
+	}
+}
+
 // listing: the answer is a page of a list, or the whole as CSV.
 func listing[T any](f *face, op *huma.Operation) {
 	long(f, op)

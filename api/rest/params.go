@@ -130,6 +130,10 @@ func showCode(kind store.Kind, code string) string {
 	case store.KindFinal, store.KindCalibration, store.KindSession, store.KindReport, store.KindUnit, store.KindSample,
 		store.KindAssignment, store.KindRevision, store.KindToken, store.KindExclusion, kindReported:
 		return store.FormatCode(code)
+	case store.KindStudy:
+		if campaign, rest, ok := strings.Cut(code, "/"); ok {
+			return store.FormatCode(campaign) + "/" + rest
+		}
 	case store.KindOutcome:
 		session, quantity, ok := strings.Cut(code, "/")
 		if ok {

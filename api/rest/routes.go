@@ -4,6 +4,7 @@ import (
 	"net/http"
 	"reflect"
 
+	"deltamoor/api/exchange"
 	"deltamoor/store"
 )
 
@@ -51,14 +52,23 @@ func (f *face) routes() {
 	handle(f, o(post, "/units/{code}/quarantine", "quarantineUnit", "materials", "Take a unit out of use, in doubt since its last good moment", creates, conditional), f.quarantine)
 	handle(f, o(get, "/units/{code}/affected", "listAffected", "materials", "List the sessions that used a unit since a moment, with what rests on them"), f.affected)
 	handle(f, o(get, "/materials/{code}/stock", "getStock", "materials", "Read what is left of a material, who used it, and when it runs out"), f.stock)
-	handle(f, o(get, "/materials/{code}/labels", "getLabels", "materials", "Print labels of units as a sheet", also("image/svg+xml", "One sheet, in true size.")), f.labels)
+	handle(f, o(post, "/units/import", "importUnits", "materials", "Register units from a list: all or none", creates, long,
+		file(reflect.TypeFor[ListedUnits](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes), headed(exchange.UnitHeadings, 2)), f.importUnits)
+	handle(f, o(post, "/units/uses", "logUses", "materials", "Log what happened to units outside sessions: all lines or none", creates, long,
+		file(reflect.TypeFor[LoggedUses](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes), headed(exchange.UseHeadings, 2)), f.logUses)
+	handle(f, o(get, "/materials/{code}/handling", "getHandling", "materials", "Read how a material is kept and what its hazards are"), f.handling)
+	handle(f, o(get, "/materials/{code}/depth", "getDepth", "materials", "Read how deep the values of a material stand in the hierarchy"), f.depth)
+	handle(f, o(get, "/materials/{code}/labels", "getLabels", "materials", "Print labels of units as a sheet", also("image/svg+xml", "One sheet, in true size."), also("text/html", "All sheets, as a page for printing.")), f.labels)
 	handle(f, o(get, "/materials/{code}/certificate", "getCertificate", "materials", "Read the certificate of a material's values", answers[Certificate],
-		also("text/html", "A fragment for printing."), also("application/xml", "A digital calibration certificate, schema 3.2.0.")), f.certificate)
-	handle(f, o(get, "/due", "listDue", "materials", "List what falls due: expiry, checks, successors, units beyond their limits", answers[List[DueItem]], also("text/csv", "The list.")), f.due)
+		also("text/html", "A page for printing."), also("application/xml", "A digital calibration certificate, schema 3.2.0.")), f.certificate)
+	handle(f, o(get, "/due", "listDue", "materials", "List what falls due: expiry, checks, successors, units beyond their limits", answers[List[DueItem]], also("text/csv", "The list."), also("text/html", "A page for printing.")), f.due)
 
 	const value = "/materials/{code}/values/{scale}/{measurand}"
 	handle(f, o(post, "/values/import", "backLoadValues", "materials", "Bring values assigned before: all or none, as drafts", creates, long,
-		file(reflect.TypeFor[BackLoad](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes)), f.backLoad)
+		file(reflect.TypeFor[BackLoad](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes), headed(exchange.ValueHeadings, 6)), f.backLoad)
+	handle(f, o(post, "/values/covariance", "compareValues", "materials", "Read how much assigned values share: covariance, correlation, the difference of two"), f.covariance)
+	handle(f, o(get, value+"/series", "getValueSeries", "materials", "Read the approved versions of a value, each against the one before", answers[List[ValueStep]], also("text/csv", "The series.")), f.valueSeries)
+	handle(f, o(get, value+"/monitor", "getMonitor", "materials", "Follow a value after its assignment: results, trend, the next check", long), f.monitor)
 	handle(f, o(get, "/materials/{code}/values", "listValues", "materials", "List the assigned values of a material", listing[Value]), f.materialValues)
 	handle(f, o(post, "/materials/{code}/values", "addValue", "materials", "State an assigned value: a draft", creates), f.addValue)
 	handle(f, o(get, value, "getValue", "materials", "Read the value in force"), f.value)
@@ -79,7 +89,13 @@ func (f *face) routes() {
 	handle(f, o(get, "/assignments/{code}/versions/{version}", "getAssignmentVersion", "materials", "Read one version of a plan"), versionOf(f, assignmentKind))
 	handle(f, o(get, "/assignments/{code}/decisions", "listAssignmentDecisions", "materials", "List the decisions on a plan", listing[VersionDecision]), decisionsOn(f, assignmentKind))
 	handle(f, o(post, "/assignments/{code}/decisions", "decideAssignment", "materials", "Submit, approve, decline or withdraw a plan", creates, conditional), decisionOn(f, assignmentKind))
-	handle(f, o(get, "/assignments/{code}/prospects", "getProspects", "materials", "Read the uncertainty to be expected of a plan, and what buys the most"), f.prospects)
+	handle(f, o(get, "/assignments/{code}/prospects", "getProspects", "materials", "Read the uncertainty to be expected of a plan, and what buys the most", answers[PlanProspects], also("text/html", "The plan as a page for printing.")), f.prospects)
+	handle(f, o(post, "/assignments/prospects", "evaluatePlan", "materials", "Read the uncertainty to be expected of a plan that is not stored"), f.evaluatePlan)
+	handle(f, o(get, "/assignments/{code}/simulation", "getSimulation", "materials", "Run a plan many times, with its planning values as the truth", long), f.simulation)
+	handle(f, o(post, "/assignments/simulation", "simulatePlan", "materials", "Run a plan that is not stored many times", long), f.simulatePlan)
+	handle(f, o(get, "/assignments/{code}/studies", "listStudies", "materials", "List the studies that were stated for a campaign"), f.studies)
+	handle(f, o(post, "/assignments/{code}/studies", "stateStudy", "materials", "State the measurements of homogeneity or stability of a campaign, whole", creates, conditional, long,
+		file(reflect.TypeFor[StudyBody](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes), headed(exchange.StudyHeadings, 2)), f.stateStudy)
 	handle(f, o(get, "/assignments/{code}/analysis", "analyseAssignment", "materials", "Read where a campaign stands", long), f.analyseAssignment)
 	handle(f, o(post, "/assignments/{code}/values", "concludeAssignment", "materials", "Draw up a value of an approved campaign: a draft", creates, conditional, long), f.concludeAssignment)
 	handle(f, o(get, "/assignments/{code}/trace", "traceAssignment", "trust", "Trace a plan", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, assignmentKind))
@@ -138,7 +154,7 @@ func (f *face) routes() {
 
 	handle(f, o(get, "/samples", "listSamples", "samples", "List samples", listing[Sample]), recordsOf(f, sampleKind))
 	handle(f, o(post, "/samples", "addSamples", "samples", "Put samples on the list: all or none", creates, long,
-		file(reflect.TypeFor[NewSamples](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes)), f.addSamples)
+		file(reflect.TypeFor[NewSamples](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes), headed(exchange.SampleHeadings, 3)), f.addSamples)
 	handle(f, o(get, "/samples/{code}", "getSample", "samples", "Read a sample and where it stands"), f.sample)
 	handle(f, o(get, "/samples/{code}/versions", "listSampleVersions", "samples", "List the versions of a sample", listing[Sample]), versionsOf(f, sampleKind))
 	handle(f, o(get, "/samples/{code}/versions/{version}", "getSampleVersion", "samples", "Read one version of a sample"), versionOf(f, sampleKind))

@@ -42,6 +42,39 @@ type Stock struct {
 	Forecast        *Forecast   `json:"forecast"`
 	WithoutForecast string      `json:"without_forecast,omitempty" doc:"Why there is no forecast."`
 	Units           []UnitStock `json:"units"`
+	Handling        Handling    `json:"handling"`
+}
+
+// Handling is what whoever handles a material has to know.
+type Handling struct {
+	Material    string            `json:"material"`
+	Name        string            `json:"name"`
+	Storage     string            `json:"storage,omitempty"`
+	Preparation string            `json:"preparation,omitempty"`
+	Minimum     *Amount           `json:"minimum_portion,omitempty"`
+	Language    string            `json:"language" enum:"en,de,fr,es"`
+	Hazards     []HazardStatement `json:"hazards"`
+	Caution     string            `json:"caution,omitempty" doc:"The safety data sheet, local rules and trained staff decide."`
+}
+
+func showHandling(h registry.Handling) Handling {
+	return Handling{h.Material, h.Name, h.Storage, h.Preparation, showAmount(h.MinimumPortion), h.Language, convert(h.Hazards, func(s registry.HazardStatement) HazardStatement { return HazardStatement(s) }), h.Caution}
+}
+
+// LanguageParam chooses the language of hazard statements.
+type LanguageParam struct {
+	Language string `query:"language" enum:"en,de,fr,es" doc:"Of the hazard statements; left out: en."`
+}
+
+func (f *face) handling(ctx context.Context, actor registry.Actor, in *struct {
+	CodeParam
+	LanguageParam
+}) (*plain[Handling], error) {
+	h, err := f.registry.Handling(ctx, actor, in.Code, in.Language)
+	if err != nil {
+		return nil, err
+	}
+	return &plain[Handling]{showHandling(h)}, nil
 }
 
 // A Forecast says when a material runs out, if it is used as it was.
@@ -74,8 +107,15 @@ type UnitUse struct {
 	Analyses int        `json:"analyses"`
 }
 
-func (f *face) stock(ctx context.Context, actor registry.Actor, in *CodeParam) (*plain[Stock], error) {
+func (f *face) stock(ctx context.Context, actor registry.Actor, in *struct {
+	CodeParam
+	LanguageParam
+}) (*plain[Stock], error) {
 	s, err := f.registry.Stock(ctx, actor, in.Code)
+	if err != nil {
+		return nil, err
+	}
+	handling, err := f.registry.Handling(ctx, actor, in.Code, in.Language)
 	if err != nil {
 		return nil, err
 	}
@@ -83,7 +123,7 @@ func (f *face) stock(ctx context.Context, actor registry.Actor, in *CodeParam) (
 		return UnitStock{showUnit(u.Unit), u.Left, convert(u.Uses, func(e registry.UseEntry) UnitUse {
 			return UnitUse{store.FormatCode(e.Session), timePointer(e.At), e.Readings, e.Analyses}
 		})}
-	})}
+	}), Handling: showHandling(handling)}
 	if p := s.Forecast; p != nil {
 		out.Forecast = &Forecast{p.Basis, p.Events, p.Since.Time(), p.Left, p.RatePerDay, p.URate, p.Days, p.UDays, p.RunsOut.Time(), p.Earliest.Time(), p.Latest.Time()}
 	}
@@ -92,7 +132,7 @@ func (f *face) stock(ctx context.Context, actor registry.Actor, in *CodeParam) (
 
 // A DueItem is something that has to be looked at by a day.
 type DueItem struct {
-	What     string    `json:"what" enum:"expiry,recheck,successor,opened_too_often,open_too_long,in_doubt"`
+	What     string    `json:"what" enum:"expiry,recheck,suspect,successor,opened_too_often,open_too_long,storage_excursion,in_doubt"`
 	Material string    `json:"material"`
 	Code     string    `json:"code" doc:"Of the value or unit concerned."`
 	At       time.Time `json:"at"`
@@ -105,7 +145,7 @@ var dueTable = table[DueItem]{[]string{"what", "material", "code", "at", "senten
 
 func (f *face) due(ctx context.Context, actor registry.Actor, in *struct {
 	Days float64 `query:"days" minimum:"0" maximum:"36500" doc:"How far ahead; left out: 90."`
-	FormatParam
+	PrintedParam
 }) (*answer, error) {
 	days := in.Days
 	if days == 0 {
@@ -114,6 +154,13 @@ func (f *face) due(ctx context.Context, actor registry.Actor, in *struct {
 	items, err := f.registry.Due(ctx, actor, days)
 	if err != nil {
 		return nil, err
+	}
+	if in.format == "html" {
+		var b bytes.Buffer
+		if err := exchange.WriteDuePage(&b, exchange.DueList{Laboratory: actor.Laboratory, Days: days, Now: f.registry.Now(), Items: items}); err != nil {
+			return nil, err
+		}
+		return pageAnswer(b.Bytes()), nil
 	}
 	list := convert(items, func(d registry.DueItem) DueItem {
 		return DueItem{d.What, d.Material, showSubjectCode(d.Code), d.At.Time(), d.Sentence}
@@ -188,11 +235,21 @@ func (f *face) affected(ctx context.Context, actor registry.Actor, in *struct {
 type LabelParams struct {
 	CodeParam
 	Units   []string `query:"units" doc:"Codes of units; left out: all that can still be used."`
-	Page    int      `query:"page" minimum:"1" maximum:"1000" doc:"Sheet; left out: the first."`
+	Page    int      `query:"page" minimum:"1" maximum:"1000" doc:"Sheet; left out: the first. A page for printing has all."`
+	Format  string   `query:"format" enum:"svg,html" doc:"html is a page for printing, with all sheets; the header Accept does the same."`
 	Address string   `query:"address" maxLength:"200" doc:"What the codes are resolved under; left out: the bare code." example:"https://registry.example"`
 }
 
-// labels answers with one sheet of labels, as SVG in true size.
+// Resolve settles the form.
+func (p *LabelParams) Resolve(ctx huma.Context) []error {
+	if p.Format == "" && accepted(ctx.Header("Accept"), "image/svg+xml", "text/html") == "text/html" {
+		p.Format = "html"
+	}
+	return nil
+}
+
+// labels answers with one sheet of labels, as SVG in true size, or with a page
+// of all of them.
 func (f *face) labels(ctx context.Context, actor registry.Actor, in *LabelParams) (*answer, error) {
 	var codes []string
 	for _, u := range in.Units {
@@ -207,10 +264,24 @@ func (f *face) labels(ctx context.Context, actor registry.Actor, in *LabelParams
 		return nil, err
 	}
 	var sheet bytes.Buffer
+	if in.Format == "html" {
+		if err := exchange.WriteLabelPages(&sheet, in.Code, list, exchange.LabelOptions{Address: in.Address}); err != nil {
+			return nil, complain("these sheets cannot be made", "query", "", err.Error())
+		}
+		return pageAnswer(sheet.Bytes()), nil
+	}
 	if err := exchange.WriteLabels(&sheet, list, exchange.LabelOptions{Address: in.Address, Page: max(in.Page, 1)}); err != nil {
 		return nil, complain("this sheet cannot be made", "query.page", whole(&in.Page), err.Error())
 	}
 	return textAnswer("image/svg+xml", sheet.Bytes()), nil
+}
+
+// pageAnswer is a page for printing: it shows under a policy that lets in its own style.
+func pageAnswer(data []byte) *answer {
+	return &answer{Body: func(hc huma.Context) {
+		hc.SetHeader("Content-Security-Policy", exchange.PrintPolicy())
+		textAnswer("text/html; charset=utf-8", data).Body(hc)
+	}}
 }
 
 func textAnswer(media string, data []byte) *answer {

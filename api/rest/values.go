@@ -242,6 +242,21 @@ type ValueParams struct {
 	Measurand string `path:"measurand" maxLength:"60" doc:"What of the material." example:"total"`
 }
 
+// ValueListParams name the value whose versions or decisions are listed.
+type ValueListParams struct {
+	ValueParams
+	ListParams
+}
+
+// listed answers with pages of what belongs to the value that the parameters name.
+func listed[S, T any](ctx context.Context, f *face, actor registry.Actor, in *ValueListParams, read func(code string) pages[S], show func(S) T, csv table[T]) (*answer, error) {
+	code, err := in.code(ctx, f, actor)
+	if err != nil {
+		return nil, err
+	}
+	return answerList(ctx, f, &in.ListParams, read(code), show, csv)
+}
+
 // code is the code of the value's record. The material may be named by an alias.
 func (p ValueParams) code(ctx context.Context, f *face, actor registry.Actor) (string, error) {
 	m, err := f.registry.FindMaterial(ctx, actor, p.Code, store.Moment{})
@@ -262,15 +277,11 @@ func (f *face) value(ctx context.Context, actor registry.Actor, in *struct {
 	return oneOf(ctx, f, actor, valueKind, code, 0, in.moment())
 }
 
-func (f *face) valueVersions(ctx context.Context, actor registry.Actor, in *struct {
-	ValueParams
-	ListParams
-}) (*answer, error) {
-	code, err := in.code(ctx, f, actor)
-	if err != nil {
-		return nil, err
+func (f *face) valueVersions(ctx context.Context, actor registry.Actor, in *ValueListParams) (*answer, error) {
+	read := func(code string) pages[registry.Item[store.Value]] {
+		return versionPages[store.Value](f, actor, store.KindValue, code)
 	}
-	return answerList(ctx, f, &in.ListParams, versionPages[store.Value](f, actor, store.KindValue, code), showValue, valueKind.csv)
+	return listed(ctx, f, actor, in, read, showValue, valueKind.csv)
 }
 
 func (f *face) valueVersion(ctx context.Context, actor registry.Actor, in *struct {
@@ -308,15 +319,11 @@ func (f *face) changeValue(ctx context.Context, actor registry.Actor, in *struct
 	return valueAnswer(it), nil
 }
 
-func (f *face) valueDecisions(ctx context.Context, actor registry.Actor, in *struct {
-	ValueParams
-	ListParams
-}) (*answer, error) {
-	code, err := in.code(ctx, f, actor)
-	if err != nil {
-		return nil, err
+func (f *face) valueDecisions(ctx context.Context, actor registry.Actor, in *ValueListParams) (*answer, error) {
+	read := func(code string) pages[VersionDecision] {
+		return decisionPages[store.Value](f, actor, store.KindValue, code)
 	}
-	return answerList(ctx, f, &in.ListParams, decisionPages[store.Value](f, actor, store.KindValue, code), same, decisionTable)
+	return listed(ctx, f, actor, in, read, same, decisionTable)
 }
 
 func (f *face) decideValue(ctx context.Context, actor registry.Actor, in *struct {
