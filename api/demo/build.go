@@ -34,6 +34,7 @@ func Build(ctx context.Context, reg *registry.Registry, clock *Clock, seed uint6
 		{"report", b.report},
 		{"run a campaign", b.campaign},
 		{"measure waters by laser", b.measureByLaser},
+		{"use the new standard", b.follow},
 		{"revoke the first token", b.revoke},
 	} {
 		if err := step.do(ctx); err != nil {

@@ -90,8 +90,9 @@ func TestBuiltLaboratoryVerifiesClean(t *testing.T) {
 	// session drawn up twice, the second once, three of waters, two routine ones of
 	// which one is declined. Six solids and three waters have assigned values. The
 	// campaign has three sessions in two quantities and gives two values; the laser
-	// three sessions and three values. Five mornings have an H3 factor.
-	if want := 3*2 + 2*2 + 2 + 3 + 2 + 6*2 + 3 + 28 + 28 + 3*2 + 2 + 3 + 3 + 5; v.Recomputed != want || v.Equal != want {
+	// three sessions and three values. Five mornings have an H3 factor. The session
+	// of June has two calibrations, four final values and as many lines.
+	if want := 3*2 + 2*2 + 2 + 3 + 2 + 6*2 + 3 + 28 + 28 + 3*2 + 2 + 3 + 3 + 5 + 2 + 4 + 4; v.Recomputed != want || v.Equal != want {
 		t.Errorf("recomputed %d numbers, %d of them to the bit; want %d of %d", v.Recomputed, v.Equal, want, want)
 	}
 	if len(v.Laboratories) != 2 {
@@ -142,8 +143,8 @@ func TestReportedDeltasRecoverTheTruth(t *testing.T) {
 			}
 		}
 	}
-	if n != 28 {
-		t.Errorf("%d deltas were reported, want 12 solids twice and 4 waters", n)
+	if n != 32 {
+		t.Errorf("%d deltas were reported, want 14 solids twice and 4 waters", n)
 	}
 }
 
@@ -300,8 +301,10 @@ func TestTracesEndInDefinitionsPublishedValuesAndMaterials(t *testing.T) {
 				if n.Kind == store.KindValue && n.Laboratory == store.Common {
 					published++
 				}
-				// The next day's determination of a factor follows one that held that morning.
-				if n.Kind.Decided() && n.State != store.Approved && !(n.Kind == store.KindFactor && n.State == store.Superseded) {
+				// The next day's determination of a factor follows one that held that morning, and
+				// the method has a further issue since June.
+				later := n.State == store.Superseded && (n.Kind == store.KindFactor || n.Kind == store.KindMethod && n.Code == bulkCN && n.Ref.Version == 1)
+				if n.Kind.Decided() && n.State != store.Approved && !later {
 					t.Errorf("%s rests on %s, which is %s", l.Code, n.Ref, n.State)
 				}
 			}

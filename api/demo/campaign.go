@@ -23,6 +23,8 @@ type Campaign struct {
 	Sessions              []Session
 	// Values are the drawn up and approved values, by scale.
 	Values map[string]registry.Item[store.Value]
+	// Reported is the code of a delta whose line the new standard holds.
+	Reported string
 }
 
 // campaign plans, measures, concludes and approves.
@@ -35,11 +37,11 @@ func (b *builder) campaign(ctx context.Context) error {
 	}
 	b.element[successor] = map[string]float64{"d13C": 0.51, "d15N": 0.118}
 	if _, err := b.reg.StateMaterial(ctx, b.summary.Manager, successor, store.Material{Name: "sorghum protein", Kind: "working", Substance: "gluten", Matrix: "organic solid", Producer: labName,
-		Lot: "2025-1", Storage: "closed jar over drying agent, dark, 15 to 25 °C", Minimum: &store.Amount{Value: "0.4", Unit: "mg"},
+		Lot: "2025-1", Storage: "closed jar over drying agent, dark, 15 to 25 °C", Minimum: &store.Amount{Value: "0.4", Unit: "mg"}, Succeeds: predecessor,
 		Stock: &store.StockRule{MaximumAgeDays: 1825, RecheckDays: 365, Portion: &store.Amount{Value: "0.6", Unit: "mg"}, LeadDays: 180}}, registry.Edit{}); err != nil {
 		return err
 	}
-	units, err := b.reg.AddUnits(ctx, b.summary.Manager, store.Unit{Material: successor, Label: successor + " jar", Content: &store.Amount{Value: "25", Unit: "g"}}, 4)
+	units, err := b.reg.AddUnits(ctx, b.summary.Manager, store.Unit{Material: successor, Label: successor + " jar", Container: "bottle", Content: &store.Amount{Value: "25", Unit: "g"}}, 4)
 	if err != nil {
 		return err
 	}
@@ -48,7 +50,7 @@ func (b *builder) campaign(ctx context.Context) error {
 		b.units[u.Value.Label] = u.Code
 		jars = append(jars, u.Code)
 	}
-	plan := store.Assignment{Title: "values of the successor of " + predecessor, Material: successor, Predecessor: predecessor, Methods: []string{valueCN}, Instruments: []string{burner},
+	plan := store.Assignment{Title: "values of the successor of " + predecessor, Material: successor, Methods: []string{valueCN}, Instruments: []string{burner},
 		Sessions: 3, Days: 3, Replicates: 8, Units: jars, Note: "jars drawn at random over the filling order"}
 	for _, q := range []struct {
 		scale                         string

@@ -3,6 +3,7 @@ package demo
 import (
 	"bytes"
 	"math"
+	"slices"
 	"strconv"
 	"strings"
 	"testing"
@@ -90,5 +91,44 @@ func TestShiftsPassThroughACampaignByItsStoredWeights(t *testing.T) {
 	}
 	if !seen {
 		t.Error("the campaign's value does not rest on USGS41")
+	}
+}
+
+func TestDeltaMeasuredWithTheNewStandardTracesThroughItsCampaign(t *testing.T) {
+	p, s := built(t)
+	c := s.Campaign
+	trace, err := p.Registry.Trace(t.Context(), s.Auditor, "", c.Reported, 0)
+	if err != nil {
+		t.Fatal(err)
+	}
+	at := map[string]int{}
+	for i, n := range trace.Nodes {
+		at[string(n.Kind)+" "+n.Code] = i + 1
+		if n.Leaf == "" && n.Kind == store.KindValue {
+			if trace.Cut == 0 && !slices.ContainsFunc(trace.Edges, func(e registry.TraceEdge) bool { return e.From == i }) {
+				t.Errorf("%s ends the chain without saying why", n.Title)
+			}
+		}
+	}
+	campaign, value := at["assignment "+c.Assignment], at["value "+registry.ValueCode(c.Material, scaleC, "")]
+	if campaign == 0 || value == 0 || at["scale "+scaleC] == 0 {
+		t.Fatalf("the trace of %s has campaign %d, the new value %d, the scale %d", c.Reported, campaign, value, at["scale "+scaleC])
+	}
+	anchors := 0
+	for _, e := range trace.Edges {
+		if e.From == value-1 && e.Part == "campaign" && e.To != campaign-1 {
+			t.Error("the new value rests on another campaign")
+		}
+		if to := trace.Nodes[e.To]; e.Part == "anchor" && to.Leaf != "" && to.Kind == store.KindValue && to.Laboratory == store.Common {
+			anchors++
+		}
+	}
+	// The three published values that the campaign's carbon line hangs on, in each of its sessions.
+	if anchors < 3*len(c.Sessions) {
+		t.Errorf("%d edges to published values, want those of every campaign session", anchors)
+	}
+	v, err := p.Registry.VerifyChain(t.Context(), s.Auditor, "", c.Reported, 0, nil)
+	if err != nil || !v.Clean() {
+		t.Errorf("verification of %s: %+v, %v", c.Reported, v.Findings, err)
 	}
 }

@@ -57,10 +57,11 @@ const (
 // sizes, and its raw delta.
 var capsules = blank{size: 0.3, raw: 4}
 
-// laserMapping reads the laser's file: one row for each injection.
+// laserMapping reads the laser's file: one row for each injection, of so many
+// nL: each weighs 1 µg.
 func laserMapping() *store.Mapping {
 	return &store.Mapping{Format: "csv", Encoding: "utf-8", Delimiter: ",", Decimal: ".", Zone: "UTC",
-		Columns:    store.Columns{Position: "injection", Name: "bottle label", Role: "rinse", Unit: "from bottle", Preparation: "vial", Time: "sipped (UTC)", Amount: "sip/nL", Warning: "seen"},
+		Columns:    store.Columns{Position: "injection", Name: "bottle label", Role: "rinse", Unit: "from bottle", Preparation: "vial", Time: "sipped (UTC)", Amount: "sip/nL", AmountUnit: "ug", Warning: "seen"},
 		Quantities: []store.QuantityColumns{{Quantity: "d18O", Raw: "d18O, maker's line", Size: "vapour/1000 ppm"}},
 		RoleWords:  map[string]calib.Role{"yes": calib.Conditioning}}
 }

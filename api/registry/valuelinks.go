@@ -165,12 +165,14 @@ func (r *Registry) CovarianceOfValues(ctx context.Context, actor Actor, names []
 			numbers = append(numbers, n)
 			groups = joined(groups, gs)
 		}
-		for _, a := range numbers {
+		for i, a := range numbers {
 			var covariance, correlation []float64
-			for _, b := range numbers {
+			for j, b := range numbers {
 				c := uncertain.Covariance(a, b)
 				covariance = append(covariance, c)
-				if uu := a.StandardUncertainty() * b.StandardUncertainty(); uu > 0 {
+				if i == j && c > 0 {
+					c = 1 // whatever rounding says
+				} else if uu := a.StandardUncertainty() * b.StandardUncertainty(); uu > 0 {
 					c /= uu
 				}
 				correlation = append(correlation, c)

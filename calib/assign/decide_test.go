@@ -185,7 +185,9 @@ func TestPriorStabilityHoldsWhileTheStudyRuns(t *testing.T) {
 	// u² = u_char² + u_bb² + u_lts² (ISO 33405:2024).
 	c, h := d.CharacterisationUncertainty, d.HomogeneityUncertainty
 	near(t, "u²", d.StandardUncertainty*d.StandardUncertainty, c*c+h*h+0.03*0.03, 1e-12)
-	if !slices.ContainsFunc(d.Groups, func(g uncertain.Group) bool { return g.ID == "stability:L/1/prior" && math.Abs(g.Covariance[0][0]-2*math.Pow(0.03, 4)/12) < 1e-18 }) {
+	if !slices.ContainsFunc(d.Groups, func(g uncertain.Group) bool {
+		return g.ID == "stability:L/1/prior" && math.Abs(g.Covariance[0][0]-2*math.Pow(0.03, 4)/12) < 1e-18
+	}) {
 		t.Errorf("groups %+v: want the prior variance on 12 degrees of freedom", d.Groups)
 	}
 	// A slope that is significant already counts, whatever the prior says.

@@ -52,6 +52,7 @@ func Simulate(p Plan, trials int, random *rand.Rand) (*Simulation, error) {
 	}
 	out := &Simulation{Trials: trials}
 	us, u1s := make([]float64, trials), make([]float64, trials)
+	counts := map[*float64]int{}
 	for k := range trials {
 		r, err := p.run(c, anchors, random)
 		if err != nil {
@@ -60,7 +61,7 @@ func Simulate(p Plan, trials int, random *rand.Rand) (*Simulation, error) {
 		us[k], u1s[k] = r.decision.Expanded.U, r.decision.StandardUncertainty
 		count := func(sum *float64, yes bool) {
 			if yes {
-				*sum += 1 / float64(trials)
+				counts[sum]++
 			}
 		}
 		off := math.Abs(r.decision.Value - p.Candidate)
@@ -71,6 +72,9 @@ func Simulate(p Plan, trials int, random *rand.Rand) (*Simulation, error) {
 		count(&out.NoBetween, r.characterisation.BetweenSession == 0)
 		count(&out.Floors, r.homogeneity != nil && r.homogeneity.FloorUsed)
 		count(&out.Trends, r.trend)
+	}
+	for sum, n := range counts {
+		*sum = float64(n) / float64(trials)
 	}
 	slices.Sort(us)
 	slices.Sort(u1s)
