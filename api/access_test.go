@@ -29,8 +29,10 @@ var permissions = map[string]registry.Permission{
 	"addPerson": registry.MayAdminister, "changePerson": registry.MayAdminister, "listTokens": registry.MayAdminister,
 	// Everybody may make, see and end tokens of their own; of others only administrators.
 	"addToken": registry.MayRead, "revokeToken": registry.MayAdminister, "getToken": registry.MayAdminister, "listTokenVersions": registry.MayAdminister, "getTokenVersion": registry.MayAdminister,
-	"verify": registry.MayRead, "calculateFit": registry.MayRead, "calculateConversion": registry.MayRead,
-	"addRelation": registry.MayManage, "changeRelation": registry.MayManage, "decideRelation": registry.MayApprove, "convertValue": registry.MayManage, "convertFinal": registry.MayFit,
+	"verify": registry.MayRead, "cancelJob": registry.MayManage, // or whoever started it
+	"calculateFit": registry.MayRead, "compare": registry.MayRead, "importBundle": registry.MayManage,
+	"calculateConversion": registry.MayRead,
+	"addRelation":         registry.MayManage, "changeRelation": registry.MayManage, "decideRelation": registry.MayApprove, "convertValue": registry.MayManage, "convertFinal": registry.MayFit,
 	"addFactor": registry.MayFit, "decideFactor": registry.MayApprove,
 }
 
@@ -42,6 +44,9 @@ func TestAccessOfEveryRoleToEveryRoute(t *testing.T) {
 	j.token = b.post(registry.Administrator, "/v1/tokens", map[string]any{"label": "somebody's", "roles": []any{"administrator"}}).text(t, "code")
 	j.assignment, _ = b.planCampaign()
 	j.revision, j.job = b.revise()
+	b.checkpoint() // the first one records the key
+	j.verification = b.startVerification()
+	b.work()
 	d := b.description()
 	var names []string
 	for path := range d.Paths {
@@ -148,7 +153,7 @@ func (b *bench) unchangedOf(laboratory, what string, f func()) {
 func (b *bench) fill(j journey, path string, op *operation) string {
 	b.t.Helper()
 	code := map[string]string{"scales": "d13C-VPDB-LSVEC", "relations": "C-OWN", "materials": "FJO-GLY", "units": j.unit, "instruments": "EA1", "methods": "C-solid", "sessions": j.session,
-		"calibrations": j.calibration, "samples": j.sample, "finals": j.final, "reports": j.report, "reported": j.reported, "laboratories": "TST", "people": "ana", "tokens": j.token, "assignments": j.assignment, "revisions": j.revision, "jobs": j.job}
+		"calibrations": j.calibration, "samples": j.sample, "finals": j.final, "reports": j.report, "reported": j.reported, "laboratories": "TST", "people": "ana", "tokens": j.token, "assignments": j.assignment, "revisions": j.revision, "jobs": j.job, "verification": j.verification}
 	noun := strings.Split(path, "/")[2]
 	out := strings.NewReplacer("{code}", code[noun], "{scale}", "d13C-VPDB-LSVEC", "{measurand}", "total", "{quantity}", "d13C", "{version}", "1", "{sha256}", j.upload, "{position}", "2", "{report}", j.report).Replace(path)
 	if strings.Contains(out, "{") || strings.Contains(out, "//") {
@@ -198,7 +203,7 @@ func body(operationID string, j journey) string {
 		"importReadings": map[string]any{"readings": []any{map[string]any{"name": "USGS41", "quantity": "d13C", "raw": 1}}},
 		"exclude":        map[string]any{"act": "exclude", "readings": []any{1}, "cause": "leak", "reason": "r"},
 		"stateOutcome":   map[string]any{"quantity": "d13C", "outcome": "accepted", "reason": "r"},
-		"fitSession":     map[string]any{"quantity": "d13C", "reason": "r"}, "calculateFit": json.RawMessage(lineFit),
+		"fitSession":     map[string]any{"quantity": "d13C", "reason": "r"}, "calculateFit": json.RawMessage(lineFit), "compare": map[string]any{"codes": []any{j.reported, j.reported}},
 		"addSamples": map[string]any{"samples": []any{map[string]any{"client": "c", "label": "l", "wanted": []any{map[string]any{"scale": "d13C-VPDB"}}}}},
 		"addFinal":   map[string]any{"sample": j.sample, "scale": "d13C-VPDB-LSVEC"}, "changeFinal": map[string]any{"reason": "r"},
 		"issueReport": map[string]any{"client": "Marsh survey", "title": "t", "finals": []any{j.final}},

@@ -41,7 +41,7 @@ func carbonCSV(sample string) string {
 
 // A journey remembers the codes that a whole way through the registry made.
 type journey struct {
-	sample, session, calibration, final, report, reported, unit, token, upload, assignment, revision, job string
+	sample, session, calibration, final, report, reported, unit, token, upload, assignment, revision, job, verification string
 }
 
 const csvType = "text/csv"
@@ -136,7 +136,7 @@ func TestFromMaterialToTracedDelta(t *testing.T) {
 	if got := standing.text(t, "standing.0.stage"); got != "reported" {
 		t.Errorf("the sample stands as %q, want reported", got)
 	}
-	if v := b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/verification"}); v.at(t, "clean") != true {
+	if v := b.verified(); v.at(t, "clean") != true {
 		t.Errorf("verification: %s", v.Body)
 	}
 }
@@ -169,7 +169,7 @@ func (b *bench) everything(j journey) {
 		"/v1/materials/FJO-GLY/units", "/v1/materials/FJO-GLY/values", "/v1/units", "/v1/units/" + j.unit, "/v1/units/" + j.unit + "/versions", "/v1/units/" + j.unit + "/versions/1", "/v1/units/" + j.unit + "/trace",
 		value, value + "/versions", value + "/versions/1", value + "/decisions", value + "/trace",
 		"/v1/relations", "/v1/relations/C-OWN", "/v1/relations/C-OWN/versions", "/v1/relations/C-OWN/versions/1", "/v1/relations/C-OWN/decisions",
-		"/v1/instruments/EA1/h3-factors", "/v1/instruments/EA1/h3-factors?format=csv", "/v1/instruments/EA1/h3-factors/1", "/v1/instruments/EA1/h3-factors/decisions",
+		"/v1/instruments/EA1/h3-factors/trace", "/v1/instruments/EA1/h3-factors/verification", "/v1/relations/C-OWN/trace", "/v1/relations/C-OWN/verification", "/v1/instruments/EA1/h3-factors", "/v1/instruments/EA1/h3-factors?format=csv", "/v1/instruments/EA1/h3-factors/1", "/v1/instruments/EA1/h3-factors/decisions",
 		"/v1/instruments", "/v1/instruments/EA1", "/v1/instruments/EA1/versions", "/v1/instruments/EA1/versions/1",
 		"/v1/methods", "/v1/methods/C-solid", "/v1/methods/C-solid/versions", "/v1/methods/C-solid/versions/1", "/v1/methods/C-solid/decisions",
 		"/v1/sessions", session, session + "/versions", session + "/versions/1", session + "/trace", session + "/readings", session + "/readings?limit=3", session + "/exclusions",
@@ -179,7 +179,8 @@ func (b *bench) everything(j journey) {
 		"/v1/finals", final, final + "/versions", final + "/versions/1", final + "/decisions", final + "/trace",
 		"/v1/reports", report, report + "/versions", report + "/versions/1", report + "/decisions", "/v1/reported/" + j.reported, "/v1/reported/" + j.reported + "/trace", "/v1/reported/" + j.reported + "/today",
 		"/v1/laboratories", "/v1/laboratories/TST", "/v1/people", "/v1/people/ana", "/v1/people/ana/versions", "/v1/people/ana/versions/1",
-		"/v1/ledger", "/v1/ledger/entries", "/v1/ledger/entries/3/inclusion", "/v1/ledger/consistency?first=3", "/v1/uploads/" + j.upload} {
+		"/v1/ledger", "/v1/ledger/entries", "/v1/ledger/entries/3/inclusion", "/v1/ledger/consistency?first=3", "/v1/uploads/" + j.upload, "/v1/uploads/" + j.upload + "/trace?direction=up",
+		report + "/trace", report + "/completeness", report + "/methods", report + "?format=html", report + "?format=xlsx", report + "?format=package", "/v1/samples/" + j.sample + "/trace?direction=up", "/v1/materials/FJO-GLY/trace?direction=up", "/v1/methods/C-solid/trace", "/v1/instruments/EA1/trace?direction=up", "/v1/scales/d13C-VPDB-LSVEC/trace"} {
 		b.get(registry.Manager, path)
 	}
 	for _, path := range []string{"/v1/tokens", "/v1/tokens/" + j.token, "/v1/tokens/" + j.token + "/versions", "/v1/tokens/" + j.token + "/versions/1"} {
@@ -220,13 +221,15 @@ func (b *bench) everything(j journey) {
 	b.want(200, request{role: registry.Analyst, method: "POST", path: session + "/calibrations?preview=true", body: map[string]any{"quantity": "d13C"}})
 	b.post(registry.Analyst, session+"/calibrations", map[string]any{"quantity": "d13C", "reason": "without reading 6"})
 	b.decide(registry.Signatory, calibration, "approved")
+	b.get(registry.Auditor, calibration+"/changes")
 	b.post(registry.Analyst, final+"/versions", map[string]any{"reason": "one reading less"}, "If-Match", b.newestTag(final))
 	b.decide(registry.Signatory, report, "withdrawn")
 
 	b.post(registry.Manager, "/v1/materials", map[string]any{"code": "FJO-UREA", "name": "Urea", "kind": "control"})
 	b.assign(j)
 	b.campaign()
-	b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/verification"})
+	b.verified()
+	b.answerFor(j)
 	b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/calculations/fit", body: lineFit})
 	b.checkpoint()
 

@@ -98,7 +98,7 @@ func TestEveryMeaningHasItsAnswer(t *testing.T) {
 
 // b2 is the same bench for a subtest.
 func b2(b *bench, t testing.TB) *bench {
-	return &bench{t: t, store: b.store, handler: b.handler, log: b.log, tokens: b.tokens, clock: b.clock}
+	return &bench{t: t, store: b.store, key: b.key, handler: b.handler, log: b.log, tokens: b.tokens, clock: b.clock}
 }
 
 func nextSymbol(c byte) byte {

@@ -3,6 +3,7 @@ package store_test
 import (
 	"context"
 	"crypto/sha256"
+	"fmt"
 	"slices"
 	"testing"
 
@@ -72,6 +73,28 @@ func TestWhatRestsOnAValueIsFoundAtAnyDepthOnBothEngines(t *testing.T) {
 			head, err := v.Head(ctx, lab)
 			frozen = head.At
 			return err
+		})
+		// Upwards through any part: what is checked by a value rests on it too, and
+		// each version's depth is that of its shortest way.
+		read(t, s, func(ctx context.Context, v *store.View) error {
+			var got []string
+			last := int64(-1)
+			for page := 0; page < 20; page++ {
+				n := 0
+				err := v.Above(ctx, store.AboveQuery{Laboratory: lab, Roots: []store.Ref{top}, After: last, Limit: 2}, func(a store.VersionAbove) error {
+					got = append(got, fmt.Sprintf("%s %d", a.Code, a.Depth))
+					last = a.Position
+					n++
+					return nil
+				})
+				if err != nil || n == 0 {
+					if diff := cmp.Diff([]string{"C1 1", "GLY/d13C-VPDB/total 2", "C2 1", "V1 2", "R1 3"}, got); diff != "" {
+						t.Errorf("what rests on the value of common (-want +got):\n%s", diff)
+					}
+					return err
+				}
+			}
+			return nil
 		})
 		var drafts []store.Ref
 		write(t, s, lab, func(ctx context.Context, tx *store.Tx) (err error) {

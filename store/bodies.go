@@ -180,8 +180,25 @@ type Value struct {
 	UBetweenUnits *ValueComponent `json:"u_bb,omitempty"`
 	ULongTerm     *ValueComponent `json:"u_lts,omitempty"`
 	Campaign      *CampaignResult `json:"campaign,omitempty"`
+	// Partner says of a value with the basis partner which version of which other
+	// ledger it is; Document is then the bundle that holds its chain.
+	Partner *PartnerValue `json:"partner,omitempty"`
 	// BackLoaded marks a value that was assigned before the registry was in use.
 	BackLoaded bool `json:"back_loaded,omitempty"`
+}
+
+// A PartnerValue names a version of a value in another laboratory's ledger.
+type PartnerValue struct {
+	Origin  string `json:"origin"` // of the ledger: <registry>/<laboratory>
+	Code    string `json:"code"`
+	Version int    `json:"version"`
+	Hash    Hash   `json:"hash"`
+	// Verifier is the public key that the importing person gave, or that was
+	// given for an earlier version of the same origin; Size and Root are the
+	// signed head that the chain is proved to.
+	Verifier string `json:"verifier"`
+	Size     int64  `json:"size"`
+	Root     Hash   `json:"root"`
 }
 
 // Stated is an uncertainty as its source printed it.
@@ -354,6 +371,9 @@ type FinalRule struct {
 	SessionsRequired int `json:"sessions_required,omitempty"`
 	// Rule names the combination; "" means "one accepted session".
 	Rule string `json:"rule,omitempty"`
+	// Complete asks that a report says everything that the completeness check asks
+	// for; else what is missing is only told.
+	Complete bool `json:"complete,omitempty"`
 }
 
 // Form of the body.

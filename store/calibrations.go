@@ -180,6 +180,23 @@ type Report struct {
 	Amends string       `json:"amends,omitempty"`
 	Lines  []ReportHash `json:"lines"`
 	Note   string       `json:"note,omitempty"`
+	// Conformity holds the decision rules that a statement of conformity was asked
+	// for with; empty where none was.
+	Conformity []ConformityRule `json:"conformity,omitempty"`
+}
+
+// A ConformityRule says, before the statement, how conformity is decided
+// (ISO/IEC 17025:2017, 7.8.6; JCGM 106:2012, 8).
+type ConformityRule struct {
+	Scale     string `json:"scale"`
+	Measurand string `json:"measurand"`
+	// Lower and Upper are the tolerance limits (‰); nil is open.
+	Lower *float64 `json:"lower,omitempty"`
+	Upper *float64 `json:"upper,omitempty"`
+	// Guard is the guard band in expanded uncertainties U of each line; 0 is simple acceptance.
+	Guard float64 `json:"guard"`
+	// Source says where the limits come from and who agreed on the rule.
+	Source string `json:"source"`
 }
 
 // ReportHash binds one line of a report.

@@ -124,7 +124,8 @@ const (
 			AND e.from_version = r.final_version AND e.part = 'sample' AND e.to_laboratory = r.laboratory AND e.to_kind = 'sample'
 			AND s.laboratory = r.laboratory AND s.kind = 'sample' AND s.code = e.to_code ORDER BY s.version DESC LIMIT 1)`
 
-	selectLineNow = `SELECT r.hash, ` + stateOfLine + `, (SELECT s.hash` + ofSample + `
+	selectLineNow = `SELECT r.hash, ` + stateOfLine + `, (SELECT s.hash` + ofSample + `,
+		CASE WHEN EXISTS (SELECT 1 FROM edges e WHERE e.laboratory = r.laboratory AND e.to_laboratory = r.laboratory AND e.to_kind = 'report' AND e.to_code = r.report AND e.part = 'amends') THEN 1 ELSE 0 END
 		FROM ledger_heads h CROSS JOIN tokens t CROSS JOIN reported r CROSS JOIN currents c
 		WHERE h.laboratory = $2 AND h.size = $4 AND t.laboratory = h.laboratory AND t.hash = $3
 			AND r.code = $1 AND r.laboratory = h.laboratory AND c.laboratory = r.laboratory AND c.kind = 'final' AND c.code = r.final`
@@ -144,6 +145,8 @@ type LineNow struct {
 	Hash, Sample Hash
 	// FinalState is "" where it cannot be told so.
 	FinalState State
+	// Amended tells that a report amends the one that it stands in.
+	Amended bool
 }
 
 // LineNow asks it for a holder, if the holder's token still has its row and the
@@ -152,7 +155,8 @@ type LineNow struct {
 func (s *Store) LineNow(ctx context.Context, h Holder, code string) (LineNow, error) {
 	var out LineNow
 	var line, sample []byte
-	err := s.single().q.one(s.engine.brief(ctx), selectLineNow, []any{code, h.Laboratory, h.Secret[:], h.Size}, &line, &out.FinalState, &sample)
+	var amended int
+	err := s.single().q.one(s.engine.brief(ctx), selectLineNow, []any{code, h.Laboratory, h.Secret[:], h.Size}, &line, &out.FinalState, &sample, &amended)
 	if errors.Is(err, sql.ErrNoRows) {
 		return LineNow{}, notFound("reported delta %s", FormatCode(code))
 	}
@@ -161,6 +165,7 @@ func (s *Store) LineNow(ctx context.Context, h Holder, code string) (LineNow, er
 	}
 	copy(out.Hash[:], line)
 	copy(out.Sample[:], sample)
+	out.Amended = amended != 0
 	return out, nil
 }
 

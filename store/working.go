@@ -197,6 +197,35 @@ func (v *View) Jobs(ctx context.Context, laboratory string, state JobState, limi
 	return jobs, nil
 }
 
+const selectJobsFrom = `SELECT ` + jobColumns + ` FROM jobs WHERE laboratory = $1 AND ($2 = '' OR created_at < $3 OR created_at = $3 AND code < $2)
+		ORDER BY created_at DESC, code DESC LIMIT $4`
+
+// JobsFrom returns a page of jobs, latest first, and the cursor of the next
+// page, "" at the end. Limit 0 is DefaultLimit.
+func (v *View) JobsFrom(ctx context.Context, laboratory, after string, limit int) ([]Job, string, error) {
+	code, at := "", int64(0)
+	if after != "" {
+		if _, err := fmt.Sscanf(after, "%d %s", &at, &code); err != nil {
+			return nil, "", &InvalidError{Place: "cursor", Found: after, Expected: "a cursor of the page before"}
+		}
+	}
+	var jobs []Job
+	limit = pageLimit(limit)
+	err := v.q.each(ctx, selectJobsFrom, []any{laboratory, code, at, limit + 1}, func(scan func(...any) error) error {
+		j, err := scanJob(scan)
+		jobs = append(jobs, j)
+		return err
+	})
+	if err != nil {
+		return nil, "", fmt.Errorf("list jobs of %s: %w", laboratory, err)
+	}
+	if len(jobs) <= limit {
+		return jobs, "", nil
+	}
+	last := jobs[limit-1]
+	return jobs[:limit], fmt.Sprintf("%d %s", int64(last.CreatedAt), last.Code), nil
+}
+
 // AddJob adds a waiting job. Of j only Code, Kind, Arguments, Total and
 // CreatedBy count.
 func (tx *Tx) AddJob(ctx context.Context, j Job) error {

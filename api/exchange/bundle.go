@@ -57,6 +57,7 @@ type manifest struct {
 	Registry   string                  `json:"registry"`
 	Laboratory string                  `json:"laboratory"`
 	Code       string                  `json:"code"`
+	Value      *registry.PackValue     `json:"value,omitempty"` // in a bundle, in place of code
 	Withheld   []registry.PackWithheld `json:"withheld"`
 	Files      []manifestFile          `json:"files"` // by name
 }
@@ -79,21 +80,21 @@ type namedFile struct {
 func WritePack(ctx context.Context, w io.Writer, p registry.Pack) error {
 	files, err := packFiles(ctx, p)
 	if err != nil {
-		return fmt.Errorf("write pack %s: %w", store.FormatCode(p.Code), err)
+		return fmt.Errorf("write pack %s: %w", p.Name(), err)
 	}
 	z := zip.NewWriter(w)
 	for _, f := range files {
 		// No times and no attributes: they would differ from one writing to the next.
 		part, err := z.CreateHeader(&zip.FileHeader{Name: f.name, Method: zip.Deflate})
 		if err != nil {
-			return fmt.Errorf("write pack %s: %w", store.FormatCode(p.Code), err)
+			return fmt.Errorf("write pack %s: %w", p.Name(), err)
 		}
 		if _, err := part.Write(f.data); err != nil {
-			return fmt.Errorf("write pack %s: %w", store.FormatCode(p.Code), err)
+			return fmt.Errorf("write pack %s: %w", p.Name(), err)
 		}
 	}
 	if err := z.Close(); err != nil {
-		return fmt.Errorf("write pack %s: %w", store.FormatCode(p.Code), err)
+		return fmt.Errorf("write pack %s: %w", p.Name(), err)
 	}
 	return nil
 }
@@ -128,7 +129,7 @@ func packFiles(ctx context.Context, p registry.Pack) ([]namedFile, error) {
 	slices.SortFunc(files, func(a, b namedFile) int {
 		return cmp.Or(cmp.Compare(packRank(a.name), packRank(b.name)), cmp.Compare(a.name, b.name))
 	})
-	m := manifest{Form: PackForm, Registry: p.Registry, Laboratory: p.Laboratory, Code: p.Code, Withheld: p.Withheld}
+	m := manifest{Form: PackForm, Registry: p.Registry, Laboratory: p.Laboratory, Code: p.Code, Value: p.Value, Withheld: p.Withheld}
 	text, err := manifestText(m, files)
 	if err != nil {
 		return nil, err
@@ -211,7 +212,7 @@ func openPack(r io.ReaderAt, size int64) (openedPack, error) {
 		return p, &PackError{File: packManifest, Found: fmt.Sprintf("form %.40q", p.manifest.Form), Expected: PackForm}
 	}
 	m := p.manifest
-	p.Registry, p.Laboratory, p.Code, p.Withheld = m.Registry, m.Laboratory, m.Code, m.Withheld
+	p.Registry, p.Laboratory, p.Code, p.Value, p.Withheld = m.Registry, m.Laboratory, m.Code, m.Value, m.Withheld
 	if len(p.Withheld) == 0 {
 		p.Withheld = nil
 	}
@@ -300,7 +301,7 @@ func VerifyPack(ctx context.Context, r io.ReaderAt, size int64, q registry.PackC
 	}
 	again, err := packFiles(ctx, p.Pack)
 	if err != nil {
-		return out, fmt.Errorf("write pack %s again: %w", store.FormatCode(p.Code), err)
+		return out, fmt.Errorf("write pack %s again: %w", p.Name(), err)
 	}
 	want := map[string][]byte{}
 	for _, f := range again {

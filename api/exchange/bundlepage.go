@@ -17,7 +17,11 @@ import (
 // check it by hand.
 func packReadmeText(p registry.Pack) []byte {
 	var b strings.Builder
-	fmt.Fprintf(&b, `Evidence for the reported delta %s
+	what := "Evidence for the reported delta " + p.Name()
+	if p.Value != nil {
+		what = "The chain of the assigned value " + p.Name()
+	}
+	fmt.Fprintf(&b, `%s
 of laboratory %s in the registry %s
 
 Open page.html to read what the number rests on. It needs no scripts and no
@@ -46,7 +50,7 @@ root; the root stands in the checkpoint.
 
 A pack tells what had been recorded when its checkpoints were signed. Ask the
 laboratory whether the number has been withdrawn since.
-`, store.FormatCode(p.Code), p.Laboratory, p.Registry)
+`, what, p.Laboratory, p.Registry)
 	for _, w := range p.Withheld {
 		fmt.Fprintf(&b, "\nLeft out: the upload with SHA-256 %s,\nbecause %s.\n", w.Hash, w.Reason)
 	}
@@ -70,6 +74,7 @@ type pageRow struct {
 }
 
 type pageData struct {
+	About                          string
 	Code, Laboratory, Registry     string
 	Client, Label, Sample          string
 	Quantity, Scale, Measurand     string
@@ -86,7 +91,7 @@ var packTemplate = template.Must(template.New("page").Parse(`<!DOCTYPE html>
 <head>
 <meta charset="utf-8">
 <meta name="viewport" content="width=device-width, initial-scale=1">
-<title>{{.Code}}: what it rests on</title>
+<title>{{.About}}: what it rests on</title>
 <style>
 body { font: 1rem/1.45 system-ui, sans-serif; max-width: 60rem; margin: 2rem auto; padding: 0 1rem; color: #1a1a1a; background: #fff }
 h1 { font-size: 1.5rem } h2 { font-size: 1.15rem; margin-top: 2.5rem }
@@ -100,21 +105,21 @@ code { font-size: .85em; overflow-wrap: anywhere } .quiet { color: #555 }
 </head>
 <body>
 <main>
-<h1>Reported delta {{.Code}}</h1>
-<p class="value">{{.Value}} ‰ ± {{.Expanded}} ‰</p>
+<h1>{{if .Code}}Reported delta {{.Code}}{{else}}Assigned value {{.About}}{{end}}</h1>
+<p class="value">{{.Value}} ‰ {{if .Code}}± {{.Expanded}}{{else}}u = {{.U}}{{end}} ‰</p>
 <dl>
-<dt>quantity, scale</dt><dd>{{.Quantity}} on {{.Scale}}{{if ne .Measurand "total"}}, {{.Measurand}}{{end}}</dd>
+{{if .Code}}<dt>quantity, scale</dt><dd>{{.Quantity}} on {{.Scale}}{{if ne .Measurand "total"}}, {{.Measurand}}{{end}}</dd>
 <dt>uncertainty</dt><dd>expanded, coverage factor k = {{.K}}, coverage probability {{.P}}; standard uncertainty {{.U}} ‰</dd>
 <dt>full value</dt><dd>{{.Full}} ‰</dd>
 <dt>sample</dt><dd>{{.Sample}}{{if .Label}}, called “{{.Label}}” by {{.Client}}{{end}}</dd>
 <dt>report</dt><dd>{{.Report}}, issued {{.Issued}} by {{.IssuedBy}}</dd>
-<dt>laboratory</dt><dd>{{.Laboratory}} in the registry {{.Registry}}</dd>
+{{end}}<dt>laboratory</dt><dd>{{.Laboratory}} in the registry {{.Registry}}</dd>
 {{- if .Flags}}
 <dt>flags</dt><dd>{{range $i, $f := .Flags}}{{if $i}}, {{end}}{{$f}}{{end}}</dd>
 {{- end}}
 </dl>
 <h2>What it rests on</h2>
-<p class="quiet">Every version below is in this pack in the bytes that were hashed. Generations count from the report downwards.</p>
+<p class="quiet">Every version below is in this pack in the bytes that were hashed. Generations count from {{if .Code}}the report{{else}}the value{{end}} downwards.</p>
 {{range .Rows}}<article id="{{.ID}}">
 <h3>{{.Title}}</h3>
 <p>{{if .Value}}<strong>{{.Value}}</strong>. {{end}}{{.What}}, generation {{.Generation}}{{if .Leaf}}; here the chain ends: {{.Leaf}}{{end}}.</p>
@@ -144,13 +149,16 @@ func packPageText(ctx context.Context, p registry.Pack) ([]byte, error) {
 	if err != nil {
 		return nil, err
 	}
-	d := trace.Reported
-	decimals := decimalsOf(d.StandardUncertainty)
-	data := pageData{Code: store.FormatCode(p.Code), Laboratory: p.Laboratory, Registry: p.Registry, Client: d.Client, Label: d.Label, Sample: store.FormatCode(d.Sample),
-		Quantity: d.Quantity, Scale: d.Scale, Measurand: d.Measurand, Value: fixed(d.Value, decimals), U: fixed(d.StandardUncertainty, decimals),
-		Expanded: fixed(d.Expanded, decimals), K: strconv.FormatFloat(d.K, 'f', 2, 64), P: strconv.FormatFloat(d.Probability, 'g', 4, 64),
-		Full: strconv.FormatFloat(d.Value, 'g', -1, 64), Issued: moment(d.IssuedAt), IssuedBy: d.IssuedBy, Report: store.FormatCode(d.Report), Flags: d.Flags,
-		Ledgers: p.Ledgers, Withheld: p.Withheld}
+	data := pageData{About: p.Name(), Laboratory: p.Laboratory, Registry: p.Registry, Ledgers: p.Ledgers, Withheld: p.Withheld}
+	if d := trace.Reported; d != nil {
+		decimals := decimalsOf(d.StandardUncertainty)
+		data.Code, data.Client, data.Label, data.Sample = store.FormatCode(p.Code), d.Client, d.Label, store.FormatCode(d.Sample)
+		data.Quantity, data.Scale, data.Measurand, data.Value, data.U = d.Quantity, d.Scale, d.Measurand, fixed(d.Value, decimals), fixed(d.StandardUncertainty, decimals)
+		data.Expanded, data.K, data.P = fixed(d.Expanded, decimals), strconv.FormatFloat(d.K, 'f', 2, 64), strconv.FormatFloat(d.Probability, 'g', 4, 64)
+		data.Full, data.Issued, data.IssuedBy, data.Report, data.Flags = strconv.FormatFloat(d.Value, 'g', -1, 64), moment(d.IssuedAt), d.IssuedBy, store.FormatCode(d.Report), d.Flags
+	} else if n := trace.Nodes[0]; n.Value != nil && n.StandardUncertainty != nil {
+		data.Value, data.U = fixed(*n.Value, decimalsOf(*n.StandardUncertainty)), fixed(*n.StandardUncertainty, decimalsOf(*n.StandardUncertainty))
+	}
 	for i, n := range trace.Nodes {
 		row := pageRow{Generation: n.Depth, Title: n.Title, What: fmt.Sprintf("%s %s, version %d", n.Kind, store.FormatCode(n.Code), n.Version), Detail: n.Detail,
 			File: registry.PackVersionFile(n.Ref), Hash: n.Hash.String(), Recorded: moment(n.RecordedAt), By: n.RecordedBy, Reason: n.Reason, Leaf: n.Leaf, ID: "v" + strconv.Itoa(i)}

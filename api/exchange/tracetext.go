@@ -37,6 +37,9 @@ func WriteTrace(w io.Writer, t registry.Trace) error {
 		tw.node(0, 0, registry.TraceEdge{})
 	}
 	p.Line("")
+	for _, sentence := range ShareSentences(t) {
+		p.Paragraph("", sentence)
+	}
 	p.Paragraph("", tw.ends())
 	return p.Err()
 }
@@ -190,4 +193,20 @@ func (t *traceText) ends() string {
 		text += fmt.Sprintf(" %d further ones were not followed.", t.trace.Cut)
 	}
 	return text
+}
+
+// WriteAbove writes what rests on a version as text: one line for each version.
+func WriteAbove(w io.Writer, t registry.Trace) error {
+	p := NewTextPage(w)
+	for _, n := range t.Nodes {
+		text := n.Title
+		if n.Value != nil && n.StandardUncertainty != nil {
+			text += " = " + deltaText(n) + " ‰"
+		}
+		text += "; " + history(n)
+		p.Paragraph(strings.Repeat("  ", min(n.Depth, 12)), text)
+	}
+	p.Line("")
+	p.Paragraph("", Count(max(len(t.Nodes)-1, 0), "version rests", "versions rest")+" on it here.")
+	return p.Err()
 }

@@ -275,7 +275,7 @@ func TestSessionsShareTheBottleTheyUsedAndNoOther(t *testing.T) {
 	for _, l := range rep.Lines {
 		codes = append(codes, l.Code)
 	}
-	c, err := b.Compare(b.ctx, b.auditor, codes)
+	c, err := b.Compare(b.ctx, b.auditor, codes, 0)
 	b.must(err)
 	// cov = Σ c1·c2·u² over shared sources (metrology 1): one bottle adds c1·c2·u_bb² to what PEAT-LO's
 	// value and USGS41 share anyway; the four sessions are alike but for the bottle.

@@ -3,6 +3,10 @@ package registry
 import (
 	"context"
 	"fmt"
+	"math"
+	"slices"
+
+	"gonum.org/v1/gonum/stat/distuv"
 
 	"deltamoor/calib/uncertain"
 	"deltamoor/store"
@@ -30,15 +34,42 @@ type PairComparison struct {
 	Correlation      float64
 	Expanded         uncertain.Expanded
 	Zeta, En         *float64
-	Different        bool
+	// PValue is the probability of a difference as large or larger if both were
+	// alike, by Student's t at the difference's ν_eff; nil for u = 0.
+	PValue    *float64
+	Different bool
+}
+
+// Verdict says in words whether the two differ.
+func (p PairComparison) Verdict() string {
+	if p.StandardUncertainty == 0 {
+		if p.Different {
+			return "they differ: both are exact"
+		}
+		return "they are the same: both are exact"
+	}
+	word := "no difference is shown"
+	if p.Different {
+		word = "they differ"
+	}
+	return fmt.Sprintf("%s at a coverage probability of %g %%", word, 100*p.Expanded.Probability)
 }
 
 // MaxCompared bounds the deltas of one comparison.
 const MaxCompared = 200
 
-// Compare sets two or more reported deltas against each other.
-func (r *Registry) Compare(ctx context.Context, actor Actor, codes []string) (Comparison, error) {
+// Compare sets two or more reported deltas against each other, each once. The
+// coverage probability 0 means that of the first.
+func (r *Registry) Compare(ctx context.Context, actor Actor, codes []string, probability float64) (Comparison, error) {
 	var out Comparison
+	if !(probability >= 0 && probability < 1) {
+		return out, Complain("nothing to compare", []Complaint{{Place: "body.probability", Found: fmt.Sprint(probability), Expected: "a probability between 0 and 1"}})
+	}
+	for i, code := range codes {
+		if j := slices.Index(codes, code); j < i {
+			return out, Complain("nothing to compare", []Complaint{{Place: fmt.Sprintf("body.codes[%d]", i), Found: store.FormatCode(code), Expected: fmt.Sprintf("each delta once; body.codes[%d] is the same", j)}})
+		}
+	}
 	if len(codes) < 2 || len(codes) > MaxCompared {
 		return out, Complain("nothing to compare", []Complaint{{Place: "body.codes", Found: fmt.Sprintf("%d codes", len(codes)), Expected: fmt.Sprintf("2 to %d codes of reported deltas", MaxCompared)}})
 	}
@@ -75,12 +106,12 @@ func (r *Registry) Compare(ctx context.Context, actor Actor, codes []string) (Co
 				}
 			}
 		}
-		return out.judge(numbers, groups)
+		return out.judge(numbers, groups, probability)
 	})
 	return out, err
 }
 
-func (c *Comparison) judge(numbers []uncertain.Number, groups []uncertain.Group) error {
+func (c *Comparison) judge(numbers []uncertain.Number, groups []uncertain.Group, probability float64) error {
 	c.Covariance = make([][]float64, len(numbers))
 	for i := range numbers {
 		c.Covariance[i] = make([]float64, len(numbers))
@@ -88,7 +119,10 @@ func (c *Comparison) judge(numbers []uncertain.Number, groups []uncertain.Group)
 			c.Covariance[i][j] = uncertain.Covariance(numbers[i], numbers[j])
 		}
 	}
-	coverage := uncertain.Coverage{Probability: c.Deltas[0].Probability}
+	coverage := uncertain.Coverage{Probability: probability}
+	if probability == 0 {
+		coverage.Probability = c.Deltas[0].Probability
+	}
 	if len(numbers) == 2 {
 		p, err := uncertain.Compare(numbers[0], numbers[1], groups, coverage)
 		if err != nil {
@@ -97,6 +131,10 @@ func (c *Comparison) judge(numbers []uncertain.Number, groups []uncertain.Group)
 		c.Pair = &PairComparison{Difference: p.Difference.Value, StandardUncertainty: p.StandardUncertainty, RootSumOfSquares: p.RootSumOfSquares,
 			Correlation: p.Correlation, Zeta: p.Zeta, En: p.En, Different: p.Different,
 			Expanded: uncertain.Expanded{U: p.CoverageFactor * p.StandardUncertainty, CoverageFactor: p.CoverageFactor, Probability: coverage.Probability, DegreesOfFreedom: p.DegreesOfFreedom}}
+	}
+	if p := c.Pair; p != nil && p.Zeta != nil {
+		value := 2 * studentTail(math.Abs(*p.Zeta), p.Expanded.DegreesOfFreedom)
+		p.PValue = &value
 	}
 	weights := make([]float64, len(numbers))
 	shared := map[string]int{}
@@ -158,4 +196,13 @@ func finalNumber(ctx context.Context, v source, f store.Version[store.Final]) (u
 	}
 	n, _, err = convert(rel, original.Value.Scale, n)
 	return n, groups, err
+}
+
+// studentTail is P(T > t) of Student's t with ν degrees of freedom, of the
+// normal distribution for ν infinite.
+func studentTail(t, nu float64) float64 {
+	if math.IsInf(nu, 1) || nu <= 0 {
+		return distuv.UnitNormal.Survival(t)
+	}
+	return distuv.StudentsT{Mu: 0, Sigma: 1, Nu: nu}.Survival(t)
 }

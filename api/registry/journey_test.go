@@ -232,7 +232,7 @@ func TestDifferenceOfTwoDeltasOfOneSessionCancelsWhatTheyShare(t *testing.T) {
 	rows = append(rows[:8:8], row{two, "", -18.9}, row{two, "", -18.9}, row{"USGS40", "", -26.39}, row{"USGS41", "", 37.63})
 	b.approvedResult(b.session(rows).Session.Code)
 	rep := b.report("Marsh survey", b.final(one), b.final(two))
-	c, err := b.Compare(b.ctx, b.auditor, []string{rep.Lines[0].Code, rep.Lines[1].Code})
+	c, err := b.Compare(b.ctx, b.auditor, []string{rep.Lines[0].Code, rep.Lines[1].Code}, 0)
 	b.must(err)
 	if c.Pair == nil || !(c.Pair.StandardUncertainty < 0.9*c.Pair.RootSumOfSquares) || !(c.Pair.Correlation > 0.1) {
 		t.Errorf("pair %+v: want u of the difference below the root sum of squares, since the anchors are shared", c.Pair)
@@ -256,10 +256,10 @@ func TestTraceUpFindsWhatRestsOnAnAnchor(t *testing.T) {
 	sample := b.sample("Marsh survey", "A1")
 	c := b.approvedResult(b.session(carbonRows(sample)).Session.Code)
 	rep := b.report("Marsh survey", b.final(sample))
-	up, err := b.TraceUp(b.ctx, b.auditor, store.KindValue, registry.ValueCode("USGS40", "d13C-VPDB-LSVEC", ""), 0)
+	up, err := b.TraceAbove(b.ctx, b.auditor, registry.AboveRequest{Kind: store.KindValue, Code: registry.ValueCode("USGS40", "d13C-VPDB-LSVEC", "")})
 	b.must(err)
 	found := map[string]bool{}
-	for _, n := range up.Nodes {
+	for _, n := range up.Trace.Nodes {
 		found[string(n.Kind)+" "+n.Code] = true
 	}
 	for _, want := range []string{"calibration " + c.Code, "report " + rep.Code} {

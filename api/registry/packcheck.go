@@ -37,6 +37,7 @@ func (f PackFinding) String() string {
 // A PackVerification is the outcome of checking and recomputing a pack.
 type PackVerification struct {
 	Registry, Laboratory, Code string
+	Value                      *PackValue // in a bundle, in place of Code
 	// Versions, Readings and Uploads count what was hashed again.
 	Versions, Readings, Uploads int
 	// Recomputed counts calibrations, final values, assigned values and the
@@ -68,7 +69,7 @@ type PackLedgerVerification struct {
 // calibration, assigned value, final value and the report's line again, with
 // the code that computes what is stored.
 func VerifyPack(ctx context.Context, p Pack, q PackCheckRequest) PackVerification {
-	c := packChecker{p: p, out: PackVerification{Registry: p.Registry, Laboratory: p.Laboratory, Code: p.Code}}
+	c := packChecker{p: p, out: PackVerification{Registry: p.Registry, Laboratory: p.Laboratory, Code: p.Code, Value: p.Value}}
 	c.src = packSource{raws: map[wantedVersion]store.Raw{}, readings: map[string][]store.Reading{}, decisions: map[wantedVersion][]store.Version[store.Decision]{}}
 	c.entries()
 	c.bodies()
@@ -91,7 +92,7 @@ func PackTrace(ctx context.Context, p Pack) (Trace, error) {
 	c.src = packSource{raws: map[wantedVersion]store.Raw{}, readings: map[string][]store.Reading{}, decisions: map[wantedVersion][]store.Version[store.Decision]{}}
 	c.entries()
 	c.bodies()
-	report, line, err := c.reportLine()
+	report, line, err := c.start()
 	if err != nil {
 		return Trace{}, err
 	}
@@ -99,6 +100,9 @@ func PackTrace(ctx context.Context, p Pack) (Trace, error) {
 	t := tracer{v: c.src, trace: &out, at: map[store.Ref]int{}, through: map[store.Ref]string{}}
 	if err := t.walk(ctx, report.Ref, line); err != nil {
 		return Trace{}, err
+	}
+	if p.Value != nil {
+		return out, nil
 	}
 	d, err := c.reported(ctx, report, line)
 	out.Reported = &d
@@ -417,7 +421,7 @@ func (c *packChecker) consistent(l PackLedger, proof []store.Hash, older ledger.
 
 // inputs checks that what versions rest on is there, with the hash they name.
 func (c *packChecker) inputs() {
-	_, line, lineErr := c.reportLine()
+	_, line, lineErr := c.start()
 	for _, raw := range c.intact {
 		file := c.files[wantedOf(raw.Ref)]
 		for j, in := range raw.Inputs {

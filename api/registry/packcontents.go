@@ -148,9 +148,9 @@ func boundUpload(raw store.Raw) *store.Hash {
 
 // reach refuses versions that the reported delta does not rest on.
 func (c *packChecker) reach() {
-	report, line, err := c.reportLine()
+	report, line, err := c.start()
 	if err != nil {
-		c.find("pack.json", err.Error(), "a report of the pack with a line "+store.FormatCode(c.p.Code))
+		c.find("pack.json", err.Error(), "what the pack is about, "+c.p.Name())
 		return
 	}
 	seen := map[wantedVersion]bool{wantedOf(report.Ref): true}
@@ -178,9 +178,21 @@ func (c *packChecker) reach() {
 	}
 	for _, raw := range c.intact {
 		if !seen[wantedOf(raw.Ref)] && !(raw.Kind == store.KindKey && raw.Code == KeyCode) {
-			c.find(c.files[wantedOf(raw.Ref)], "a version that nothing in the pack rests on", "only the chain of "+store.FormatCode(c.p.Code))
+			c.find(c.files[wantedOf(raw.Ref)], "a version that nothing in the pack rests on", "only the chain of "+c.p.Name())
 		}
 	}
+}
+
+// start finds the version that the pack is about, and which line of it is meant.
+func (c *packChecker) start() (store.Raw, int, error) {
+	if c.p.Value == nil {
+		return c.reportLine()
+	}
+	raw, ok := c.src.raws[wantedVersion{store.Key{Laboratory: c.p.Laboratory, Kind: store.KindValue, Code: c.p.Value.Code}, c.p.Value.Version}]
+	if !ok {
+		return raw, -1, fmt.Errorf("no intact version %s", c.p.Name())
+	}
+	return raw, -1, nil
 }
 
 // reportLine finds the report that has the pack's code, and the index of the line.
@@ -242,6 +254,9 @@ func (c *packChecker) recompute(ctx context.Context) {
 		}
 		c.out.Recomputed += again.recomputed
 		c.out.Equal += again.equal
+	}
+	if c.p.Value != nil {
+		return // the value was computed again with the others
 	}
 	report, line, err := c.reportLine()
 	if err != nil {

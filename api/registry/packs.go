@@ -19,12 +19,28 @@ import (
 type Pack struct {
 	// Registry, Laboratory and Code say which reported delta it is.
 	Registry, Laboratory, Code string
-	Versions                   []PackVersion // by file
-	Readings                   []PackReadings
-	Uploads                    []PackUpload
+	// Value is set, in place of Code, in a bundle: the chain of one assigned value.
+	Value    *PackValue
+	Versions []PackVersion // by file
+	Readings []PackReadings
+	Uploads  []PackUpload
 	// Withheld lists uploads that were left out because they name samples of other clients.
 	Withheld []PackWithheld
 	Ledgers  []PackLedger // by laboratory
+}
+
+// A PackValue names the version of an assigned value that a bundle is about.
+type PackValue struct {
+	Code    string `json:"code"`
+	Version int    `json:"version"`
+}
+
+// Name says what the pack is about: the code of a reported delta, or a version of a value.
+func (p Pack) Name() string {
+	if p.Value != nil {
+		return fmt.Sprintf("%s.%d", p.Value.Code, p.Value.Version)
+	}
+	return store.FormatCode(p.Code)
 }
 
 // A PackVersion is the canonical body of one version.
@@ -146,20 +162,25 @@ func (r *Registry) pack(ctx context.Context, actor Actor, code string, all bool)
 	if _, err := r.Reported(ctx, actor, code); err != nil {
 		return Pack{}, err
 	}
+	return r.collect(ctx, actor, Pack{Registry: r.name, Laboratory: actor.Laboratory, Code: code}, all)
+}
+
+// collect fills a pack, having signed the heads of its ledgers where there is a key.
+func (r *Registry) collect(ctx context.Context, actor Actor, pack Pack, all bool) (Pack, error) {
 	if key := r.key.Load(); key != nil {
 		for _, laboratory := range []string{actor.Laboratory, store.Common} {
 			if _, err := r.SignCheckpoint(ctx, laboratory, *key); err != nil {
-				return Pack{}, fmt.Errorf("pack %s: %w", store.FormatCode(code), err)
+				return Pack{}, fmt.Errorf("pack %s: %w", pack.Name(), err)
 			}
 		}
 	}
 	var p packer
 	err := r.read(ctx, actor, func(ctx context.Context, v *store.View) error {
-		p = packer{r: r, v: v, all: all, at: map[store.Ref]int64{}, pack: Pack{Registry: r.name, Laboratory: actor.Laboratory, Code: code}}
+		p = packer{r: r, v: v, all: all, at: map[store.Ref]int64{}, pack: pack}
 		return p.collect(ctx)
 	})
 	if err != nil {
-		return Pack{}, fmt.Errorf("pack %s: %w", store.FormatCode(code), err)
+		return Pack{}, fmt.Errorf("pack %s: %w", pack.Name(), err)
 	}
 	return p.pack, nil
 }
@@ -174,22 +195,32 @@ type packer struct {
 }
 
 func (p *packer) collect(ctx context.Context) error {
-	d, err := reported(ctx, p.v, p.pack.Laboratory, p.pack.Code)
-	if err != nil {
-		return err
-	}
-	p.client = d.Client
-	report, err := p.v.Newest(ctx, store.Key{Laboratory: d.Laboratory, Kind: store.KindReport, Code: d.Report})
-	if err != nil {
-		return err
+	start, line := store.Ref{}, -1
+	if p.pack.Value != nil {
+		raw, err := p.v.Version(ctx, store.Key{Laboratory: p.pack.Laboratory, Kind: store.KindValue, Code: p.pack.Value.Code}, p.pack.Value.Version)
+		if err != nil {
+			return err
+		}
+		start = raw.Ref
+	} else {
+		d, err := reported(ctx, p.v, p.pack.Laboratory, p.pack.Code)
+		if err != nil {
+			return err
+		}
+		p.client = d.Client
+		report, err := p.v.Newest(ctx, store.Key{Laboratory: d.Laboratory, Kind: store.KindReport, Code: d.Report})
+		if err != nil {
+			return err
+		}
+		start, line = report.Ref, d.Line
 	}
 	var trace Trace
 	t := tracer{v: p.v, trace: &trace, at: map[store.Ref]int{}, through: map[store.Ref]string{}}
-	if err := t.walk(ctx, report.Ref, d.Line); err != nil {
+	if err := t.walk(ctx, start, line); err != nil {
 		return err
 	}
 	if trace.Cut > 0 {
-		return Refuse(TooLarge, "%s rests on more than %d versions: too many for one pack", store.FormatCode(p.pack.Code), MaxTrace)
+		return Refuse(TooLarge, "%s rests on more than %d versions: too many for one pack", p.pack.Name(), MaxTrace)
 	}
 	for _, n := range trace.Nodes {
 		if err := p.version(ctx, n.Ref); err != nil {

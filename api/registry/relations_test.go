@@ -123,9 +123,9 @@ func TestConvertedFinalValueTracesThroughItsRelation(t *testing.T) {
 		t.Error("the trace does not go from the converted value to the original")
 	}
 	// The constants are common to both, so they cancel in the difference.
-	c, err := b.Compare(b.ctx, b.auditor, []string{rep.Lines[0].Code, rep.Lines[1].Code})
+	c, err := b.Compare(b.ctx, b.auditor, []string{rep.Lines[0].Code, rep.Lines[1].Code}, 0)
 	b.must(err)
-	original, err := b.Compare(b.ctx, b.auditor, []string{b.report("Marsh survey", first.Code).Lines[0].Code, b.report("Marsh survey", other.Code).Lines[0].Code})
+	original, err := b.Compare(b.ctx, b.auditor, []string{b.report("Marsh survey", first.Code).Lines[0].Code, b.report("Marsh survey", other.Code).Lines[0].Code}, 0)
 	b.must(err)
 	near(t, "u of the difference", c.Pair.StandardUncertainty, 1.03092*original.Pair.StandardUncertainty, 1e-6)
 	b.verified()

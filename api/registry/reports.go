@@ -17,6 +17,8 @@ type ReportRequest struct {
 	Amends string
 	Reason string
 	Note   string
+	// Conformity holds decision rules for a statement of conformity; none asks for none.
+	Conformity []store.ConformityRule
 }
 
 // MaxLines bounds one report.
@@ -26,6 +28,10 @@ const MaxLines = 5000
 type Report struct {
 	Item[store.Report]
 	Lines []ReportedDelta
+	// AmendedBy are the codes of reports that replace it, newest last.
+	AmendedBy []string
+	// Missing names what the completeness check misses; filled in when it is issued.
+	Missing []string
 }
 
 // A ReportedDelta is one line of a report: the delta that a permanent code stands for.
@@ -41,6 +47,10 @@ type ReportedDelta struct {
 	FinalState  store.State
 	Flags       []string
 	EffectiveDF *float64
+	// Conformity is stated where the report holds a rule for the line.
+	Conformity *ConformityStatement
+	// Amends is the code of the report that its own amends; "" where it amends none.
+	Amends string
 }
 
 // Issue makes a report of approved final values. Every line gets a permanent
@@ -55,17 +65,22 @@ func (r *Registry) Issue(ctx context.Context, actor Actor, q ReportRequest) (Rep
 	if q.Amends != "" && q.Reason == "" {
 		c.add("body.reason", "nothing", "why the report is amended")
 	}
+	for i := range q.Conformity {
+		q.Conformity[i].Measurand = nameOr(q.Conformity[i].Measurand, Total)
+	}
+	checkConformity(&c, q.Conformity)
 	if err := Complain("this report cannot be issued", c); err != nil {
 		return Report{}, err
 	}
 	var code string
+	var missing []string
 	err := r.write(ctx, actor, MayApprove, func(ctx context.Context, tx *store.Tx) error {
 		var err error
 		if code, err = r.draw(ctx, &tx.View, actor.Laboratory, 'R'); err != nil {
 			return err
 		}
 		var inputs []store.Input
-		body := store.Report{Client: q.Client, Title: q.Title, Amends: q.Amends, Note: q.Note}
+		body := store.Report{Client: q.Client, Title: q.Title, Amends: q.Amends, Note: q.Note, Conformity: q.Conformity}
 		var c complaints
 		seen := map[string]int{}
 		for i, final := range q.Finals {
@@ -105,6 +120,19 @@ func (r *Registry) Issue(ctx context.Context, actor Actor, q ReportRequest) (Rep
 		if err := Complain("this report cannot be issued", c); err != nil {
 			return err
 		}
+		facts, err := factsOf(ctx, &tx.View, lineFinals(inputs))
+		if err != nil {
+			return err
+		}
+		check := CheckCompleteness(facts)
+		missing = check.MissingItems()
+		if !check.Complete {
+			for _, m := range facts.Methods {
+				if m.Value.Final.Complete {
+					return incomplete(m, check)
+				}
+			}
+		}
 		ref, err := tx.Append(ctx, store.Draft{Kind: store.KindReport, Code: code, By: actor.Person, Reason: q.Reason, Inputs: inputs, Value: body, After: first})
 		if err != nil {
 			return err
@@ -118,7 +146,20 @@ func (r *Registry) Issue(ctx context.Context, actor Actor, q ReportRequest) (Rep
 	if err != nil {
 		return Report{}, err
 	}
-	return r.Report(ctx, actor, code)
+	out, err := r.Report(ctx, actor, code)
+	out.Missing = missing
+	return out, err
+}
+
+// incomplete refuses a report that says less than its method asks for.
+func incomplete(m store.Version[store.Method], check Completeness) error {
+	var c complaints
+	for _, it := range check.Items {
+		if it.State == Missing {
+			c.add(it.ID, it.Where, "%s", it.Asks)
+		}
+	}
+	return Complain(fmt.Sprintf("this report would be incomplete, and method %s.%d asks for complete ones", m.Code, m.Ref.Version), c)
 }
 
 // reportLine checks one final value and makes its line.
@@ -162,6 +203,9 @@ func (r *Registry) Report(ctx context.Context, actor Actor, code string) (Report
 		if out.Item, err = newest[store.Report](ctx, v, store.Key{Laboratory: actor.Laboratory, Kind: store.KindReport, Code: code}); err != nil {
 			return err
 		}
+		if out.AmendedBy, err = amendments(ctx, v, out.Key); err != nil {
+			return err
+		}
 		for _, line := range out.Value.Lines {
 			d, err := reported(ctx, v, actor.Laboratory, line.Code)
 			if err != nil {
@@ -193,13 +237,18 @@ func (r *Registry) Reported(ctx context.Context, actor Actor, code string) (Repo
 	out := ReportedDelta{ReportLine: store.NewReportLine(code, row.Report, row.Line, store.Version[store.Final]{Ref: row.Final, Value: f}),
 		Laboratory: row.Laboratory, Hash: row.Hash, Client: row.Client, Label: row.Label, IssuedAt: row.IssuedAt, IssuedBy: row.IssuedBy,
 		FinalState: row.FinalState, Flags: f.Flags, EffectiveDF: f.EffectiveDF}
+	report, err := One[store.Report](ctx, r, actor, store.KindReport, row.Report, 0, store.Moment{})
+	if err != nil {
+		return ReportedDelta{}, err
+	}
+	out.Amends, out.Conformity = report.Value.Amends, conformity(report.Value.Conformity, out)
 	r.lines.keep(actor.Laboratory+"/"+code, knownLine{out, row.SampleHash})
 	return out, nil
 }
 
 // ReportedClaimed answers a permanent code to someone known by a claim, where
 // one statement confirms both the claim and what is remembered of the delta.
-// False: it did not, and nothing is said.
+// False: it did not, or the delta replaces another or is replaced, and nothing is said.
 func (r *Registry) ReportedClaimed(ctx context.Context, claim Claim, code string) (ReportedDelta, bool, error) {
 	laboratory := claim.actor.Laboratory
 	line, ok := r.lines.find(laboratory + "/" + code)
@@ -210,7 +259,7 @@ func (r *Registry) ReportedClaimed(ctx context.Context, claim Claim, code string
 	if errors.Is(err, store.ErrNotFound) {
 		return ReportedDelta{}, false, nil
 	}
-	if err != nil || now.FinalState == "" || now.Hash != line.Hash || now.Sample != line.sample {
+	if err != nil || now.FinalState == "" || now.Hash != line.Hash || now.Sample != line.sample || now.Amended || line.Amends != "" { // what it replaces, or is replaced by, has to be looked up
 		return ReportedDelta{}, false, err
 	}
 	line.FinalState = now.FinalState
@@ -280,5 +329,6 @@ func reportedAt(ctx context.Context, v *store.View, laboratory, code string, m s
 		return out, err
 	}
 	out.Client, out.Label = sample.Value.Client, sample.Value.Label
+	out.Amends, out.Conformity = report.Value.Amends, conformity(report.Value.Conformity, out)
 	return out, nil
 }

@@ -3,7 +3,6 @@ package registry
 import (
 	"context"
 	"encoding/json"
-	"errors"
 	"fmt"
 	"strings"
 	"time"
@@ -11,27 +10,8 @@ import (
 	"deltamoor/store"
 )
 
-// The kinds of jobs that a revision starts.
-const (
-	JobRevision         = "revision"          // draws everything affected up again
-	JobRevisionApproval = "revision approval" // carries the approval of a set to its members
-)
-
-// A stepping bounds the steps of a job.
-type stepping struct {
-	versions int
-	period   time.Duration
-	after    func() // called when a step is on disk; nil: nothing
-}
-
-// steadily is how jobs are worked on.
-func steadily() stepping { return stepping{versions: 500, period: 2 * time.Second} }
-
-const (
-	stepLease = 30 * time.Second
-	// maxUntold bounds the versions that a revision may leave without a new value.
-	maxUntold = 5000
-)
+// maxUntold bounds the versions that a revision may leave without a new value.
+const maxUntold = 5000
 
 type revisionArguments struct {
 	Revision string `json:"revision"`
@@ -89,7 +69,7 @@ func (r *Registry) ProposeRevision(ctx context.Context, actor Actor, p Proposal)
 				return err
 			}
 		}
-		return addJob(ctx, tx, jobCode, JobRevision, revisionArguments{code, actor.Person, reason})
+		return addJob(ctx, tx, jobCode, JobRevision, actor.Person, revisionArguments{code, actor.Person, reason})
 	})
 	if err != nil {
 		return out, job, err
@@ -101,128 +81,23 @@ func (r *Registry) ProposeRevision(ctx context.Context, actor Actor, p Proposal)
 	return out, job, err
 }
 
-func addJob(ctx context.Context, tx *store.Tx, code, kind string, a revisionArguments) error {
-	text, err := json.Marshal(a)
-	if err != nil {
-		return err
-	}
-	return tx.AddJob(ctx, store.Job{Code: code, Kind: kind, Arguments: string(text), CreatedBy: a.By})
-}
-
 // reasonOf is the reason that stands on what a revision draws up.
 func reasonOf(code, reason string) string {
 	return fmt.Sprintf("revision %s: %s", store.FormatCode(code), reason)
 }
 
-// Job reads the progress of long work.
-func (r *Registry) Job(ctx context.Context, actor Actor, code string) (store.Job, error) {
-	var job store.Job
-	err := r.read(ctx, actor, func(ctx context.Context, v *store.View) error {
-		var err error
-		job, err = v.Job(ctx, actor.Laboratory, code)
-		return err
-	})
-	return job, err
-}
-
-// Work takes the job of a laboratory that has waited longest, or one whose
-// worker has been silent, and runs it to its end in steps, each one act that
-// also moves the job's cursor. An error leaves the job to be taken again when
-// its lease has run out; what it did stays, and the next worker goes on from
-// there. False: there is no job to do.
-func (r *Registry) Work(ctx context.Context, laboratory, holder string) (bool, error) {
-	return r.work(ctx, laboratory, holder, steadily())
-}
-
-func (r *Registry) work(ctx context.Context, laboratory, holder string, steps stepping) (bool, error) {
-	var job store.Job
-	_, err := r.store.Write(ctx, laboratory, func(ctx context.Context, tx *store.Tx) error {
-		var err error
-		job, err = tx.TakeJob(ctx, holder, stepLease)
-		return err
-	})
-	if err != nil {
-		return false, ignoreNotFound(err)
-	}
-	var step func(context.Context, *store.Tx, *store.Job) error
+// revisionStep begins, or goes on with, a job of a revision.
+func (r *Registry) revisionStep(ctx context.Context, laboratory string, job *store.Job, steps stepping) (func(context.Context, *store.Tx, *store.Job) error, error) {
 	var a revisionArguments
 	if err := json.Unmarshal([]byte(job.Arguments), &a); err != nil {
-		return true, r.fail(ctx, laboratory, job, fmt.Errorf("arguments of job %s: %w", job.Code, err))
+		return nil, fmt.Errorf("arguments of job %s: %w", job.Code, err)
 	}
-	switch job.Kind {
-	case JobRevision:
-		w := &redrafting{registry: r, laboratory: laboratory, arguments: a, steps: steps}
-		if err := w.begin(ctx, &job); err != nil {
-			return true, r.fail(ctx, laboratory, job, err)
-		}
-		step = w.step
-	case JobRevisionApproval:
+	if job.Kind == JobRevisionApproval {
 		w := &approving{laboratory: laboratory, arguments: a, steps: steps}
-		step = w.step
-	default:
-		return true, r.fail(ctx, laboratory, job, fmt.Errorf("job %s is of the unknown kind %q", job.Code, job.Kind))
+		return w.step, nil
 	}
-	for !job.State.Ended() {
-		var next store.Job
-		_, err := r.store.Write(ctx, laboratory, func(ctx context.Context, tx *store.Tx) error {
-			next = job
-			if err := step(ctx, tx, &next); err != nil {
-				return err
-			}
-			return tx.AdvanceJob(ctx, next, stepLease)
-		})
-		if err != nil {
-			return true, r.fail(ctx, laboratory, job, err)
-		}
-		job = next
-		if steps.after != nil {
-			steps.after()
-		}
-	}
-	return true, nil
-}
-
-// KeepWorking works on the jobs of every laboratory until the context ends,
-// looking for new ones after each pause; failed is told what a job ended with.
-func (r *Registry) KeepWorking(ctx context.Context, holder string, pause time.Duration, failed func(error)) {
-	for ctx.Err() == nil {
-		var laboratories []string
-		err := r.store.Read(ctx, func(ctx context.Context, v *store.View) error {
-			var err error
-			laboratories, err = v.Laboratories(ctx)
-			return err
-		})
-		busy := false
-		for _, laboratory := range laboratories {
-			did, workErr := r.Work(ctx, laboratory, holder)
-			busy = busy || did && workErr == nil
-			err = errors.Join(err, workErr)
-		}
-		if err != nil && ctx.Err() == nil {
-			failed(err)
-		}
-		if busy {
-			continue
-		}
-		select {
-		case <-ctx.Done():
-		case <-time.After(pause):
-		}
-	}
-}
-
-// fail ends a job that can never succeed, and returns the error. A worker that
-// is being stopped, or a database that is away, ends nothing.
-func (r *Registry) fail(ctx context.Context, laboratory string, job store.Job, cause error) error {
-	if ctx.Err() != nil || MeaningOf(cause) == Unavailable || MeaningOf(cause) == Conflict || MeaningOf(cause) == Stale {
-		return cause
-	}
-	job.State, job.Message = store.JobFailed, cause.Error()
-	_, err := r.store.Write(ctx, laboratory, func(ctx context.Context, tx *store.Tx) error { return tx.AdvanceJob(ctx, job, 0) })
-	if err != nil {
-		return fmt.Errorf("%w; and ending the job: %v", cause, err)
-	}
-	return cause
+	w := &redrafting{registry: r, laboratory: laboratory, arguments: a, steps: steps}
+	return w.step, w.begin(ctx, job)
 }
 
 // redrafting is the job that draws everything affected up again.

@@ -206,7 +206,7 @@ func (r *Registry) reissue(ctx context.Context, actor Actor, q ClosingRequest) (
 	if err != nil {
 		return store.Ref{}, err
 	}
-	request := ReportRequest{Client: old.Value.Client, Title: old.Value.Title, Amends: q.Report, Reason: reasonOf(q.Revision, q.Reason), Note: old.Value.Note}
+	request := ReportRequest{Client: old.Value.Client, Title: old.Value.Title, Amends: q.Report, Reason: reasonOf(q.Revision, q.Reason), Note: old.Value.Note, Conformity: old.Value.Conformity}
 	err = r.read(ctx, actor, func(ctx context.Context, v *store.View) error {
 		request.Finals = nil
 		for _, line := range old.Lines {

@@ -66,7 +66,7 @@ func (r *Registry) ApproveRevision(ctx context.Context, actor Actor, code string
 		if err != nil {
 			return err
 		}
-		return addJob(ctx, tx, jobCode, JobRevisionApproval, revisionArguments{code, actor.Person, strings.TrimSpace(q.Reason)})
+		return addJob(ctx, tx, jobCode, JobRevisionApproval, actor.Person, revisionArguments{code, actor.Person, strings.TrimSpace(q.Reason)})
 	})
 	if err != nil {
 		return job, err

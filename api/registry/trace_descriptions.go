@@ -134,6 +134,13 @@ func describeVersion(raw store.Raw) (*description, error) {
 		}
 		n.Title = fmt.Sprintf("outcome of session %s for %s", store.FormatCode(o.Value.Session), o.Value.Quantity)
 		n.Detail = o.Value.Outcome
+	case store.KindDocument:
+		f, err := store.Decode[store.Upload](raw)
+		if err != nil {
+			return nil, err
+		}
+		n.Title, n.Leaf = "file "+nameOr(f.Value.Name, "without a name"), "bytes as they came"
+		n.Detail = fmt.Sprintf("%d bytes, SHA-256 %s", f.Value.Size, raw.Code)
 	case store.KindUnit:
 		u, err := store.Decode[store.Unit](raw)
 		if err != nil {

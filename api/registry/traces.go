@@ -16,6 +16,9 @@ type Trace struct {
 	Edges    []TraceEdge
 	// Cut counts versions beyond MaxTrace that were not followed.
 	Cut int
+	// Shares say where the variance of the number comes from; nil where the trace
+	// starts at something that has none.
+	Shares []VarianceShare
 }
 
 // MaxTrace bounds the nodes of one trace.
@@ -24,6 +27,9 @@ const MaxTrace = 2000
 // A TraceNode is one version in a trace, with who stated it, when, and who decided what.
 type TraceNode struct {
 	store.Ref
+	// Origin names the ledger of another registry that the version stands in; ""
+	// for versions of this one.
+	Origin     string
 	Depth      int
 	Title      string
 	RecordedAt store.Instant
@@ -104,7 +110,14 @@ func (r *Registry) TraceAt(ctx context.Context, actor Actor, q TraceQuery) (Trac
 			}
 			start = raw.Ref
 		}
-		return t.walk(ctx, start, line)
+		if err := t.walk(ctx, start, line); err != nil {
+			return err
+		}
+		var err error
+		if out.Shares, err = sharesOf(ctx, v, out, line); err != nil {
+			return err
+		}
+		return followPartners(ctx, v, &out)
 	})
 	return out, err
 }
@@ -310,89 +323,8 @@ func (n *TraceNode) decided(decisions []store.Version[store.Decision]) {
 	}
 }
 
-// TraceUp follows what rests on a version, as things stand now: generation by
-// generation upwards, to reports. At most MaxTrace nodes are listed; Cut counts
-// versions beyond.
-func (r *Registry) TraceUp(ctx context.Context, actor Actor, kind store.Kind, code string, version int) (Trace, error) {
-	return r.TraceUpAt(ctx, actor, TraceQuery{Kind: kind, Code: code, Version: version})
-}
-
-// TraceUpAt follows what rested on a version, as far as had been recorded by the
-// moment. Of a reported delta that is what rests on its report: an amended one.
-func (r *Registry) TraceUpAt(ctx context.Context, actor Actor, q TraceQuery) (Trace, error) {
-	var out Trace
-	err := r.read(ctx, actor, func(ctx context.Context, v *store.View) error {
-		out = Trace{}
-		if q.Kind == "" {
-			d, err := reportedAt(ctx, v, actor.Laboratory, q.Code, q.Moment)
-			if err != nil {
-				return err
-			}
-			out.Reported = &d
-			q.Kind, q.Code = store.KindReport, d.Report
-			if q.Version, err = reportVersion(ctx, v, d); err != nil {
-				return err
-			}
-		}
-		raw, err := startOfTrace(ctx, v, actor.Laboratory, q)
-		if err != nil {
-			return err
-		}
-		t := r.tracer(v, &out, q.Moment)
-		t.at[raw.Ref.Bare()] = 0
-		out.Nodes = append(out.Nodes, TraceNode{Ref: raw.Ref})
-		for from := 0; from < len(out.Nodes); {
-			to := len(out.Nodes)
-			descriptions, err := t.describeAll(ctx, out.Nodes[from:to])
-			if err != nil {
-				return err
-			}
-			for i := from; i < to; i++ {
-				descriptions[i-from].fill(&out.Nodes[i])
-				if err := t.climb(ctx, v, actor.Laboratory, i); err != nil {
-					return err
-				}
-			}
-			from = to
-		}
-		return t.stand(ctx)
-	})
-	return out, err
-}
-
 // reportVersion is the version of a report that states a line.
 func reportVersion(ctx context.Context, v *store.View, d ReportedDelta) (int, error) {
 	row, err := v.Reported(ctx, d.Code)
 	return row.Version, err
-}
-
-// climb adds what rests on node i. Decisions about it are part of its
-// description, not of the graph.
-func (t *tracer) climb(ctx context.Context, v *store.View, laboratory string, i int) error {
-	ref := t.trace.Nodes[i].Ref
-	for after := ""; ; {
-		edges, next, err := v.EdgesTo(ctx, store.EdgeQuery{Laboratory: laboratory, To: ref.Key, Version: ref.Version, After: after, Limit: MaxPage, AsOf: t.moment.AsOf})
-		if err != nil {
-			return err
-		}
-		for _, e := range edges {
-			if e.From.Kind == store.KindDecision {
-				continue
-			}
-			from, ok := t.at[e.From]
-			if !ok {
-				if len(t.trace.Nodes) >= MaxTrace {
-					t.trace.Cut++
-					continue
-				}
-				from = len(t.trace.Nodes)
-				t.at[e.From] = from
-				t.trace.Nodes = append(t.trace.Nodes, TraceNode{Ref: e.From, Depth: t.trace.Nodes[i].Depth + 1})
-			}
-			t.trace.Edges = append(t.trace.Edges, TraceEdge{From: from, To: i, Part: e.Part})
-		}
-		if after = next; after == "" {
-			return nil
-		}
-	}
 }

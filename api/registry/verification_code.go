@@ -41,8 +41,13 @@ type NodeVerification struct {
 	// Recomputed tells that it states numbers that were computed again, Equal
 	// that every bit of them was the same.
 	Recomputed, Equal bool
-	// Proved tells that its ledger entry is in the tree (RFC 6962, 2.1.1).
+	// Numbers are those it states, as stored and as computed again; nil where it
+	// states none.
+	Numbers *NumbersCompared
+	// Proved tells that its ledger entry is in the tree (RFC 6962, 2.1.1), Proof is
+	// the audit path from the entry's leaf to the root of its laboratory in Ledgers.
 	Proved bool
+	Proof  []ledger.Hash
 	// Findings are what differs; none means that the node is as it was recorded.
 	Findings []store.Finding
 }
@@ -192,11 +197,10 @@ func (c *chain) read(ctx context.Context, n *NodeVerification) (*store.Raw, erro
 
 // check verifies everything that one version says or binds.
 func (c *chain) check(ctx context.Context, n *NodeVerification, raw store.Raw, line int) error {
-	proved, err := c.prove(ctx, n, raw)
-	if err != nil {
+	var err error
+	if n.Proof, n.Proved, err = c.prove(ctx, n, raw); err != nil {
 		return err
 	}
-	n.Proved = proved
 	_, decisions, err := c.v.State(ctx, raw.Ref, store.Moment{})
 	if err != nil {
 		if err := n.broken(ctx, err, "versions", "decisions that can be read"); err != nil {
@@ -204,14 +208,14 @@ func (c *chain) check(ctx context.Context, n *NodeVerification, raw store.Raw, l
 		}
 	}
 	for _, d := range decisions {
-		if _, err := c.prove(ctx, n, store.Raw{Ref: d.Ref, RecordedAt: d.RecordedAt, RecordedBy: d.RecordedBy, Position: d.Position}); err != nil {
+		if _, _, err := c.prove(ctx, n, store.Raw{Ref: d.Ref, RecordedAt: d.RecordedAt, RecordedBy: d.RecordedBy, Position: d.Position}); err != nil {
 			return err
 		}
 	}
 	if err := c.bound(ctx, n, raw); err != nil {
 		return err
 	}
-	var again recheck
+	again := recheck{compared: &NumbersCompared{}}
 	if raw.Kind == store.KindReport && line >= 0 {
 		err = c.line(ctx, &again, n, raw, line)
 	} else {
@@ -225,6 +229,9 @@ func (c *chain) check(ctx context.Context, n *NodeVerification, raw store.Raw, l
 	}
 	n.Findings = append(n.Findings, again.findings...)
 	n.Recomputed, n.Equal = again.recomputed > 0, again.recomputed > 0 && again.equal == again.recomputed
+	if again.recomputed > 0 && again.compared.Compared > 0 {
+		n.Numbers = again.compared
+	}
 	c.out.Recomputed += again.recomputed
 	c.out.Equal += again.equal
 	return nil
@@ -232,35 +239,35 @@ func (c *chain) check(ctx context.Context, n *NodeVerification, raw store.Raw, l
 
 // prove holds a version against its ledger entry, and the entry against the
 // root of the ledger.
-func (c *chain) prove(ctx context.Context, n *NodeVerification, raw store.Raw) (bool, error) {
+func (c *chain) prove(ctx context.Context, n *NodeVerification, raw store.Raw) ([]ledger.Hash, bool, error) {
 	key := fmt.Sprintf("%s position %d", raw.Laboratory, raw.Position)
 	head, err := c.head(ctx, raw.Laboratory)
 	if err != nil {
-		return false, n.broken(ctx, err, "tree_hashes", "the nodes of the ledger of "+raw.Laboratory)
+		return nil, false, n.broken(ctx, err, "tree_hashes", "the nodes of the ledger of "+raw.Laboratory)
 	}
 	entries, err := c.v.Entries(ctx, raw.Laboratory, raw.Position, 1)
 	if err != nil {
-		return false, err
+		return nil, false, err
 	}
 	want := ledger.Entry{At: raw.RecordedAt.Time(), By: raw.RecordedBy, Code: raw.Code, Hash: raw.Hash, Kind: string(raw.Kind), Laboratory: raw.Laboratory, Version: raw.Ref.Version}.Bytes()
 	if len(entries) == 0 || entries[0].Position != raw.Position {
 		n.find("entries", key, "nothing", string(want))
-		return false, nil
+		return nil, false, nil
 	}
 	if string(entries[0].Bytes) != string(want) {
 		n.find("entries", key, string(entries[0].Bytes), string(want))
-		return false, nil
+		return nil, false, nil
 	}
 	proof, err := ledger.ProveInclusion(head.size, raw.Position, head.reader)
 	if err != nil {
-		return false, n.broken(ctx, err, "tree_hashes", "a proof that the entry is in the ledger")
+		return nil, false, n.broken(ctx, err, "tree_hashes", "a proof that the entry is in the ledger")
 	}
 	if err := ledger.CheckInclusion(proof, head.size, head.root, raw.Position, ledger.LeafHash(want)); err != nil {
 		n.find("tree_hashes", key, err.Error(), "a proof that leads from the entry to the root")
-		return false, nil
+		return nil, false, nil
 	}
 	c.out.Proved++
-	return true, nil
+	return proof, true, nil
 }
 
 // head reads a ledger's root once.
@@ -400,6 +407,8 @@ func (c *chain) line(ctx context.Context, again *recheck, n *NodeVerification, r
 	if err != nil {
 		return err
 	}
+	again.compared.add("value", c.row.Value, final.Value.Value, true)
+	again.compared.add("u", c.row.StandardUncertainty, final.Value.StandardUncertainty, true)
 	hash, err := store.ReportLineHash(store.NewReportLine(stated.Code, report.Code, line, final))
 	if err != nil {
 		return err

@@ -116,6 +116,8 @@ const maxFindings = 1000
 type recheck struct {
 	findings          []store.Finding
 	recomputed, equal int
+	// compared is filled in where set: each number beside what came of it again.
+	compared *NumbersCompared
 }
 
 func (c *recheck) add(raw store.Raw, path, found, expected string) {
@@ -165,6 +167,9 @@ func (c *recheck) version(ctx context.Context, v source, raw store.Raw) error {
 		scale, condition, again = largestResult(members), 1e6, body
 	case store.KindValue:
 		stored, err := store.Decode[store.Value](raw)
+		if err == nil && stored.Value.Partner != nil {
+			return c.partner(ctx, v, raw, stored.Value)
+		}
 		if err == nil && stored.Value.Basis == Conversion {
 			from, rel, ok, err := converted(ctx, v, stored.Inputs)
 			if err != nil || !ok {
@@ -207,6 +212,11 @@ func (c *recheck) version(ctx context.Context, v source, raw store.Raw) error {
 	canonical, err := ledger.Canonical(again)
 	if err != nil {
 		return err
+	}
+	if c.compared != nil {
+		if err := c.compared.compare(raw.Kind, raw.Value, canonical); err != nil {
+			return err
+		}
 	}
 	if bytes.Equal(canonical, raw.Value) {
 		c.equal++

@@ -120,6 +120,7 @@ type Approval struct {
 type FinalRule struct {
 	SessionsRequired int    `json:"sessions_required,omitempty" minimum:"0" doc:"Left out: one."`
 	Rule             string `json:"rule,omitempty" maxLength:"100" doc:"Left out: one accepted session."`
+	Complete         bool   `json:"complete,omitempty" doc:"A report that the completeness check finds incomplete is refused; left out: it is told what is missing."`
 }
 
 // A Mapping says how a table of raw deltas is read.

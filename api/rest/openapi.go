@@ -145,6 +145,15 @@ func previewed[T any](f *face, op *huma.Operation) {
 	op.Responses["200"] = &huma.Response{Description: "A preview, or what was there already: nothing was stored.", Content: map[string]*huma.MediaType{"application/json": {Schema: schema}}}
 }
 
+// made: the answer that writes itself has this shape when something was made.
+func made[T any](f *face, op *huma.Operation) {
+	schema := f.api.OpenAPI().Components.Schemas.Schema(reflect.TypeFor[T](), true, "")
+	op.Responses["201"] = &huma.Response{Description: "Created", Content: map[string]*huma.MediaType{"application/json": {Schema: schema}}}
+}
+
+// conflicts: a read that what is there may not allow.
+func conflicts(_ *face, op *huma.Operation) { op.Errors = append(op.Errors, http.StatusConflict) }
+
 // finishDescription says once what holds for every operation: its refusals
 // become references to responses that all share.
 func finishDescription(api *huma.OpenAPI) {

@@ -286,7 +286,7 @@ func fileContent(json *huma.Schema, types ...string) map[string]*huma.MediaType 
 	out := map[string]*huma.MediaType{}
 	for _, t := range types {
 		schema := &huma.Schema{Type: huma.TypeString, Description: "A table with a heading row."}
-		if t == mediaXLSX || t == mediaBytes {
+		if t == mediaXLSX || t == mediaBytes || t == mediaZIP {
 			schema = &huma.Schema{Type: huma.TypeString, Format: "binary"}
 		}
 		if t == mediaJSON {

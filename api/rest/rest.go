@@ -14,7 +14,6 @@ import (
 	"log/slog"
 	"net/http"
 	"net/netip"
-	"sync"
 	"sync/atomic"
 	"time"
 
@@ -59,8 +58,6 @@ type face struct {
 	api      huma.API
 
 	initialised atomic.Bool // a registry does not go back
-
-	verify sync.Mutex // one verification at a time
 }
 
 // Mount registers the API on a router, under /v1, with its description at
@@ -214,6 +211,7 @@ func handle[I, O any](f *face, op huma.Operation, fn func(context.Context, regis
 type one[T any] struct {
 	ETag     string `header:"ETag" doc:"Names this version and the decisions on it; send it in If-Match."`
 	Location string `header:"Location" doc:"Where the new resource is."`
+	Link     string `header:"Link" doc:"Of one version: the next one, as rel=\"successor-version\", and its record, as rel=\"latest-version\" (RFC 5829)."`
 	Body     T
 }
 

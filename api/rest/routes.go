@@ -47,7 +47,6 @@ func (f *face) routes() {
 	handle(f, o(get, "/units/{code}/versions", "listUnitVersions", "materials", "List the states of a unit", listing[Unit]), versionsOf(f, unitKind))
 	handle(f, o(post, "/units/{code}/versions", "changeUnit", "materials", "State a further version of a unit", creates, conditional), f.changeUnit)
 	handle(f, o(get, "/units/{code}/versions/{version}", "getUnitVersion", "materials", "Read one version of a unit"), versionOf(f, unitKind))
-	handle(f, o(get, "/units/{code}/trace", "traceUnit", "trust", "Trace a unit", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, unitKind))
 
 	handle(f, o(post, "/units/{code}/quarantine", "quarantineUnit", "materials", "Take a unit out of use, in doubt since its last good moment", creates, conditional), f.quarantine)
 	handle(f, o(get, "/units/{code}/affected", "listAffected", "materials", "List the sessions that used a unit since a moment, with what rests on them"), f.affected)
@@ -79,7 +78,9 @@ func (f *face) routes() {
 	handle(f, o(get, value+"/decisions", "listValueDecisions", "materials", "List the decisions on a value", listing[VersionDecision]), f.valueDecisions)
 	handle(f, o(post, value+"/conversions", "convertValue", "materials", "State a value on another scale by a relation: a draft", creates), f.convertValue)
 	handle(f, o(post, value+"/decisions", "decideValue", "materials", "Submit, approve, decline or withdraw a value", creates, conditional), f.decideValue)
-	handle(f, o(get, value+"/trace", "traceValue", "trust", "Trace a value", answers[Trace], also("text/plain", "Indented lines.")), f.traceValue)
+	handle(f, o(get, value+"/trace", "traceValue", "trust", "Trace a value", tracing), f.traceValue)
+	handle(f, o(get, value+"/bundle", "getBundle", "trust", "The signed chain of a value, for another laboratory", long, conflicts, also(mediaZIP, "A bundle.")), f.valueBundle)
+	handle(f, o(get, value+"/verification", "verifyValue", "trust", "Recompute the chain of a value now", long), f.verifyValue)
 
 	handle(f, o(get, "/assignments", "listAssignments", "materials", "List value-assignment campaigns", listing[Assignment]), recordsOf(f, assignmentKind))
 	handle(f, o(post, "/assignments", "planAssignment", "materials", "Plan a campaign: a draft", creates), f.planAssignment)
@@ -98,7 +99,6 @@ func (f *face) routes() {
 		file(reflect.TypeFor[StudyBody](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes), headed(exchange.StudyHeadings, 2)), f.stateStudy)
 	handle(f, o(get, "/assignments/{code}/analysis", "analyseAssignment", "materials", "Read where a campaign stands", long), f.analyseAssignment)
 	handle(f, o(post, "/assignments/{code}/values", "concludeAssignment", "materials", "Draw up a value of an approved campaign: a draft", creates, conditional, long), f.concludeAssignment)
-	handle(f, o(get, "/assignments/{code}/trace", "traceAssignment", "trust", "Trace a plan", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, assignmentKind))
 
 	handle(f, o(get, "/instruments", "listInstruments", "sessions", "List instruments", listing[Instrument]), recordsOf(f, instrumentKind))
 	handle(f, o(post, "/instruments", "addInstrument", "sessions", "Register an instrument", creates), f.addInstrument)
@@ -128,7 +128,6 @@ func (f *face) routes() {
 	handle(f, o(get, "/sessions/{code}", "getSession", "sessions", "Read a session"), recordOf(f, sessionKind))
 	handle(f, o(get, "/sessions/{code}/versions", "listSessionVersions", "sessions", "List the versions of a session", listing[Session]), versionsOf(f, sessionKind))
 	handle(f, o(get, "/sessions/{code}/versions/{version}", "getSessionVersion", "sessions", "Read one version of a session"), versionOf(f, sessionKind))
-	handle(f, o(get, "/sessions/{code}/trace", "traceSession", "trust", "Trace a session", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, sessionKind))
 	handle(f, o(get, "/sessions/{code}/readings", "listReadings", "sessions", "List the readings of a session", listing[Reading]), f.readings)
 	handle(f, o(post, "/sessions/{code}/readings", "importReadings", "sessions", "Bring the readings of a session: all rows or none", creates, long, previewed[Imported],
 		file(reflect.TypeFor[NewReadings](), mediaJSON, mediaCSV, mediaTSV, mediaXLSX, mediaBytes)), f.importReadings)
@@ -145,10 +144,10 @@ func (f *face) routes() {
 	handle(f, o(get, "/calibrations/{code}", "getCalibration", "calibrations", "Read a calibration"), recordOf(f, calibrationKind))
 	handle(f, o(get, "/calibrations/{code}/versions", "listCalibrationVersions", "calibrations", "List the versions of a calibration", listing[Calibration]), versionsOf(f, calibrationKind))
 	handle(f, o(get, "/calibrations/{code}/versions/{version}", "getCalibrationVersion", "calibrations", "Read one version of a calibration"), versionOf(f, calibrationKind))
+	handle(f, o(get, "/calibrations/{code}/changes", "getCalibrationChanges", "calibrations", "Set two versions of a calibration against each other: what changed, and what that moved", conflicts), f.calibrationChanges)
 	handle(f, o(get, "/calibrations/{code}/results", "listResults", "calibrations", "List the results of a calibration", listing[Result]), f.results)
 	handle(f, o(get, "/calibrations/{code}/decisions", "listCalibrationDecisions", "calibrations", "List the decisions on a calibration", listing[VersionDecision]), decisionsOn(f, calibrationKind))
 	handle(f, o(post, "/calibrations/{code}/decisions", "decideCalibration", "calibrations", "Submit, approve, decline or withdraw a calibration", creates, conditional), decisionOn(f, calibrationKind))
-	handle(f, o(get, "/calibrations/{code}/trace", "traceCalibration", "trust", "Trace a calibration", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, calibrationKind))
 	handle(f, o(post, "/calculations/fit", "calculateFit", "calibrations", "Fit without storing anything", fitBody), f.calculateFit)
 	handle(f, o(post, "/calculations/conversion", "calculateConversion", "calibrations", "Convert a delta to another scale without storing anything"), f.calculateConversion)
 
@@ -167,19 +166,28 @@ func (f *face) routes() {
 	handle(f, o(get, "/finals/{code}/versions/{version}", "getFinalVersion", "samples", "Read one version of a final value"), versionOf(f, finalKind))
 	handle(f, o(get, "/finals/{code}/decisions", "listFinalDecisions", "samples", "List the decisions on a final value", listing[VersionDecision]), decisionsOn(f, finalKind))
 	handle(f, o(post, "/finals/{code}/decisions", "decideFinal", "samples", "Submit, approve, decline or withdraw a final value", creates, conditional), decisionOn(f, finalKind))
-	handle(f, o(get, "/finals/{code}/trace", "traceFinal", "trust", "Trace a final value", answers[Trace], also("text/plain", "Indented lines.")), traceOf(f, finalKind))
 	handle(f, o(post, "/finals/{code}/conversions", "convertFinal", "samples", "Draw up a final value on another scale: a draft", creates), f.convertFinal)
 
 	handle(f, o(get, "/reports", "listReports", "samples", "List reports", listing[ReportSummary]), recordsOf(f, reportKind))
 	handle(f, o(post, "/reports", "issueReport", "samples", "Issue final values: each line gets its permanent code", creates), f.issue)
-	handle(f, o(get, "/reports/{code}", "getReport", "samples", "Read a report with its lines", answers[Report], also("text/csv", "The lines.")), f.report)
+	handle(f, o(get, "/reports/{code}", "getReport", "samples", "Read a report with its lines", reporting), f.report)
+	handle(f, o(get, "/reports/{code}/completeness", "getCompleteness", "samples", "Hold a report against what a reported delta must carry"), f.completeness)
+	handle(f, o(get, "/reports/{code}/methods", "getMethodsText", "samples", "How a report was measured: a paragraph for a paper, anchors and controls", answers[MethodsText], also(mediaHTML, "A page for printing."), also(mediaText, "Plain text.")), f.methodsText)
 	handle(f, o(get, "/reports/{code}/versions", "listReportVersions", "samples", "List the versions of a report", listing[ReportSummary]), versionsOf(f, reportKind))
 	handle(f, o(get, "/reports/{code}/versions/{version}", "getReportVersion", "samples", "Read one version of a report"), versionOf(f, reportKind))
 	handle(f, o(get, "/reports/{code}/decisions", "listReportDecisions", "samples", "List the decisions on a report", listing[VersionDecision]), decisionsOn(f, reportKind))
 	handle(f, o(post, "/reports/{code}/decisions", "decideReport", "samples", "Withdraw a report", creates, conditional), decisionOn(f, reportKind))
 	handleClaimed(f, o(get, "/reported/{code}", "getReported", "samples", "Read a reported delta by its permanent code"), f.reportedShort, f.reported)
 	handle(f, o(get, "/reported/{code}/today", "getReportedToday", "trust", "Read a reported delta as it would be with the assigned values in force"), f.today)
-	handle(f, o(get, "/reported/{code}/trace", "traceReported", "trust", "Trace a reported delta to where its chain ends", answers[Trace], also("text/plain", "Indented lines.")), f.traceReported)
+	handle(f, o(get, "/reported/{code}/trace", "traceReported", "trust", "Trace a reported delta to where its chain ends", tracing), f.traceReported)
+	handle(f, o(get, "/reported/{code}/pack", "getPack", "trust", "The evidence for a reported delta, as one file that needs no registry", long, also(mediaZIP, "An evidence pack.")), f.reportedPack)
+	handle(f, o(post, "/comparisons", "compare", "trust", "Set reported deltas against each other, shared sources cancelled"), f.compare)
+	handle(f, o(get, "/reported/{code}/verification", "verifyReported", "trust", "Recompute the chain of a reported delta now", long), f.verifyReported)
+
+	for _, r := range tracedRecords {
+		handle(f, o(get, r.address+"/trace", "trace"+r.operation, "trust", "Trace "+r.phrase, tracing, named(r.address)), f.traceOf(r.kind, r.made))
+		handle(f, o(get, r.address+"/verification", "verify"+r.operation, "trust", "Recompute the chain of "+r.phrase+" now", long, named(r.address)), f.verificationOf(r.kind, r.made))
+	}
 
 	handle(f, o(get, "/revisions", "listRevisions", "trust", "List revisions", listing[Revision]), recordsOf(f, revisionKind))
 	handle(f, o(post, "/revisions", "addRevision", "trust", "Say what may have been wrong: what moves, and with preview=false everything drawn up again as a job", creates, long, previewed[RevisionPreview], accepted202[RevisionMade]), f.addRevision)
@@ -191,7 +199,9 @@ func (f *face) routes() {
 	handle(f, o(get, "/revisions/{code}/sets", "listRevisionSets", "trust", "List the reports that a revision moves, and what became of them", listing[RevisionSet]), f.revisionSets)
 	handle(f, o(post, "/revisions/{code}/closings", "closeRevision", "trust", "Say what becomes of one report: re-issue, annotate, no action", creates), f.closeRevision)
 	handle(f, o(get, "/revisions/{code}/sets/{report}/lines", "listRevisionLines", "trust", "List the lines of a report before and after a revision", listing[Notice]), f.revisionNotice)
+	handle(f, o(get, "/jobs", "listJobs", "trust", "List long work, latest first", listing[Job]), f.jobs)
 	handle(f, o(get, "/jobs/{code}", "getJob", "trust", "Read the progress of long work"), f.job)
+	handle(f, o(post, "/jobs/{code}/cancellation", "cancelJob", "trust", "End long work; what it did stays"), f.cancelJob)
 
 	handle(f, o(get, "/laboratories", "listLaboratories", "people", "List the laboratories of who asks", listing[Laboratory]), f.laboratories)
 	handle(f, o(get, "/laboratories/{code}", "getLaboratory", "people", "Read a laboratory"), f.laboratory)
@@ -208,8 +218,12 @@ func (f *face) routes() {
 	handle(f, o(post, "/tokens/{code}/versions", "revokeToken", "people", "Revoke a token", creates, conditional), f.revokeToken)
 	handle(f, o(get, "/tokens/{code}/versions/{version}", "getTokenVersion", "people", "Read one version of a token"), f.tokenVersion)
 
-	handle(f, o(post, "/verification", "verify", "trust", "Recompute everything the laboratory holds", long), f.verifyAll)
+	handle(f, o(post, "/verification", "verify", "trust", "Recompute everything the laboratory holds, as a job", accepted202[Job]), f.verifyAll)
+	handle(f, o(get, "/verification/{code}", "getVerification", "trust", "Read what the job of a verification found", conflicts), f.verification)
+	handle(f, o(post, "/bundles", "importBundle", "trust", "Bring a partner's value with its whole chain: verified in full, a draft until somebody accepts it", creates, long, previewed[ImportedBundle], made[ImportedBundle], file(nil, mediaZIP, mediaBytes)), f.importBundle)
+	handle(f, o(get, "/ledger/key", "getPublicKey", "trust", "The public key that signs the laboratory's ledger", conflicts), f.publicKey)
 	handle(f, o(get, "/uploads/{sha256}", "getUpload", "trust", "The bytes as they came", long, also(mediaBytes, "The bytes.")), f.upload)
+	handle(f, o(get, "/uploads/{sha256}/trace", "traceUpload", "trust", "Trace an upload: upwards, what was made of it", tracing), f.traceUpload)
 	handle(f, o(get, "/ledger", "getLedger", "trust", "Size and root of the ledger"), f.ledgerHead)
 	handle(f, o(get, "/ledger/entries", "listEntries", "trust", "List the entries of the ledger", listing[Entry]), f.ledgerEntries)
 	handle(f, o(get, "/ledger/entries/{position}/inclusion", "proveInclusion", "trust", "Prove that an entry is in the ledger"), f.inclusion)

@@ -278,10 +278,7 @@ func (f *face) labels(ctx context.Context, actor registry.Actor, in *LabelParams
 
 // pageAnswer is a page for printing: it shows under a policy that lets in its own style.
 func pageAnswer(data []byte) *answer {
-	return &answer{Body: func(hc huma.Context) {
-		hc.SetHeader("Content-Security-Policy", exchange.PrintPolicy())
-		textAnswer("text/html; charset=utf-8", data).Body(hc)
-	}}
+	return shownAnswer(mediaHTML, exchange.PrintPolicy(), data)
 }
 
 func textAnswer(media string, data []byte) *answer {

@@ -76,7 +76,15 @@ func oneOf[S store.Body, T any](ctx context.Context, f *face, actor registry.Act
 	if err != nil {
 		return nil, err
 	}
-	return &one[T]{ETag: quoteTag(it.Tag()), Body: k.show(it)}, nil
+	out := &one[T]{ETag: quoteTag(it.Tag()), Body: k.show(it)}
+	if number > 0 { // a permanent address says what came after
+		newest, err := f.registry.NewestNumber(ctx, actor, it.Key)
+		if err != nil {
+			return nil, err
+		}
+		out.Link = laterLink(it.Key, number, newest)
+	}
+	return out, nil
 }
 
 // recordsOf lists the records of a kind.

@@ -13,6 +13,7 @@ import (
 
 	"deltamoor/api/demo"
 	"deltamoor/api/registry"
+	"deltamoor/api/rest"
 	"deltamoor/store"
 )
 
@@ -78,7 +79,7 @@ func (p *program) buildLaboratory(ctx context.Context, c config) (built *demo.Su
 	if err != nil {
 		return nil, err
 	}
-	return s, p.printJSON(traceJSON(trace))
+	return s, p.printJSON(rest.ShowTrace(trace))
 }
 
 // serveLaboratory opens the laboratory again, with the real clock and real

@@ -46,6 +46,7 @@ exists is not written over.`
 	var uploads, checkpoint bool
 	laboratoryFlag(cmd, &laboratory)
 	cmd.Flags().StringVarP(&output, "output", "o", "", "`file` to write; - is standard output, where everything but a pack goes by default; a pack goes to CODE.zip")
+	outAlias(cmd, &output)
 	cmd.Flags().StringVar(&format, "format", formatPack, "`what` to write: pack; prov, the trace as W3C PROV (PROV-JSONLD); svg, the picture of the trace")
 	cmd.Flags().BoolVar(&uploads, "uploads", false, "take in every file, whosever samples it names")
 	cmd.Flags().BoolVar(&checkpoint, "checkpoint", false, "the signed head of the ledger, instead of a delta")
@@ -137,6 +138,12 @@ func (o *opened) writeTrace(ctx context.Context, w io.Writer, actor registry.Act
 		return exchange.WritePROV(w, o.Name(), t)
 	}
 	return figure.Trace(w, t, figure.TraceStyle{})
+}
+
+// outAlias lets --output be called --out.
+func outAlias(cmd *cobra.Command, output *string) {
+	cmd.Flags().StringVar(output, "out", "", "the same as --output")
+	_ = cmd.Flags().MarkHidden("out") // it was just made
 }
 
 // writeOutput writes to the named file, which must not exist, or to standard
@@ -245,7 +252,11 @@ func (p *program) verifyPack(ctx context.Context, name string, q registry.PackCh
 		}
 		t.add(l.Origin, fmt.Sprint(l.Size), fmt.Sprint(l.Proved), by, l.Root.String())
 	}
-	fmt.Fprintf(p.stdout, "evidence for the reported delta %s of %s in %s\n\n", store.FormatCode(v.Code), v.Laboratory, v.Registry)
+	about := "evidence for the reported delta " + store.FormatCode(v.Code)
+	if v.Value != nil {
+		about = fmt.Sprintf("the chain of the assigned value %s.%d", v.Value.Code, v.Value.Version)
+	}
+	fmt.Fprintf(p.stdout, "%s of %s in %s\n\n", about, v.Laboratory, v.Registry)
 	if err := t.print(p.stdout); err != nil {
 		return err
 	}

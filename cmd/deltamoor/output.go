@@ -20,8 +20,10 @@ import (
 )
 
 // printJSON writes an answer for programs.
-func (p *program) printJSON(answer any) error {
-	encoder := json.NewEncoder(p.stdout)
+func (p *program) printJSON(answer any) error { return writeJSON(p.stdout, answer) }
+
+func writeJSON(w io.Writer, answer any) error {
+	encoder := json.NewEncoder(w)
 	encoder.SetEscapeHTML(false)
 	encoder.SetIndent("", "  ")
 	return encoder.Encode(answer)

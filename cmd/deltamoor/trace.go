@@ -1,15 +1,18 @@
 package main
 
 import (
+	"bytes"
 	"context"
 	"fmt"
 	"io"
+	"slices"
 	"strconv"
 	"strings"
 
 	"github.com/spf13/cobra"
 
 	"deltamoor/api/exchange"
+	"deltamoor/api/figure"
 	"deltamoor/api/registry"
 	"deltamoor/api/rest"
 	"deltamoor/store"
@@ -20,17 +23,23 @@ func (p *program) buildTrace(cmd *cobra.Command) {
 calibrations, sessions, methods, who stated and approved them, and when. CODE is
 the code of a reported delta, or of a final value, calibration, session, sample,
 unit or report, in any way of writing it; or a value as
-MATERIAL/SCALE[/MEASURAND]. A number behind a dot names a version: without it
-the one in force is traced.
+MATERIAL/SCALE[/MEASURAND]; or the SHA-256 of a file that was imported. A number
+behind a dot names a version: without it the one in force is traced.
+
+With --direction up, print what rests on it instead: everything of the
+laboratory, up to reports.
 
 Reading asks for the right to open the database, and for no token.`
 	cmd.Example = `  deltamoor trace D7K3M-9Q2XG
+  deltamoor trace D7K3M-9Q2XG --format html -o trace.html
   deltamoor trace FJO-GLY/d13C-VPDB-LSVEC.2
-  deltamoor trace --up USGS40/d13C-VPDB-LSVEC`
-	var laboratory string
-	var up bool
+  deltamoor trace --direction up USGS40/d13C-VPDB-LSVEC`
+	var laboratory, direction, format, output string
 	laboratoryFlag(cmd, &laboratory)
-	cmd.Flags().BoolVar(&up, "up", false, "what rests on it, instead")
+	cmd.Flags().StringVar(&direction, "direction", "down", "`which` way: down, what it rests on; up, what rests on it")
+	cmd.Flags().StringVar(&format, "format", "text", "`what` to write: text; json; prov, W3C PROV (PROV-JSONLD); svg, the picture; html, a page to print")
+	cmd.Flags().StringVarP(&output, "output", "o", "", "`file` to write; left out: standard output")
+	outAlias(cmd, &output)
 	settingFlags(cmd, "data", "database")
 	cmd.Args = arguments("CODE")
 	cmd.ValidArgsFunction = cobra.NoFileCompletions
@@ -39,8 +48,17 @@ Reading asks for the right to open the database, and for no token.`
 		if err != nil {
 			return err
 		}
-		if up && s.kind == "" {
-			return usagef("--up: found the code of a reported delta, on which nothing rests")
+		up := direction == "up"
+		if p.json && !cmd.Flags().Changed("format") {
+			format = "json"
+		}
+		switch {
+		case direction != "up" && direction != "down":
+			return usagef("--direction: found %q, expected up or down", direction)
+		case up && s.kind == "":
+			return usagef("--direction up: found the code of a reported delta, on which nothing rests")
+		case !slices.Contains([]string{"text", "json", "prov", "svg", "html"}, format):
+			return usagef("--format: found %q, expected text, json, prov, svg or html", format)
 		}
 		o, err := p.openRegistry(ctx, cmd, toRead)
 		if err != nil {
@@ -55,21 +73,38 @@ Reading asks for the right to open the database, and for no token.`
 			return err
 		}
 		var t registry.Trace
+		var more bool
 		if up {
-			t, err = o.TraceUp(ctx, actor, s.kind, s.code, s.version)
+			var page registry.AbovePage
+			page, err = o.TraceAbove(ctx, actor, registry.AboveRequest{Kind: s.kind, Code: s.code, Version: s.version, Limit: registry.MaxTrace})
+			t, more = page.Trace, page.Next != nil
 		} else {
 			t, err = o.Trace(ctx, actor, s.kind, s.code, s.version)
 		}
 		if err != nil {
 			return err
 		}
-		switch {
-		case p.json:
-			return p.printJSON(traceJSON(t))
-		case up:
-			return printUp(p.stdout, t)
+		var b bytes.Buffer
+		switch format {
+		case "json":
+			err = writeJSON(&b, rest.ShowTrace(t))
+		case "prov":
+			err = exchange.WritePROV(&b, o.Name(), t)
+		case "svg":
+			err = figure.Trace(&b, t, figure.TraceStyle{})
+		case "html":
+			err = exchange.WriteTracePage(&b, t, exchange.TracePage{Up: up, More: more})
+		default:
+			if up {
+				err = printUp(&b, t, more)
+			} else {
+				err = exchange.WriteTrace(&b, t)
+			}
 		}
-		return exchange.WriteTrace(p.stdout, t)
+		if err != nil {
+			return err
+		}
+		return p.writeOutput(output, "-", b.Bytes())
 	})
 }
 
@@ -94,6 +129,10 @@ func parseSubject(text string) (subject, error) {
 			return s, fmt.Errorf("value %q: expected MATERIAL/SCALE or MATERIAL/SCALE/MEASURAND", text)
 		}
 		s.kind, s.code = store.KindValue, name
+		return s, nil
+	}
+	if file := new(store.Hash); len(name) == 64 && file.UnmarshalText([]byte(name)) == nil {
+		s.kind, s.code = store.KindDocument, file.String()
 		return s, nil
 	}
 	code, err := store.ParseCode(name)
@@ -128,7 +167,7 @@ func (s *subject) resolve(ctx context.Context, o *opened, actor registry.Actor) 
 }
 
 // printUp writes what rests on a version, generation by generation.
-func printUp(w io.Writer, t registry.Trace) error {
+func printUp(w io.Writer, t registry.Trace, more bool) error {
 	var us []float64
 	for _, n := range t.Nodes {
 		if n.StandardUncertainty != nil {
@@ -141,45 +180,16 @@ func printUp(w io.Writer, t registry.Trace) error {
 		table.add(strings.Repeat("  ", n.Depth)+versionCode(n.Ref), n.Title, string(n.State), optional(n.Value, d), optional(n.StandardUncertainty, d),
 			n.RecordedAt.Time().Format("2006-01-02"), n.RecordedBy)
 	}
-	if err := table.print(w); err != nil || t.Cut == 0 {
+	if err := table.print(w); err != nil || !more {
 		return err
 	}
-	_, err := fmt.Fprintf(w, "and %d more, beyond the first %d\n", t.Cut, registry.MaxTrace)
+	_, err := fmt.Fprintf(w, "and more, beyond the first %d\n", registry.MaxTrace)
 	return err
 }
 
 // versionCode writes a version as people do: code, dot, number.
 func versionCode(ref store.Ref) string {
 	return fmt.Sprintf("%s.%d", codeOf(ref.Kind, ref.Code), ref.Version)
-}
-
-// traceJSON is the trace as GET …/trace answers it.
-func traceJSON(t registry.Trace) rest.Trace {
-	out := rest.Trace{Nodes: []rest.TraceNode{}, Edges: []rest.TraceEdge{}, Cut: t.Cut}
-	if d := t.Reported; d != nil {
-		out.Reported = &rest.Reported{Code: store.FormatCode(d.Code), Laboratory: d.Laboratory, Report: store.FormatCode(d.Report), Line: d.Line,
-			Final:      rest.Input{Part: "line", Laboratory: d.Final.Laboratory, Kind: string(d.Final.Kind), Code: store.FormatCode(d.Final.Code), Version: d.Final.Version, Hash: d.Final.Hash.String()},
-			FinalState: string(d.FinalState), Sample: store.FormatCode(d.Sample), Client: d.Client, Label: d.Label, Quantity: d.Quantity, Scale: d.Scale, Measurand: d.Measurand,
-			Value: d.Value, U: d.StandardUncertainty, K: d.K, Expanded: d.Expanded, P: d.Probability, NuEff: d.EffectiveDF, Flags: append([]string{}, d.Flags...),
-			IssuedAt: d.IssuedAt.Time(), IssuedBy: d.IssuedBy, Hash: d.Hash.String()}
-	}
-	for _, n := range t.Nodes {
-		node := rest.TraceNode{Input: rest.Input{Laboratory: n.Laboratory, Kind: string(n.Kind), Code: codeOf(n.Kind, n.Code), Version: n.Version, Hash: n.Hash.String()},
-			Depth: n.Depth, Title: n.Title, Detail: n.Detail, Leaf: n.Leaf, State: string(n.State), RecordedAt: n.RecordedAt.Time(), RecordedBy: n.RecordedBy,
-			Reason: n.Reason, Value: n.Value, U: n.StandardUncertainty, Decisions: []rest.Decision{}}
-		if n.ValidFrom != nil {
-			from := n.ValidFrom.Time()
-			node.ValidFrom = &from
-		}
-		for _, d := range n.Decisions {
-			node.Decisions = append(node.Decisions, rest.Decision{Decision: d.Act, By: d.By, At: d.At.Time(), Reason: d.Reason})
-		}
-		out.Nodes = append(out.Nodes, node)
-	}
-	for _, e := range t.Edges {
-		out.Edges = append(out.Edges, rest.TraceEdge(e))
-	}
-	return out
 }
 
 // codeOf writes a record's code for people: 5-5 where the registry made it.
