@@ -17,7 +17,7 @@ type Resolver struct {
 // resolved is the step, in standard uncertainties, that is the last one of a
 // trial: what is left after it is smaller by the rate of convergence, and far
 // below what trials can show.
-const resolved = 2e-3
+const resolved = 1e-7
 
 // Resolver makes one. linear says that the model is linear in θ for values
 // that do not move, so that the derivatives are the whole answer.

@@ -268,13 +268,19 @@ func (c *Chain) noise(r *calib.Result, f *fitNode) error {
 	return nil
 }
 
-// degrees are ν_j = 2φ_j²/Cov_jj of a group's variances; +Inf when known.
+// degrees are ν_j = 2φ_j²/Cov_jj of a group's variances, +Inf when known, and
+// held at 1 or above as ν_eff is: a variance that is hardly known beside
+// another (1/size² beside a constant) would otherwise have trials without bound.
+// An estimate of zero has 0: it is drawn as zero.
 func degrees(g uncertain.Group) []float64 {
 	out := make([]float64, len(g.Variances))
 	for j, v := range g.Variances {
 		out[j] = math.Inf(1)
 		if cov := g.Covariance[j][j]; cov > 0 {
 			out[j] = 2 * v * v / cov
+			if v > 0 {
+				out[j] = math.Max(1, out[j])
+			}
 		}
 	}
 	return out

@@ -1,10 +1,10 @@
 package montecarlo
 
 import (
+	"context"
 	"fmt"
 	"math"
 	"runtime"
-	"slices"
 	"sync"
 
 	"deltamoor/calib/uncertain"
@@ -18,24 +18,38 @@ type Options struct {
 	Probability float64
 	// CoverageFactor fixes k of the interval that is checked; 0 takes it from ν_eff.
 	CoverageFactor float64
+	// Digits of u that the numbers are to be good for, 1 or 2 (JCGM 101, 7.9.2);
+	// 0 means 2.
+	Digits int
 	// MaxTrials bounds the trials; 0 means 5,000,000. Where they end before the
-	// numbers settle, Settled is false.
+	// numbers settle, Settled is false. One block is always run.
 	MaxTrials int
+	// All runs MaxTrials, settled before or not.
+	All bool
 	// Workers is how many blocks run at once; 0 means one for each processor.
 	// The answer does not depend on it.
 	Workers int
 }
 
-const defaultTrials = 5_000_000
+// Bounds of a run.
+const (
+	DefaultTrials  = 5_000_000
+	MaxTrials      = 200_000_000
+	MaxProbability = 0.9999
+)
 
 // An Outcome is the distribution of one quantity.
 type Outcome struct {
 	Mean float64
 	// StandardUncertainty of the trials; nil where a source of ν ≤ 2 leaves it undefined.
 	StandardUncertainty *float64
-	// Low and High bound the probabilistically symmetric interval.
-	Low, High float64
-	Trials    int
+	// Low and High bound the probabilistically symmetric interval, ShortestLow
+	// and ShortestHigh the shortest one. Both are off by less than Resolution
+	// from those of the sorted trials.
+	Low, High                 float64
+	ShortestLow, ShortestHigh float64
+	Resolution                float64
+	Trials                    int
 	// Settled says that mean, u and both end points are known to δ/5.
 	Settled bool
 	Check   Check
@@ -43,10 +57,11 @@ type Outcome struct {
 
 // A Check is the comparison of JCGM 101 clause 8.
 type Check struct {
-	// FirstOrder is y ± U from the first-order chain.
-	Value      float64
-	FirstOrder uncertain.Expanded
-	// Tolerance is δ = ½·10^l for u = c·10^l with two digits.
+	// Value, its u and FirstOrder are y ± U from the first-order chain.
+	Value               float64
+	StandardUncertainty float64
+	FirstOrder          uncertain.Expanded
+	// Tolerance is δ = ½·10^l for u = c·10^l with two digits (or one).
 	Tolerance float64
 	// LowDifference and HighDifference are |y − U − low| and |y + U − high|.
 	LowDifference, HighDifference float64
@@ -54,8 +69,13 @@ type Check struct {
 	Valid bool
 }
 
-// Run propagates the distributions to the given quantities.
-func (c *Chain) Run(of []Handle, o Options) ([]Outcome, error) {
+// Run propagates the distributions to the given quantities, all in the same
+// trials: what two quantities share is drawn once, so that a difference of them
+// (a [Chain.Linear]) is one more quantity.
+//
+// Memory does not grow with the trials. Errors: *ChainError; ctx's, when it
+// ends first; that of a fit that cannot be solved for some trial.
+func (c *Chain) Run(ctx context.Context, of []Handle, o Options) ([]Outcome, error) {
 	if err := o.fill(); err != nil {
 		return nil, err
 	}
@@ -71,15 +91,16 @@ func (c *Chain) Run(of []Handle, o Options) ([]Outcome, error) {
 		if err != nil {
 			return nil, fmt.Errorf("propagate quantity %d: %w", i, err)
 		}
-		out[i].Check = Check{Value: n.Value, FirstOrder: x, Tolerance: Tolerance(n.StandardUncertainty())}
+		out[i].Check = Check{Value: n.Value, FirstOrder: x, StandardUncertainty: n.StandardUncertainty()}
+		out[i].Check.Tolerance = Tolerance(out[i].Check.StandardUncertainty, o.Digits)
 	}
-	blocks, err := c.blocks(of, o, out)
+	p, err := c.compile(of, planKind{})
 	if err != nil {
 		return nil, err
 	}
-	undefined := c.undefinedU(of)
-	for i := range out {
-		finish(&out[i], blocks, i, o.Probability, undefined[i])
+	r := runner{plan: p, o: o, out: out, undefined: c.undefinedU(of), size: blockSize(o.Probability)}
+	if err := r.run(ctx); err != nil {
+		return nil, err
 	}
 	return out, nil
 }
@@ -88,14 +109,23 @@ func (o *Options) fill() error {
 	if o.Probability == 0 {
 		o.Probability = uncertain.DefaultProbability
 	}
-	if !(o.Probability > 0 && o.Probability < 1) {
-		return &ChainError{"probability", fmt.Sprint(o.Probability), "between 0 and 1"}
+	if !(o.Probability > 0 && o.Probability <= MaxProbability) {
+		return &ChainError{"probability", fmt.Sprint(o.Probability), fmt.Sprintf("above 0, at most %v", MaxProbability)}
+	}
+	if o.Digits == 0 {
+		o.Digits = 2
+	}
+	if o.Digits != 1 && o.Digits != 2 {
+		return &ChainError{"digits", fmt.Sprint(o.Digits), "1 or 2"}
 	}
 	if o.MaxTrials == 0 {
-		o.MaxTrials = defaultTrials
+		o.MaxTrials = DefaultTrials
 	}
-	if o.MaxTrials < 0 || o.Workers < 0 {
-		return &ChainError{"options", fmt.Sprintf("%d trials, %d workers", o.MaxTrials, o.Workers), "numbers that are not negative"}
+	if o.MaxTrials < 0 || o.MaxTrials > MaxTrials {
+		return &ChainError{"max_trials", fmt.Sprint(o.MaxTrials), fmt.Sprintf("1 to %d", MaxTrials)}
+	}
+	if o.Workers < 0 {
+		return &ChainError{"workers", fmt.Sprint(o.Workers), "a number that is not negative"}
 	}
 	if o.Workers == 0 {
 		o.Workers = runtime.GOMAXPROCS(0)
@@ -103,17 +133,22 @@ func (o *Options) fill() error {
 	return nil
 }
 
-// Tolerance is δ = ½·10^l of a standard uncertainty c·10^l, c of two digits.
-func Tolerance(u float64) float64 {
+// Tolerance is δ = ½·10^l of a standard uncertainty c·10^l, c of the given
+// number of digits (1 or 2).
+func Tolerance(u float64, digits int) float64 {
 	if !(u > 0) || math.IsInf(u, 0) {
 		return 0
 	}
+	least := 1.0
+	if digits == 2 {
+		least = 10
+	}
 	unit := 1.0
-	// 10^l by counting: c = u/10^l rounded must lie in 10 … 99.
-	for math.Round(u/unit) >= 100 {
+	// 10^l by counting: c = u/10^l rounded must have the digits.
+	for math.Round(u/unit) >= 10*least {
 		unit *= 10
 	}
-	for math.Round(u/unit) < 10 {
+	for math.Round(u/unit) < least {
 		unit /= 10
 	}
 	return unit / 2
@@ -124,122 +159,168 @@ func blockSize(p float64) int {
 	return max(10_000, int(math.Ceil(100/(1-p))))
 }
 
-// A block is one block's trials, one slice for each quantity, sorted.
-type block struct {
-	values [][]float64
-	err    error
+// A runner runs a plan in blocks. Workers take blocks in order, run them at
+// once, and hand them over in order.
+type runner struct {
+	plan      *plan
+	o         Options
+	out       []Outcome
+	undefined []bool
+	size      int
+
+	grids []grid
+	total []*tally
+	stats []settling
+
+	mu      sync.Mutex
+	turn    *sync.Cond
+	next    int // block to be taken
+	due     int // block to be handed over
+	most    int
+	stopped bool
+	err     error
 }
 
-// blocks runs blocks until everything has settled, JCGM 101 7.9.4. Several run
-// at once, but they are judged one after the other.
-func (c *Chain) blocks(of []Handle, o Options, out []Outcome) ([]block, error) {
-	size := blockSize(o.Probability)
-	most := max(1, o.MaxTrials/size)
-	var all []block
-	stats := make([]settling, len(of))
-	for len(all) < most {
-		batch := make([]block, min(o.Workers, most-len(all)))
-		var wait sync.WaitGroup
-		for k := range batch {
-			wait.Add(1)
-			go func() {
-				defer wait.Done()
-				batch[k] = c.block(of, newStream(o.Seed, uint64(len(all)+k)), size)
-			}()
+func (r *runner) run(ctx context.Context) error {
+	r.turn = sync.NewCond(&r.mu)
+	r.most = max(1, r.o.MaxTrials/r.size)
+	if err := r.first(ctx); err != nil {
+		return err
+	}
+	var wait sync.WaitGroup
+	for range min(r.o.Workers, r.most-1) {
+		wait.Add(1)
+		go func() {
+			defer wait.Done()
+			r.work(ctx)
+		}()
+	}
+	wait.Wait()
+	if r.err != nil {
+		return r.err
+	}
+	for i := range r.out {
+		if mean, _ := r.total[i].moments(&r.grids[i]); math.IsNaN(mean) || math.IsInf(mean, 0) {
+			return &ChainError{fmt.Sprintf("quantities[%d]", i), "a trial whose value is not a finite number", "a slope that no trial can make zero"}
 		}
-		wait.Wait()
-		for _, b := range batch {
-			if b.err != nil {
-				return nil, b.err
+		r.finish(i)
+	}
+	return nil
+}
+
+// first runs block 0, which says where the others are counted.
+func (r *runner) first(ctx context.Context) error {
+	m, err := r.plan.machine()
+	if err != nil {
+		return err
+	}
+	b := make(pilot, len(r.out))
+	err = r.block(ctx, m, 0, func(i int, values []float64) { b[i] = append(b[i], values...) })
+	if err != nil {
+		return err
+	}
+	r.grids = b.grids(r.o.Probability, r.out)
+	r.stats = make([]settling, len(r.out))
+	tallies := make([]*tally, len(r.out))
+	for i := range r.grids {
+		r.total = append(r.total, r.grids[i].tally())
+		tallies[i] = r.grids[i].tally()
+		tallies[i].add(&r.grids[i], b[i])
+	}
+	r.next, r.due = 1, 1
+	r.take(tallies)
+	return nil
+}
+
+// block runs one block's trials and hands each quantity's values over.
+func (r *runner) block(ctx context.Context, m *machine, index int, yield func(i int, values []float64)) error {
+	m.stream = newStream(r.o.Seed, uint64(index))
+	for done := 0; done < r.size; done += lanes {
+		if done%(64*lanes) == 0 {
+			if err := ctx.Err(); err != nil {
+				return err
 			}
-			all = append(all, b)
-			settled := true
-			for i := range stats {
-				stats[i].add(b.values[i], o.Probability)
-				out[i].Settled = stats[i].settled(out[i].Check.Tolerance)
-				settled = settled && out[i].Settled
+		}
+		n := min(lanes, r.size-done)
+		if err := r.plan.run(m, n); err != nil {
+			return err
+		}
+		for i, slot := range r.plan.out {
+			yield(i, m.slots[slot][:n])
+		}
+	}
+	return nil
+}
+
+// work takes blocks until there are none or everything has settled.
+func (r *runner) work(ctx context.Context) {
+	m, err := r.plan.machine()
+	tallies := make([]*tally, len(r.grids))
+	for i := range tallies {
+		tallies[i] = r.grids[i].tally()
+	}
+	for {
+		r.mu.Lock()
+		if r.stopped || r.next >= r.most {
+			r.mu.Unlock()
+			return
+		}
+		index := r.next
+		r.next++
+		r.mu.Unlock()
+
+		if err == nil {
+			for _, t := range tallies {
+				t.clear()
 			}
-			if settled {
-				return all, nil
-			}
+			err = r.block(ctx, m, index, func(i int, values []float64) { tallies[i].add(&r.grids[i], values) })
 		}
-	}
-	return all, nil
-}
 
-// settling follows the block averages of mean, u, low and high.
-type settling struct {
-	n    float64
-	sum  [4]float64
-	sum2 [4]float64
-	zero [4]float64 // first values, subtracted
-}
-
-func (s *settling) add(sorted []float64, p float64) {
-	mean, sd := moments(sorted)
-	low, high := interval(sorted, p)
-	for k, v := range [4]float64{mean, sd, low, high} {
-		if s.n == 0 {
-			s.zero[k] = v
+		r.mu.Lock()
+		for r.due != index {
+			r.turn.Wait()
 		}
-		v -= s.zero[k]
-		s.sum[k] += v
-		s.sum2[k] += float64(v * v)
-	}
-	s.n++
-}
-
-// settled: twice the standard deviation of each average is at most δ/5.
-func (s *settling) settled(tolerance float64) bool {
-	if s.n < 2 {
-		return false
-	}
-	for k := range s.sum {
-		variance := (s.sum2[k] - float64(s.sum[k]*s.sum[k])/s.n) / float64(s.n*(s.n-1))
-		if 2*math.Sqrt(math.Max(0, variance)) > tolerance/5 {
-			return false
+		switch {
+		case r.stopped: // an earlier block was the last one
+		case err != nil:
+			r.err, r.stopped = err, true
+		default:
+			r.take(tallies)
 		}
+		r.due++
+		r.turn.Broadcast()
+		r.mu.Unlock()
 	}
-	return true
 }
 
-func moments(v []float64) (mean, sd float64) {
-	for _, x := range v {
-		mean += x
+// take adds a block to what there is, and judges whether it is enough.
+func (r *runner) take(tallies []*tally) {
+	settled := true
+	for i, t := range tallies {
+		r.total[i].merge(t)
+		r.stats[i].add(t, &r.grids[i], r.o.Probability)
+		delta := r.out[i].Check.Tolerance
+		r.out[i].Settled = r.stats[i].settled(delta, r.undefined[i]) && r.grids[i].width <= math.Max(delta/10, minimumWidth(&r.grids[i]))
+		settled = settled && r.out[i].Settled
 	}
-	mean /= float64(len(v))
-	var s float64
-	for _, x := range v {
-		s += float64((x - mean) * (x - mean))
-	}
-	return mean, math.Sqrt(s / float64(len(v)-1))
+	r.stopped = settled && !r.o.All
 }
 
-// interval is the probabilistically symmetric coverage interval of sorted
-// trials, JCGM 101 7.7.
-func interval(sorted []float64, p float64) (low, high float64) {
-	m := len(sorted)
-	q := int(float64(p*float64(m)) + 0.5)
-	r := (m - q + 1) / 2
-	if r < 1 {
-		r = 1
-	}
-	return sorted[r-1], sorted[min(r+q, m)-1]
+// minimumWidth is the width of the classes where every trial is one value.
+func minimumWidth(g *grid) float64 {
+	return math.Max(math.Abs(g.low), 1) * 1e-9 / fewestClasses * 1.001
 }
 
-// finish pools the blocks of one quantity.
-func finish(out *Outcome, blocks []block, i int, p float64, undefined bool) {
-	var all []float64
-	for _, b := range blocks {
-		all = append(all, b.values[i]...)
-	}
-	mean, sd := moments(all)
-	slices.Sort(all)
-	out.Mean, out.Trials = mean, len(all)
-	if !undefined {
+// finish writes what one quantity's trials say.
+func (r *runner) finish(i int) {
+	out, t, g := &r.out[i], r.total[i], &r.grids[i]
+	mean, sd := t.moments(g)
+	out.Mean, out.Trials, out.Resolution = mean, int(t.n), g.width
+	if !r.undefined[i] {
 		out.StandardUncertainty = &sd
 	}
-	out.Low, out.High = interval(all, p)
+	out.Low, out.High = t.interval(g, r.o.Probability)
+	out.ShortestLow, out.ShortestHigh = t.shortest(g, r.o.Probability)
 	k := &out.Check
 	k.LowDifference = math.Abs(k.Value - k.FirstOrder.U - out.Low)
 	k.HighDifference = math.Abs(k.Value + k.FirstOrder.U - out.High)
@@ -261,28 +342,4 @@ func (c *Chain) undefinedU(of []Handle) []bool {
 		}
 	}
 	return out
-}
-
-// block runs one block.
-func (c *Chain) block(of []Handle, s stream, size int) block {
-	t, err := c.newTrial()
-	if err != nil {
-		return block{err: err}
-	}
-	b := block{values: make([][]float64, len(of))}
-	for i := range b.values {
-		b.values[i] = make([]float64, size)
-	}
-	for k := range size {
-		if err := t.run(&s); err != nil {
-			return block{err: err}
-		}
-		for i, h := range of {
-			b.values[i][k] = t.values[h]
-		}
-	}
-	for i := range b.values {
-		slices.Sort(b.values[i])
-	}
-	return b
 }
