@@ -20,9 +20,24 @@ import (
 // one source for the lot and the session.
 func (a *assembly) numberUsed(v store.Version[store.Value], role calib.Role) (uncertain.Number, []uncertain.Group, error) {
 	n, groups, err := numberOf(v)
-	b := v.Value.UBetweenUnits
-	if err != nil || b == nil || b.StandardUncertainty == 0 {
+	terms := a.unitTerms(v, role)
+	if err != nil || terms == nil {
 		return n, groups, err
+	}
+	units, err := uncertain.New(0, terms...)
+	if err != nil {
+		return n, groups, err
+	}
+	n, err = uncertain.Linear(0, []float64{1, 1}, []uncertain.Number{n, units})
+	return n, groups, err
+}
+
+// unitTerms are the units that a value was used from; nil for a value whose
+// units do not differ.
+func (a *assembly) unitTerms(v store.Version[store.Value], role calib.Role) []uncertain.Term {
+	b := v.Value.UBetweenUnits
+	if b == nil || b.StandardUncertainty == 0 {
+		return nil
 	}
 	count := map[string]int{}
 	total := 0
@@ -37,17 +52,12 @@ func (a *assembly) numberUsed(v store.Version[store.Value], role calib.Role) (un
 		count[id]++
 		total++
 	}
-	var terms []uncertain.Term
+	terms := []uncertain.Term{}
 	for _, id := range slices.Sorted(mapKeys(count)) {
 		terms = append(terms, uncertain.Term{Sensitivity: float64(count[id]) / float64(total),
 			Source: uncertain.Source{ID: id, Kind: uncertain.KindUnit, U: b.StandardUncertainty, Group: b.Group, Per: unitPer(b)}})
 	}
-	units, err := uncertain.New(0, terms...)
-	if err != nil {
-		return n, groups, err
-	}
-	n, err = uncertain.Linear(0, []float64{1, 1}, []uncertain.Number{n, units})
-	return n, groups, err
+	return terms
 }
 
 // unitPer is ∂u_bb²/∂φ: the group's variance is u_bb² itself.

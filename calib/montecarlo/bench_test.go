@@ -66,7 +66,7 @@ func BenchmarkDepthThree(b *testing.B) {
 			b.ReportAllocs()
 			trials, start := 0, processor(b)
 			for b.Loop() {
-				out, err := c.Run(b.Context(), []Handle{last}, Options{Seed: 1, MaxTrials: 1_000_000, All: true, Workers: workers})
+				out, err := c.Run([]Handle{last}, Options{Seed: 1, MaxTrials: 1_000_000, All: true, Workers: workers})
 				if err != nil {
 					b.Fatal(err)
 				}

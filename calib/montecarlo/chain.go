@@ -3,6 +3,7 @@ package montecarlo
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"deltamoor/calib"
 	"deltamoor/calib/uncertain"
@@ -218,7 +219,7 @@ func (c *Chain) Fit(r *calib.Result, anchors []Handle) ([]Handle, error) {
 		}
 		f.corrections, f.inputs = append(f.corrections, h), append(f.inputs, n.Value)
 	}
-	c.adopt(r.Groups())
+	c.Adopt(r.Groups())
 	if err := c.noise(r, &f); err != nil {
 		return nil, err
 	}
@@ -238,8 +239,30 @@ func (c *Chain) Fit(r *calib.Result, anchors []Handle) ([]Handle, error) {
 	return out, nil
 }
 
-// adopt adds the groups that are not there yet.
-func (c *Chain) adopt(groups []uncertain.Group) {
+// FirstOrder is the first-order number of a quantity, with every source it rests on.
+func (c *Chain) FirstOrder(h Handle) uncertain.Number { return c.numbers[h] }
+
+// Size is how many fits and sources a chain has.
+func (c *Chain) Size() (fits, sources int) { return len(c.fits), len(c.distributions) }
+
+// Alone is a fit's subject without its between-session effect, for combining
+// sessions whose effect is estimated from themselves.
+func (c *Chain) Alone(h Handle) (Handle, error) {
+	if int(h) < 0 || int(h) >= len(c.nodes) || c.nodes[h].fit < 0 {
+		return 0, &ChainError{"quantity", fmt.Sprint(h), "a subject of a fit"}
+	}
+	x, n := c.nodes[h], c.numbers[h]
+	if len(x.parts) == 0 {
+		return h, nil
+	}
+	x.parts = nil
+	t, _ := c.fits[x.fit].result.BetweenSession(x.subject)
+	n.Terms = slices.DeleteFunc(slices.Clone(n.Terms), func(o uncertain.Term) bool { return o.ID == t.ID })
+	return c.add(x, n), nil
+}
+
+// Adopt adds the groups that are not there yet.
+func (c *Chain) Adopt(groups []uncertain.Group) {
 	for _, g := range groups {
 		known := false
 		for i := range c.groups {

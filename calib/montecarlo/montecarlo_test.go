@@ -37,7 +37,7 @@ func add(t testing.TB, c *Chain, n uncertain.Number) Handle {
 
 func run(t testing.TB, c *Chain, o Options, of ...Handle) []Outcome {
 	t.Helper()
-	out, err := c.Run(t.Context(), of, o)
+	out, err := c.Run(of, o)
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -474,10 +474,10 @@ func TestRefusals(t *testing.T) {
 	if _, err := chain.Linear(0, []float64{1}, []Handle{9}); !errors.As(err, &refused) {
 		t.Errorf("a foreign quantity: error %v", err)
 	}
-	if _, err := chain.Run(t.Context(), []Handle{h}, Options{Probability: 2}); !errors.As(err, &refused) {
+	if _, err := chain.Run([]Handle{h}, Options{Probability: 2}); !errors.As(err, &refused) {
 		t.Errorf("a probability of 2: error %v", err)
 	}
-	if _, err := chain.Run(t.Context(), []Handle{-1}, Options{}); !errors.As(err, &refused) {
+	if _, err := chain.Run([]Handle{-1}, Options{}); !errors.As(err, &refused) {
 		t.Errorf("no such quantity: error %v", err)
 	}
 	r := fit(t, session("S-1", outside(), 3), calib.Model{})

@@ -1,7 +1,6 @@
 package montecarlo
 
 import (
-	"context"
 	"fmt"
 	"math"
 	"runtime"
@@ -29,6 +28,8 @@ type Options struct {
 	// Workers is how many blocks run at once; 0 means one for each processor.
 	// The answer does not depend on it.
 	Workers int
+	// Stop is asked now and then; an error ends the run with it. Nil never does.
+	Stop func() error
 }
 
 // Bounds of a run.
@@ -73,9 +74,9 @@ type Check struct {
 // trials: what two quantities share is drawn once, so that a difference of them
 // (a [Chain.Linear]) is one more quantity.
 //
-// Memory does not grow with the trials. Errors: *ChainError; ctx's, when it
-// ends first; that of a fit that cannot be solved for some trial.
-func (c *Chain) Run(ctx context.Context, of []Handle, o Options) ([]Outcome, error) {
+// Memory does not grow with the trials. Errors: *ChainError; what Stop says; that of a
+// fit that cannot be solved for some trial.
+func (c *Chain) Run(of []Handle, o Options) ([]Outcome, error) {
 	if err := o.fill(); err != nil {
 		return nil, err
 	}
@@ -99,7 +100,7 @@ func (c *Chain) Run(ctx context.Context, of []Handle, o Options) ([]Outcome, err
 		return nil, err
 	}
 	r := runner{plan: p, o: o, out: out, undefined: c.undefinedU(of), size: blockSize(o.Probability)}
-	if err := r.run(ctx); err != nil {
+	if err := r.run(); err != nil {
 		return nil, err
 	}
 	return out, nil
@@ -126,6 +127,9 @@ func (o *Options) fill() error {
 	}
 	if o.Workers < 0 {
 		return &ChainError{"workers", fmt.Sprint(o.Workers), "a number that is not negative"}
+	}
+	if o.Stop == nil {
+		o.Stop = func() error { return nil }
 	}
 	if o.Workers == 0 {
 		o.Workers = runtime.GOMAXPROCS(0)
@@ -181,10 +185,10 @@ type runner struct {
 	err     error
 }
 
-func (r *runner) run(ctx context.Context) error {
+func (r *runner) run() error {
 	r.turn = sync.NewCond(&r.mu)
 	r.most = max(1, r.o.MaxTrials/r.size)
-	if err := r.first(ctx); err != nil {
+	if err := r.first(); err != nil {
 		return err
 	}
 	var wait sync.WaitGroup
@@ -192,7 +196,7 @@ func (r *runner) run(ctx context.Context) error {
 		wait.Add(1)
 		go func() {
 			defer wait.Done()
-			r.work(ctx)
+			r.work()
 		}()
 	}
 	wait.Wait()
@@ -209,13 +213,13 @@ func (r *runner) run(ctx context.Context) error {
 }
 
 // first runs block 0, which says where the others are counted.
-func (r *runner) first(ctx context.Context) error {
+func (r *runner) first() error {
 	m, err := r.plan.machine()
 	if err != nil {
 		return err
 	}
 	b := make(pilot, len(r.out))
-	err = r.block(ctx, m, 0, func(i int, values []float64) { b[i] = append(b[i], values...) })
+	err = r.block(m, 0, func(i int, values []float64) { b[i] = append(b[i], values...) })
 	if err != nil {
 		return err
 	}
@@ -233,11 +237,11 @@ func (r *runner) first(ctx context.Context) error {
 }
 
 // block runs one block's trials and hands each quantity's values over.
-func (r *runner) block(ctx context.Context, m *machine, index int, yield func(i int, values []float64)) error {
+func (r *runner) block(m *machine, index int, yield func(i int, values []float64)) error {
 	m.stream = newStream(r.o.Seed, uint64(index))
 	for done := 0; done < r.size; done += lanes {
 		if done%(64*lanes) == 0 {
-			if err := ctx.Err(); err != nil {
+			if err := r.o.Stop(); err != nil {
 				return err
 			}
 		}
@@ -253,7 +257,7 @@ func (r *runner) block(ctx context.Context, m *machine, index int, yield func(i 
 }
 
 // work takes blocks until there are none or everything has settled.
-func (r *runner) work(ctx context.Context) {
+func (r *runner) work() {
 	m, err := r.plan.machine()
 	tallies := make([]*tally, len(r.grids))
 	for i := range tallies {
@@ -273,7 +277,7 @@ func (r *runner) work(ctx context.Context) {
 			for _, t := range tallies {
 				t.clear()
 			}
-			err = r.block(ctx, m, index, func(i int, values []float64) { tallies[i].add(&r.grids[i], values) })
+			err = r.block(m, index, func(i int, values []float64) { tallies[i].add(&r.grids[i], values) })
 		}
 
 		r.mu.Lock()
