@@ -34,6 +34,7 @@ var permissions = map[string]registry.Permission{
 	"calculateConversion": registry.MayRead,
 	"addRelation":         registry.MayManage, "changeRelation": registry.MayManage, "decideRelation": registry.MayApprove, "convertValue": registry.MayManage, "convertFinal": registry.MayFit,
 	"addFactor": registry.MayFit, "decideFactor": registry.MayApprove,
+	"calculatePropagation": registry.MayRead, "propagateCalibration": registry.MayRead, "propagateReported": registry.MayRead,
 }
 
 // TestAccessOfEveryRoleToEveryRoute asks every operation of the description as
@@ -204,6 +205,8 @@ func body(operationID string, j journey) string {
 		"exclude":        map[string]any{"act": "exclude", "readings": []any{1}, "cause": "leak", "reason": "r"},
 		"stateOutcome":   map[string]any{"quantity": "d13C", "outcome": "accepted", "reason": "r"},
 		"fitSession":     map[string]any{"quantity": "d13C", "reason": "r"}, "calculateFit": json.RawMessage(lineFit), "compare": map[string]any{"codes": []any{j.reported, j.reported}},
+		"calculatePropagation": json.RawMessage(linePropagation),
+		"propagateCalibration": map[string]any{"max_trials": 20000}, "propagateReported": map[string]any{"max_trials": 20000},
 		"addSamples": map[string]any{"samples": []any{map[string]any{"client": "c", "label": "l", "wanted": []any{map[string]any{"scale": "d13C-VPDB"}}}}},
 		"addFinal":   map[string]any{"sample": j.sample, "scale": "d13C-VPDB-LSVEC"}, "changeFinal": map[string]any{"reason": "r"},
 		"issueReport": map[string]any{"client": "Marsh survey", "title": "t", "finals": []any{j.final}},

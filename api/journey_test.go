@@ -2,6 +2,7 @@ package api_test
 
 import (
 	"fmt"
+	"math"
 	"strings"
 	"testing"
 	"time"
@@ -231,6 +232,7 @@ func (b *bench) everything(j journey) {
 	b.verified()
 	b.answerFor(j)
 	b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/calculations/fit", body: lineFit})
+	b.propagate(j)
 	b.checkpoint()
 
 	b.reviseWhole()
@@ -263,6 +265,47 @@ const lineFit = `{"scale":"d13C-VPDB","model":{"weights":"declared"},
 	"anchors":[{"material":"A","value":-30,"u":0.05},{"material":"B","value":0,"u":0.05},{"material":"C","value":10,"u":0.05}],
 	"readings":[{"material":"A","role":"anchor","raw":-29.9,"u":0.1},{"material":"B","role":"anchor","raw":0.2,"u":0.1},{"material":"C","role":"anchor","raw":10.1,"u":0.1},
 	{"sample":"S1","role":"sample","raw":-12,"u":0.1}]}`
+
+// linePropagation is the same line with what a propagation asks beside.
+var linePropagation = `{"seed":5,"max_trials":60000,"digits":1,` + lineFit[1:]
+
+// propagate asks for the distributions behind a line, a calibration and a
+// reported delta, as an auditor, and again for the same answer.
+func (b *bench) propagate(j journey) {
+	b.t.Helper()
+	before := b.get(registry.Auditor, "/v1/ledger").text(b.t, "root")
+	line := b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/calculations/propagation", body: linePropagation})
+	// Three anchors of u = 0.05 and known readings: nothing is estimated, so the
+	// trials have an u, and the first order holds for a line this well determined.
+	if line.at(b.t, "seed") != 5.0 || line.at(b.t, "settled") != true || line.at(b.t, "quantities.0.check.valid") != true || line.text(b.t, "quantities.0.name") != "S1" {
+		b.t.Errorf("a line's propagation: %s", line.Body)
+	}
+	fit := b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/calculations/fit", body: lineFit})
+	for _, x := range []struct {
+		name     string
+		got, own any
+	}{{"value", line.at(b.t, "quantities.0.value"), fit.at(b.t, "samples.0.value")}, {"U", line.at(b.t, "quantities.0.U"), fit.at(b.t, "samples.0.U")}} {
+		if got, own := x.got.(float64), x.own.(float64); math.Abs(got-own) > 1e-12 { // two ways of adding the same sources
+			b.t.Errorf("%s beside the distribution is %v, of the fit %v", x.name, x.got, x.own)
+		}
+	}
+	again := b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/calculations/propagation", body: linePropagation})
+	if string(again.Body) != string(line.Body) {
+		b.t.Errorf("one seed, two answers:\n%s\n%s", line.Body, again.Body)
+	}
+	whole := b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/calibrations/" + j.calibration + "/propagation", body: map[string]any{"max_trials": 20000, "digits": 1}})
+	delta := b.want(200, request{role: registry.Auditor, method: "POST", path: "/v1/reported/" + j.reported + "/propagation", body: map[string]any{"max_trials": 20000, "seed": 3}})
+	if delta.at(b.t, "seed") != 3.0 || delta.at(b.t, "fits") != 1.0 || delta.text(b.t, "quantities.0.role") != "reported" || whole.text(b.t, "quantities.0.role") == "" {
+		b.t.Errorf("propagations of stored numbers: %s, %s", delta.Body, whole.Body)
+	}
+	refused := b.want(422, request{role: registry.Auditor, method: "POST", path: "/v1/reported/" + j.reported + "/propagation", body: map[string]any{"digits": 3}})
+	if !strings.Contains(string(refused.Body), "digits") {
+		b.t.Errorf("three digits: %s", refused.Body)
+	}
+	if after := b.get(registry.Auditor, "/v1/ledger").text(b.t, "root"); after != before {
+		b.t.Errorf("propagating moved the ledger from %s to %s", before, after)
+	}
+}
 
 // assign measures a material as an unknown and states its value from that session.
 func (b *bench) assign(j journey) {

@@ -86,6 +86,7 @@ func (d *strictDecoder) leave()       { d.path = d.path[:len(d.path)-1] }
 // A shape is what the members of a struct are called and must be.
 type shape struct {
 	names    []string
+	index    [][]int // of the field, through embedded structs
 	enums    []string
 	required []bool
 }
@@ -95,10 +96,12 @@ func (d *strictDecoder) shape(t reflect.Type) *shape {
 		return s
 	}
 	s := &shape{}
-	for i := range t.NumField() {
-		f := t.Field(i)
+	for _, f := range reflect.VisibleFields(t) {
+		if f.Anonymous {
+			continue
+		}
 		name, _, _ := strings.Cut(f.Tag.Get("json"), ",")
-		s.names = append(s.names, name)
+		s.names, s.index = append(s.names, name), append(s.index, f.Index)
 		s.enums = append(s.enums, f.Tag.Get("enum"))
 		s.required = append(s.required, f.Tag.Get("required") == "true")
 	}
@@ -148,6 +151,17 @@ func (d *strictDecoder) from(t json.Token, v reflect.Value, enum string) error {
 			return nil
 		}
 		v.SetInt(i)
+	case reflect.Uint64:
+		n, ok := t.(json.Number)
+		if !ok {
+			return d.mismatch(t, "a whole number")
+		}
+		i, err := strconv.ParseUint(string(n), 10, 64)
+		if err != nil {
+			d.complain(shorten(string(n), longestQuote), "a whole number that is not negative")
+			return nil
+		}
+		v.SetUint(i)
 	case reflect.Bool:
 		b, ok := t.(bool)
 		if !ok {
@@ -280,7 +294,7 @@ func (d *strictDecoder) object(v reflect.Value) error {
 			seen |= 1 << at
 			// null is an absent member, unless it must be there.
 			if t != nil || shape.required[at] {
-				err = d.from(t, v.Field(at), shape.enums[at])
+				err = d.from(t, v.FieldByIndex(shape.index[at]), shape.enums[at])
 			}
 		}
 		d.leave()

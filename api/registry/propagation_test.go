@@ -140,8 +140,8 @@ func TestComparisonAgreesWithTheDistributionsOfBothChains(t *testing.T) {
 		if ratio := *d.StandardUncertainty / pair.StandardUncertainty; math.Abs(ratio-1) > 0.02 {
 			t.Errorf("%s: u of the difference %v by distributions, %v by first order (ratio %.4f)", x.name, *d.StandardUncertainty, pair.StandardUncertainty, ratio)
 		}
-		if math.Abs(d.Mean-pair.Difference) > 0.02*pair.StandardUncertainty {
-			t.Errorf("%s: difference %v by distributions, %v by first order", x.name, d.Mean, pair.Difference)
+		if math.Abs(*d.Mean-pair.Difference) > 0.02*pair.StandardUncertainty {
+			t.Errorf("%s: difference %v by distributions, %v by first order", x.name, *d.Mean, pair.Difference)
 		}
 		shared := pair.StandardUncertainty / pair.RootSumOfSquares
 		if shared < x.least-1e-9 || shared > x.most+1e-9 {
@@ -157,8 +157,9 @@ func TestComparisonAgreesWithTheDistributionsOfBothChains(t *testing.T) {
 
 // A delta that rests on a campaign's value: its chain holds the campaign's
 // sessions with their stored weights, session effects, the unit and stability,
-// all of estimated variances. Welch and Satterthwaite's interval is an
-// approximation to the mixture of t-distributions, good to a tenth of U here.
+// all of variances estimated with few degrees of freedom. There Welch and
+// Satterthwaite's U is too short (by a fifth here, at ν_eff 2.3), which is what
+// the distributions are for; they stay symmetric about the value.
 func TestPropagationFollowsACampaign(t *testing.T) {
 	b := openBench(t)
 	b.method("C-solid", carbonMethod())
@@ -185,11 +186,11 @@ func TestPropagationFollowsACampaign(t *testing.T) {
 	}
 	for _, x := range append(append(whole.Quantities, p.Quantities...), value.Quantities...) {
 		k := x.Check
-		if k.LowDifference > 0.1*k.FirstOrder.U || k.HighDifference > 0.1*k.FirstOrder.U {
-			t.Errorf("%s: end points off by %.3g and %.3g of U = %.3g (ν_eff %.3g)", x.Name, k.LowDifference, k.HighDifference, k.FirstOrder.U, k.FirstOrder.DegreesOfFreedom)
+		if middle := (x.Low + x.High) / 2; math.Abs(middle-k.Value) > 0.04*k.FirstOrder.U {
+			t.Errorf("%s: interval about %v, value %v", x.Name, middle, k.Value)
 		}
-		if math.Abs(x.Mean-k.Value) > 0.02*k.FirstOrder.U {
-			t.Errorf("%s: mean %v, value %v", x.Name, x.Mean, k.Value)
+		if ratio := (x.High - x.Low) / 2 / k.FirstOrder.U; !(ratio > 0.9 && ratio < 1.35) {
+			t.Errorf("%s: half the interval is %.3f U, ν_eff %.3g", x.Name, ratio, k.FirstOrder.DegreesOfFreedom)
 		}
 	}
 }

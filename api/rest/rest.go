@@ -58,6 +58,9 @@ type face struct {
 	api      huma.API
 
 	initialised atomic.Bool // a registry does not go back
+
+	// propagations holds one entry for each that is running.
+	propagations chan struct{}
 }
 
 // Mount registers the API on a router, under /v1, with its description at
@@ -79,7 +82,7 @@ func Mount(e *echo.Echo, r *registry.Registry, auth Authenticator, o Options) (*
 	if o.MaxBody == 0 {
 		o.MaxBody = 1 << 20
 	}
-	f := &face{registry: r, auth: auth, options: o}
+	f := &face{registry: r, auth: auth, options: o, propagations: make(chan struct{}, propagationsAtOnce)}
 	f.api = humaecho.New(e, describe(o.Version))
 	f.api.UseMiddleware(f.limitTime, f.authenticate, f.idempotent)
 	f.routes()

@@ -150,6 +150,8 @@ func (f *face) routes() {
 	handle(f, o(post, "/calibrations/{code}/decisions", "decideCalibration", "calibrations", "Submit, approve, decline or withdraw a calibration", creates, conditional), decisionOn(f, calibrationKind))
 	handle(f, o(post, "/calculations/fit", "calculateFit", "calibrations", "Fit without storing anything", fitBody), f.calculateFit)
 	handle(f, o(post, "/calculations/conversion", "calculateConversion", "calibrations", "Convert a delta to another scale without storing anything"), f.calculateConversion)
+	handle(f, o(post, "/calculations/propagation", "calculatePropagation", "calibrations", "Propagate distributions through a fit without storing anything", propagationBody), f.calculatePropagation)
+	handle(f, o(post, "/calibrations/{code}/propagation", "propagateCalibration", "trust", "Propagate distributions through the whole chain of a calibration's results; nothing is stored"), f.propagateCalibration)
 
 	handle(f, o(get, "/samples", "listSamples", "samples", "List samples", listing[Sample]), recordsOf(f, sampleKind))
 	handle(f, o(post, "/samples", "addSamples", "samples", "Put samples on the list: all or none", creates, long,
@@ -188,6 +190,7 @@ func (f *face) routes() {
 		handle(f, o(get, r.address+"/trace", "trace"+r.operation, "trust", "Trace "+r.phrase, tracing, named(r.address)), f.traceOf(r.kind, r.made))
 		handle(f, o(get, r.address+"/verification", "verify"+r.operation, "trust", "Recompute the chain of "+r.phrase+" now", long, named(r.address)), f.verificationOf(r.kind, r.made))
 	}
+	handle(f, o(post, "/reported/{code}/propagation", "propagateReported", "trust", "Propagate distributions through the whole chain of a reported delta; nothing is stored"), f.propagateReported)
 
 	handle(f, o(get, "/revisions", "listRevisions", "trust", "List revisions", listing[Revision]), recordsOf(f, revisionKind))
 	handle(f, o(post, "/revisions", "addRevision", "trust", "Say what may have been wrong: what moves, and with preview=false everything drawn up again as a job", creates, long, previewed[RevisionPreview], accepted202[RevisionMade]), f.addRevision)

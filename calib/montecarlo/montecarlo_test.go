@@ -70,7 +70,7 @@ func TestAdditiveModelMatchesJCGM101(t *testing.T) {
 			t.Fatalf("%s: not settled after %d trials", c.d, x.Trials)
 		}
 		// Settled means known to δ/5 = 0.01 at two standard deviations.
-		near(t, string(c.d)+" mean", x.Mean, 0, 0.015)
+		near(t, string(c.d)+" mean", *x.Mean, 0, 0.015)
 		near(t, string(c.d)+" u", *x.StandardUncertainty, 2, 0.015)
 		near(t, string(c.d)+" low", x.Low, -c.high, 0.015)
 		near(t, string(c.d)+" high", x.High, c.high, 0.015)
@@ -292,7 +292,7 @@ func TestOrdinarySessionsHaveFirstOrderIntervals(t *testing.T) {
 			// Three standard deviations of an end point of that many trials, whose
 			// density there is φ(1.96)/u, and δ for what is not linear.
 			allowed := x.Check.Tolerance + 3*math.Sqrt(0.025*0.975/float64(x.Trials))*u/0.05845
-			near(t, what+" mean", x.Mean, r.Subjects[i].Value, allowed)
+			near(t, what+" mean", *x.Mean, r.Subjects[i].Value, allowed)
 			near(t, what+" low", x.Low, r.Subjects[i].Value-half, allowed)
 			near(t, what+" high", x.High, r.Subjects[i].Value+half, allowed)
 		}

@@ -41,7 +41,8 @@ const (
 
 // An Outcome is the distribution of one quantity.
 type Outcome struct {
-	Mean float64
+	// Mean of the trials; nil where a source of ν ≤ 1 leaves it undefined.
+	Mean *float64
 	// StandardUncertainty of the trials; nil where a source of ν ≤ 2 leaves it undefined.
 	StandardUncertainty *float64
 	// Low and High bound the probabilistically symmetric interval, ShortestLow
@@ -99,7 +100,7 @@ func (c *Chain) Run(of []Handle, o Options) ([]Outcome, error) {
 	if err != nil {
 		return nil, err
 	}
-	r := runner{plan: p, o: o, out: out, undefined: c.undefinedU(of), size: blockSize(o.Probability)}
+	r := runner{plan: p, o: o, out: out, least: c.leastDF(of), size: blockSize(o.Probability)}
 	if err := r.run(); err != nil {
 		return nil, err
 	}
@@ -166,11 +167,11 @@ func blockSize(p float64) int {
 // A runner runs a plan in blocks. Workers take blocks in order, run them at
 // once, and hand them over in order.
 type runner struct {
-	plan      *plan
-	o         Options
-	out       []Outcome
-	undefined []bool
-	size      int
+	plan  *plan
+	o     Options
+	out   []Outcome
+	least []float64 // smallest ν of what each quantity rests on
+	size  int
 
 	grids []grid
 	total []*tally
@@ -304,7 +305,7 @@ func (r *runner) take(tallies []*tally) {
 		r.total[i].merge(t)
 		r.stats[i].add(t, &r.grids[i], r.o.Probability)
 		delta := r.out[i].Check.Tolerance
-		r.out[i].Settled = r.stats[i].settled(delta, r.undefined[i]) && r.grids[i].width <= math.Max(delta/10, minimumWidth(&r.grids[i]))
+		r.out[i].Settled = r.stats[i].settled(delta, r.least[i] <= 2) && r.grids[i].width <= math.Max(delta/10, minimumWidth(&r.grids[i]))
 		settled = settled && r.out[i].Settled
 	}
 	r.stopped = settled && !r.o.All
@@ -319,8 +320,11 @@ func minimumWidth(g *grid) float64 {
 func (r *runner) finish(i int) {
 	out, t, g := &r.out[i], r.total[i], &r.grids[i]
 	mean, sd := t.moments(g)
-	out.Mean, out.Trials, out.Resolution = mean, int(t.n), g.width
-	if !r.undefined[i] {
+	out.Trials, out.Resolution = int(t.n), g.width
+	if r.least[i] > 1 {
+		out.Mean = &mean
+	}
+	if r.least[i] > 2 {
 		out.StandardUncertainty = &sd
 	}
 	out.Low, out.High = t.interval(g, r.o.Probability)
@@ -331,18 +335,31 @@ func (r *runner) finish(i int) {
 	k.Valid = k.LowDifference <= k.Tolerance && k.HighDifference <= k.Tolerance
 }
 
-// undefinedU says which quantities rest on a variance of ν ≤ 2.
-func (c *Chain) undefinedU(of []Handle) []bool {
-	small := map[string]bool{}
+// leastDF is the smallest ν of the variances that each quantity rests on.
+func (c *Chain) leastDF(of []Handle) []float64 {
+	nu := map[string]float64{}
 	for _, g := range c.groups {
-		for _, nu := range degrees(g) {
-			small[g.ID] = small[g.ID] || nu <= 2
+		least := math.Inf(1)
+		for j, v := range degrees(g) {
+			if g.Variances[j] > 0 {
+				least = math.Min(least, v)
+			}
 		}
+		nu[g.ID] = least
 	}
-	out := make([]bool, len(of))
+	out := make([]float64, len(of))
 	for i, h := range of {
+		out[i] = math.Inf(1)
 		for _, t := range c.numbers[h].Terms {
-			out[i] = out[i] || (small[t.Group] && t.U > 0)
+			take := func(group string) {
+				if v, ok := nu[group]; ok && t.U > 0 && t.Sensitivity != 0 {
+					out[i] = math.Min(out[i], v)
+				}
+			}
+			take(t.Group)
+			for _, s := range t.Shares {
+				take(s.Group)
+			}
 		}
 	}
 	return out
