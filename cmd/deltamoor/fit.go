@@ -22,14 +22,28 @@ is needed. "-" reads standard input.
 
 FILE holds what POST /v1/calculations/fit takes, in JSON, and --json prints
 what it answers. The tables are rounded by the uncertainties; --json has every
-digit. A result with flags is a result: the exit status is 0.`
+digit. A result with flags is a result: the exit status is 0.
+
+With --draws the distributions of readings and anchors are propagated too, and
+the interval of each sample is held against its U (JCGM 101, clause 8); FILE may
+then say seed, max_trials and digits, as POST /v1/calculations/propagation takes
+them, and --json prints what that answers.`
+	var draws drawFlags
+	draws.add(cmd)
 	cmd.Example = `  deltamoor fit session.json
-  deltamoor fit --json - <session.json`
+  deltamoor fit --json - <session.json
+  deltamoor fit session.json --draws 1000000 --seed 7`
 	cmd.Args = arguments("FILE")
-	cmd.RunE = p.action(func(_ context.Context, _ *cobra.Command, args []string) error {
+	cmd.RunE = p.action(func(ctx context.Context, _ *cobra.Command, args []string) error {
+		if err := draws.check(); err != nil {
+			return err
+		}
 		text, err := p.readInput(args[0], registry.MaxUpload)
 		if err != nil {
 			return err
+		}
+		if draws.draws > 0 {
+			return p.fitDistributions(ctx, text, draws)
 		}
 		request, err := exchange.DecodeFit(text)
 		if err != nil {
@@ -49,6 +63,45 @@ digit. A result with flags is a result: the exit status is 0.`
 		}
 		return printFit(p.stdout, request, answer)
 	})
+}
+
+// fitDistributions prints the fit and what its distributions give.
+func (p *program) fitDistributions(ctx context.Context, text []byte, draws drawFlags) error {
+	request, err := exchange.DecodePropagation(text)
+	if err != nil {
+		return err
+	}
+	session, model, policy, q, err := request.Calculation()
+	if err != nil {
+		return err
+	}
+	flags := draws.request()
+	q.MaxTrials, q.Unbounded = flags.MaxTrials, true
+	if flags.Seed != nil {
+		q.Seed = flags.Seed
+	}
+	if q.Digits == 0 {
+		q.Digits = flags.Digits
+	}
+	propagation, err := registry.CalculatePropagation(ctx, session, model, policy, q)
+	if err != nil {
+		return exchange.FitComplaints(err)
+	}
+	answer := exchange.NewPropagationAnswer(propagation)
+	if p.json {
+		return p.printJSON(answer)
+	}
+	result, err := calib.Fit(session, model, policy)
+	if err != nil {
+		return exchange.FitComplaints(err)
+	}
+	if err := printFit(p.stdout, request.FitRequest, exchange.NewFitAnswer(request.FitRequest, result)); err != nil {
+		return err
+	}
+	if _, err := fmt.Fprintln(p.stdout); err != nil {
+		return err
+	}
+	return printPropagation(p.stdout, answer)
 }
 
 // readInput reads a file, or standard input for "-", and stops one byte past

@@ -9,6 +9,7 @@ import (
 
 	"github.com/spf13/cobra"
 
+	"deltamoor/api/exchange"
 	"deltamoor/api/registry"
 	"deltamoor/store"
 )
@@ -29,15 +30,24 @@ held against itself alone.
 A ledger cannot show by itself that its newest entries were cut off. A signed
 checkpoint that was kept elsewhere can: name its file with --checkpoint.
 
+With CODE and --draws, the distributions of everything that the number rests on
+are propagated through the whole chain as well, every fit of every generation
+solved again, and its U is held against them (JCGM 101, clause 8). That shows
+whether U can be relied on; it is no difference, and leaves the exit status.
+A chain in which something differs is not propagated.
+
 Reading asks for the right to open the database, and for no token.`
 	cmd.Example = `  deltamoor verify
   deltamoor verify D7K3M-9Q2XG
+  deltamoor verify D7K3M-9Q2XG --draws 1000000
   deltamoor verify evidence.zip --checkpoint kept-elsewhere.txt
   deltamoor verify --laboratory FJO --checkpoint kept-elsewhere.txt`
 	var laboratory string
 	var workers int
 	var checkpoints, keys []string
+	var draws drawFlags
 	laboratoryFlag(cmd, &laboratory)
+	draws.add(cmd)
 	cmd.Flags().Lookup("laboratory").Usage = "only the ledger of the laboratory with this `code`"
 	cmd.Flags().IntVar(&workers, "workers", 0, "`how many` versions to check at once; 0 is one for each processor")
 	cmd.Flags().StringArrayVar(&checkpoints, "checkpoint", nil, "`file` of a signed checkpoint kept outside; may be repeated")
@@ -45,6 +55,11 @@ Reading asks for the right to open the database, and for no token.`
 	settingFlags(cmd, "data", "database")
 	cmd.Args = func(cmd *cobra.Command, args []string) error {
 		if len(args) == 0 || len(args) == 1 && isPackFile(args[0]) {
+			for _, name := range []string{"draws", "seed", "digits"} {
+				if cmd.Flags().Changed(name) {
+					return fmt.Errorf("--%s: found without a code, expected only with one", name)
+				}
+			}
 			return nil
 		}
 		for _, name := range []string{"workers", "checkpoint", "key"} {
@@ -58,6 +73,9 @@ Reading asks for the right to open the database, and for no token.`
 	cmd.RunE = p.action(func(ctx context.Context, cmd *cobra.Command, args []string) error {
 		if workers < 0 {
 			return usagef("--workers: found %d, expected 0 or more", workers)
+		}
+		if err := draws.check(); err != nil {
+			return err
 		}
 		q := registry.VerifyRequest{Workers: workers, Verifiers: keys}
 		for _, name := range checkpoints {
@@ -76,7 +94,7 @@ Reading asks for the right to open the database, and for no token.`
 		}
 		defer o.close()
 		if len(args) == 1 {
-			return p.verifyChain(ctx, o, laboratory, args[0])
+			return p.verifyChain(ctx, o, laboratory, args[0], draws)
 		}
 		if laboratory != "" {
 			if _, err := o.reader(ctx, laboratory); err != nil {
@@ -100,6 +118,8 @@ type verifyAnswer struct {
 	// More counts findings beyond those listed, Cut versions that were not followed.
 	More int `json:"more,omitempty"`
 	Cut  int `json:"cut,omitempty"`
+	// Propagation is there where draws were asked for.
+	Propagation *exchange.PropagationAnswer `json:"propagation,omitempty"`
 }
 
 type ledgerAnswer struct {
@@ -167,7 +187,7 @@ func (p *program) verifyAll(ctx context.Context, o *opened, q registry.VerifyReq
 }
 
 // verifyChain verifies what one number rests on.
-func (p *program) verifyChain(ctx context.Context, o *opened, laboratory, text string) error {
+func (p *program) verifyChain(ctx context.Context, o *opened, laboratory, text string, draws drawFlags) error {
 	s, err := parseSubject(text)
 	if err != nil {
 		return err
@@ -185,8 +205,22 @@ func (p *program) verifyChain(ctx context.Context, o *opened, laboratory, text s
 	if err != nil {
 		return err
 	}
+	var distributions *exchange.PropagationAnswer
+	if draws.draws > 0 && v.Clean() {
+		var propagation registry.Propagation
+		if s.kind == "" {
+			propagation, err = o.PropagateReported(ctx, actor, s.code, draws.request())
+		} else {
+			propagation, err = o.PropagateVersion(ctx, actor, s.kind, s.code, s.version, draws.request())
+		}
+		if err != nil {
+			return err
+		}
+		answer := exchange.NewPropagationAnswer(propagation)
+		distributions = &answer
+	}
 	if p.json {
-		answer := verifyAnswer{Clean: v.Clean(), Ledgers: []ledgerAnswer{}, Recomputed: v.Recomputed, Equal: v.Equal, Proved: &v.Proved, Findings: findingAnswers(v.Findings), Cut: v.Cut}
+		answer := verifyAnswer{Clean: v.Clean(), Propagation: distributions, Ledgers: []ledgerAnswer{}, Recomputed: v.Recomputed, Equal: v.Equal, Proved: &v.Proved, Findings: findingAnswers(v.Findings), Cut: v.Cut}
 		for _, l := range v.Ledgers {
 			answer.Ledgers = append(answer.Ledgers, ledgerAnswer{l.Laboratory, l.Entries, store.Hash(l.Root).String(), &l.Checkpoints})
 		}
@@ -215,6 +249,12 @@ func (p *program) verifyChain(ctx context.Context, o *opened, laboratory, text s
 		fmt.Fprintf(p.stdout, "not followed      %d versions beyond the first %d\n", v.Cut, registry.MaxTrace)
 	}
 	fmt.Fprintln(p.stdout)
+	if distributions != nil {
+		if err := printPropagation(p.stdout, *distributions); err != nil {
+			return err
+		}
+		fmt.Fprintln(p.stdout)
+	}
 	return p.printFindings(v.Findings, len(v.Findings))
 }
 
