@@ -78,7 +78,73 @@ func TestAdditiveModelMatchesJCGM101(t *testing.T) {
 	}
 }
 
+// sumOfRectangular is the distribution function of a sum of rectangular numbers
+// on ±a_i, exactly: 1/(n!·Π2a_i)·Σ_s Πs_i·(x + Σs_i·a_i)₊ⁿ over all signs s.
+func sumOfRectangular(x float64, a []float64) float64 {
+	n := len(a)
+	var sum float64
+	for signs := range 1 << n {
+		at, sign := x, 1.0
+		for i, v := range a {
+			if signs>>i&1 == 1 {
+				at, sign = at-v, -sign
+			} else {
+				at += v
+			}
+		}
+		if at > 0 {
+			sum += sign * math.Pow(at, float64(n))
+		}
+	}
+	for i, v := range a {
+		sum /= 2 * v * float64(i+1)
+	}
+	return sum
+}
+
+// JCGM 101:2008 9.2.4: three rectangular inputs of unit standard deviation and
+// one of 10. The interval is the exact one of the sum (the clause prints ±17.0
+// beside the first order's ±19.9, from memory), the check says that the first
+// order does not hold, and a sum of four equal ones has 9.2.3's end point.
+func TestDominantRectangularInputMatchesJCGM101(t *testing.T) {
+	unit := math.Sqrt(3)
+	equal := []float64{unit, unit, unit, unit}
+	near(t, "9.2.3's end point by the exact sum", quantileOf(func(x float64) float64 { return sumOfRectangular(x, equal) }, 0.975, 0, 7), 3.8794067413478207564, 1e-9)
+	distributions := map[string]Distribution{}
+	for i := range 4 {
+		distributions[fmt.Sprint("x", i)] = Rectangular
+	}
+	chain := NewChain(nil, distributions)
+	var of []Handle
+	for i := range 4 {
+		u := 1.0
+		if i == 3 {
+			u = 10
+		}
+		of = append(of, add(t, chain, number(0, fmt.Sprint("x", i), u)))
+	}
+	y, err := chain.Linear(0, []float64{1, 1, 1, 1}, of)
+	if err != nil {
+		t.Fatal(err)
+	}
+	x := run(t, chain, Options{Seed: 6, MaxTrials: 3_000_000}, y)[0]
+	high := quantileOf(func(x float64) float64 { return sumOfRectangular(x, []float64{unit, unit, unit, 10 * unit}) }, 0.975, 0, 30)
+	near(t, "the clause's interval, from memory", high, 17.0, 0.05)
+	near(t, "first order, from memory", x.Check.FirstOrder.U, 19.9, 0.05)
+	// δ = ½·10⁰ for u = 10 (two digits); settled is known to δ/5.
+	near(t, "δ", x.Check.Tolerance, 0.5, 1e-12)
+	if !x.Settled || x.Check.Valid {
+		t.Errorf("settled %v, valid %v; want settled and not valid", x.Settled, x.Check.Valid)
+	}
+	near(t, "low", x.Low, -high, 0.1)
+	near(t, "high", x.High, high, 0.1)
+	near(t, "u", *x.StandardUncertainty, math.Sqrt(103), 0.1)
+}
+
 func TestToleranceIsHalfTheSecondDigit(t *testing.T) {
+	for u, want := range map[float64]float64{2.0: 0.5, 0.0432: 0.005, 0.096: 0.05, 9.6: 5, 43: 5, 0: 0} {
+		near(t, fmt.Sprint("δ of one digit of ", u), Tolerance(u, 1), want, 1e-12*want)
+	}
 	for u, want := range map[float64]float64{2.0: 0.05, 0.0432: 0.0005, 0.0999: 0.005, 9.96: 0.5, 43: 0.5, 120: 5, 0: 0} {
 		near(t, fmt.Sprint("δ of ", u), Tolerance(u, 2), want, 1e-12*want)
 	}

@@ -157,7 +157,10 @@ func TestPlansUseTheLineForm(t *testing.T) {
 // Drawn together or apart, quantities have the same means, covariance and
 // quartiles: within four standard deviations of what that many trials leave.
 func TestDrawingTogetherKeepsTheDistribution(t *testing.T) {
-	const n = 60_000
+	n := 60_000
+	if testing.Short() { // the race detector's share
+		n = 6_000
+	}
 	for name, chain := range planChains(t) {
 		c, of := chain()
 		together, apart := trials(t, c, planKind{}, 11, n, of...), trials(t, c, planKind{apart: true}, 12, n, of...)
@@ -165,13 +168,13 @@ func TestDrawingTogetherKeepsTheDistribution(t *testing.T) {
 			for j := i; j < len(of); j++ {
 				a, va := productMean(together[i], together[j])
 				b, vb := productMean(apart[i], apart[j])
-				near(t, fmt.Sprintf("%s: covariance of %d and %d", name, i, j), a, b, 4*math.Sqrt((va+vb)/n))
+				near(t, fmt.Sprintf("%s: covariance of %d and %d", name, i, j), a, b, 4*math.Sqrt((va+vb)/float64(n)))
 			}
 			u := math.Sqrt(c.numbers[of[i]].Variance())
 			for _, p := range []float64{0.025, 0.25, 0.75, 0.975} {
 				x := c.numbers[of[i]].Value + u*2*(p-0.5)*2
 				fa, fb := below(together[i], x), below(apart[i], x)
-				near(t, fmt.Sprintf("%s: distribution of %d at %g u", name, i, 4*(p-0.5)), fa, fb, 4*math.Sqrt(2*0.25/n))
+				near(t, fmt.Sprintf("%s: distribution of %d at %g u", name, i, 4*(p-0.5)), fa, fb, 4*math.Sqrt(2*0.25/float64(n)))
 			}
 		}
 	}
