@@ -59,11 +59,41 @@ func (b *chainBuilder) final(ctx context.Context, f store.Version[store.Final]) 
 		}
 		weights, of = append(weights, m.Weight), append(of, h)
 	}
+	h, err := b.members(ctx, f, weights, of)
+	if err != nil {
+		return 0, err
+	}
+	return h, b.same(f.Ref, h, f.Value.Value, f.Value.StandardUncertainty)
+}
+
+// members combines a final value's members. Those of a converted one carry
+// weights in its own per mil: they are combined on the scale they were measured
+// on, and brought through the relation together.
+func (b *chainBuilder) members(ctx context.Context, f store.Version[store.Final], weights []float64, of []montecarlo.Handle) (montecarlo.Handle, error) {
+	from, rel, isConverted, err := converted(ctx, b.v, f.Inputs)
+	if err != nil {
+		return 0, err
+	}
+	if !isConverted {
+		h, err := b.chain.Linear(0, weights, of)
+		return h, b.refused(err)
+	}
+	original, err := decodeVersion[store.Final](ctx, b.v, from)
+	if err != nil {
+		return 0, err
+	}
+	slope, err := slopeFrom(rel, original.Value.Scale)
+	if err != nil {
+		return 0, err
+	}
+	for i := range weights {
+		weights[i] /= slope
+	}
 	h, err := b.chain.Linear(0, weights, of)
 	if err != nil {
 		return 0, b.refused(err)
 	}
-	return h, b.same(f.Ref, h, f.Value.Value, f.Value.StandardUncertainty)
+	return b.convert(rel, original.Value.Scale, h)
 }
 
 // line is one result of a calibration.
@@ -137,8 +167,17 @@ func (b *chainBuilder) value(ctx context.Context, v store.Version[store.Value]) 
 		return 0, err
 	}
 	b.chain.Adopt(groups)
+	from, rel, isConverted, err := converted(ctx, b.v, v.Inputs)
+	if err != nil {
+		return 0, err
+	}
 	var h montecarlo.Handle
-	if v.Value.Basis == "assignment" && !v.Value.BackLoaded {
+	if isConverted {
+		h, err = b.convertedValue(ctx, from, rel)
+		if err == nil {
+			err = b.same(v.Ref, h, stated.Value, stated.StandardUncertainty())
+		}
+	} else if v.Value.Basis == "assignment" && !v.Value.BackLoaded {
 		b.depth++
 		b.deepest = max(b.deepest, b.depth)
 		h, err = b.assigned(ctx, v)
@@ -154,6 +193,35 @@ func (b *chainBuilder) value(ctx context.Context, v store.Version[store.Value]) 
 	}
 	b.values[ref] = h
 	return h, nil
+}
+
+// convertedValue is an assigned value on the other side of a relation.
+func (b *chainBuilder) convertedValue(ctx context.Context, from store.Ref, rel store.Version[store.Relation]) (montecarlo.Handle, error) {
+	old, err := decodeVersion[store.Value](ctx, b.v, from)
+	if err != nil {
+		return 0, err
+	}
+	h, err := b.value(ctx, old)
+	if err != nil {
+		return 0, err
+	}
+	return b.convert(rel, old.Value.Scale, h)
+}
+
+// convert is a quantity on the other side of a relation, which is linear in it;
+// the relation's constants enter to first order about the value.
+func (b *chainBuilder) convert(rel store.Version[store.Relation], from string, h montecarlo.Handle) (montecarlo.Handle, error) {
+	x := b.chain.FirstOrder(h).Value
+	own, _, err := convert(rel, from, uncertain.Exact(x))
+	if err != nil {
+		return 0, err
+	}
+	factor, err := slopeFrom(rel, from)
+	if err != nil {
+		return 0, err
+	}
+	out, err := b.chain.Linear(own.Value-factor*x, []float64{factor}, []montecarlo.Handle{h}, own.Terms...)
+	return out, b.refused(err)
 }
 
 // assigned is Σ weights·sessions, and for a campaign its session effects and

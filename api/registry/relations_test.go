@@ -128,6 +128,16 @@ func TestConvertedFinalValueTracesThroughItsRelation(t *testing.T) {
 	original, err := b.Compare(b.ctx, b.auditor, []string{b.report("Marsh survey", first.Code).Lines[0].Code, b.report("Marsh survey", other.Code).Lines[0].Code}, 0)
 	b.must(err)
 	near(t, "u of the difference", c.Pair.StandardUncertainty, 1.03092*original.Pair.StandardUncertainty, 1e-6)
+	// The distributions go through the relation too, its constants drawn once for
+	// both: the interval of the difference is that of the originals, in new per mil.
+	half := func(codes []string) registry.Propagated {
+		p, err := b.PropagateComparison(b.ctx, b.auditor, codes, registry.PropagationRequest{MaxTrials: 400_000})
+		b.must(err)
+		return p.Quantities[2]
+	}
+	d, o := half([]string{rep.Lines[0].Code, rep.Lines[1].Code}), half([]string{original.Deltas[0].Code, original.Deltas[1].Code})
+	near(t, "interval of the difference", d.High-d.Low, 1.03092*(o.High-o.Low), 0.02*(o.High-o.Low))
+	near(t, "U of the difference", d.Check.FirstOrder.U, c.Pair.Expanded.U, 1e-9)
 	b.verified()
 }
 
@@ -150,5 +160,8 @@ func TestConvertedValueStaysCorrelatedWithItsOrigin(t *testing.T) {
 		t.Errorf("sources %+v: want that of the original value", v.Value.Sources)
 	}
 	b.approve(store.KindValue, v.Code)
+	p, err := b.PropagateVersion(b.ctx, b.auditor, store.KindValue, v.Code, 0, registry.PropagationRequest{MaxTrials: 100_000})
+	b.must(err)
+	near(t, "u of the distribution", *p.Quantities[0].StandardUncertainty, v.Value.StandardUncertainty, 0.02*v.Value.StandardUncertainty)
 	b.verified()
 }

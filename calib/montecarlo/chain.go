@@ -227,7 +227,11 @@ func (c *Chain) Fit(r *calib.Result, anchors []Handle) ([]Handle, error) {
 	var out []Handle
 	for i := range r.Subjects {
 		x := node{fit: len(c.fits) - 1, subject: i}
-		if t, ok := r.BetweenSession(i); ok {
+		for _, own := range []func(int) (uncertain.Term, bool){r.Homogeneity, r.BetweenSession} {
+			t, ok := own(i)
+			if !ok {
+				continue
+			}
 			p, err := c.part(t)
 			if err != nil {
 				return nil, err
@@ -252,11 +256,11 @@ func (c *Chain) Alone(h Handle) (Handle, error) {
 		return 0, &ChainError{"quantity", fmt.Sprint(h), "a subject of a fit"}
 	}
 	x, n := c.nodes[h], c.numbers[h]
-	if len(x.parts) == 0 {
+	t, ok := c.fits[x.fit].result.BetweenSession(x.subject)
+	if !ok {
 		return h, nil
 	}
-	x.parts = nil
-	t, _ := c.fits[x.fit].result.BetweenSession(x.subject)
+	x.parts = slices.DeleteFunc(slices.Clone(x.parts), func(p part) bool { return p.source == c.at[t.ID] })
 	n.Terms = slices.DeleteFunc(slices.Clone(n.Terms), func(o uncertain.Term) bool { return o.ID == t.ID })
 	return c.add(x, n), nil
 }
