@@ -175,7 +175,7 @@ func (b *bench) everything(j journey) {
 		"/v1/methods", "/v1/methods/C-solid", "/v1/methods/C-solid/versions", "/v1/methods/C-solid/versions/1", "/v1/methods/C-solid/decisions",
 		"/v1/sessions", session, session + "/versions", session + "/versions/1", session + "/trace", session + "/readings", session + "/readings?limit=3", session + "/exclusions",
 		session + "/outcomes", session + "/outcomes/d13C", session + "/outcomes/d13C/versions", session + "/outcomes/d13C/versions/1", session + "/calibrations",
-		calibration, calibration + "/versions", calibration + "/versions/1", calibration + "/results", calibration + "/decisions", calibration + "/trace",
+		calibration, calibration + "/versions", calibration + "/versions/1", calibration + "/results", calibration + "/decisions", calibration + "/companion", calibration + "/trace",
 		"/v1/samples", "/v1/samples/" + j.sample, "/v1/samples/" + j.sample + "/versions", "/v1/samples/" + j.sample + "/versions/1",
 		"/v1/finals", final, final + "/versions", final + "/versions/1", final + "/decisions", final + "/trace",
 		"/v1/reports", report, report + "/versions", report + "/versions/1", report + "/decisions", "/v1/reported/" + j.reported, "/v1/reported/" + j.reported + "/trace", "/v1/reported/" + j.reported + "/today",
@@ -261,7 +261,7 @@ func relation(code string) map[string]any {
 }
 
 // lineFit is a line through three anchors with declared weights.
-const lineFit = `{"scale":"d13C-VPDB","model":{"weights":"declared"},
+const lineFit = `{"scale":"d13C-VPDB","model":{"weights":"declared"},"companion":true,
 	"anchors":[{"material":"A","value":-30,"u":0.05},{"material":"B","value":0,"u":0.05},{"material":"C","value":10,"u":0.05}],
 	"readings":[{"material":"A","role":"anchor","raw":-29.9,"u":0.1},{"material":"B","role":"anchor","raw":0.2,"u":0.1},{"material":"C","role":"anchor","raw":10.1,"u":0.1},
 	{"sample":"S1","role":"sample","raw":-12,"u":0.1}]}`

@@ -46,7 +46,22 @@ type Calibration struct {
 
 	Readings []ReadingDiagnosis `json:"readings"`
 	Results  []Result           `json:"results"`
-	Flags    []calib.Flag       `json:"flags,omitempty"`
+	// Needs test each term of the model, and each that the readings would allow;
+	// absent in versions recorded before they were kept.
+	Needs []Need       `json:"needs,omitempty"`
+	Flags []calib.Flag `json:"flags,omitempty"`
+}
+
+// A Need is a test of whether the readings ask for a term of the model.
+type Need struct {
+	Term            string   `json:"term"` // drift drift.quadratic drift.slope size memory
+	Model           bool     `json:"in_model,omitempty"`
+	DeltaChiSquare  float64  `json:"delta_chi_square"`
+	DeltaParameters int      `json:"delta_parameters"`
+	F               *float64 `json:"f,omitempty"` // nil where the variance is known
+	PValue          float64  `json:"p_value"`
+	AICcWith        *float64 `json:"aicc_with,omitempty"`
+	AICcWithout     *float64 `json:"aicc_without,omitempty"`
 }
 
 // Form of the body.

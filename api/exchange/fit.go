@@ -25,6 +25,7 @@ type FitRequest struct {
 	ReadingCovariance [][]float64  `json:"reading_covariance,omitempty" doc:"Covariance of the raw deltas (‰²), in the order of all readings; overrides their u; declared weights only."`
 	CrossCovariance   [][]float64  `json:"cross_covariance,omitempty" doc:"Covariance of raw deltas and assigned values (‰²), readings × anchors."`
 	Probability       float64      `json:"probability,omitempty" minimum:"0" maximum:"1" doc:"Coverage probability of U; left out: 0.95." example:"0.95"`
+	Companion         bool         `json:"companion,omitempty" doc:"Asks for a robust fit beside the official one, as an opinion." example:"false"`
 }
 
 // A FitModel names the terms of the model and the weights.

@@ -210,6 +210,11 @@ func TestFitAnswerHasTheContractsMembers(t *testing.T) {
 	}
 	delete(sample, "p")
 	delete(sample, "role")
+	// So does what the readings say of each term; the example has no such list.
+	if _, ok := got["needs"].([]any); !ok {
+		t.Errorf("needs %v", got["needs"])
+	}
+	delete(got, "needs")
 	if diff := cmp.Diff(want, got); diff != "" {
 		t.Errorf("(-want +got):\n%s", diff)
 	}
@@ -252,10 +257,12 @@ func TestFitAnswerWritesNullForWhatCannotBeComputed(t *testing.T) {
 		t.Fatal(err)
 	}
 	empty := generic(t, text)
-	if want := slices.Sorted(maps.Keys(generic(t, []byte(fitAnswerExample)))); !slices.Equal(want, slices.Sorted(maps.Keys(empty))) {
+	members := generic(t, []byte(fitAnswerExample))
+	members["needs"] = nil
+	if want := slices.Sorted(maps.Keys(members)); !slices.Equal(want, slices.Sorted(maps.Keys(empty))) {
 		t.Errorf("members %v", slices.Sorted(maps.Keys(empty)))
 	}
-	for _, key := range []string{"parameters", "covariance", "noise_covariance", "variances", "variance_covariance", "readings", "anchors", "samples", "flags"} {
+	for _, key := range []string{"parameters", "covariance", "noise_covariance", "variances", "variance_covariance", "readings", "anchors", "samples", "needs", "flags"} {
 		if list, ok := empty[key].([]any); !ok || len(list) != 0 {
 			t.Errorf("%s is %v, expected an empty list", key, empty[key])
 		}
@@ -278,4 +285,53 @@ func TestFitComplaintsPlaceTheEnginesRefusalsInTheBody(t *testing.T) {
 		t.Errorf("refusal %+v", refusal)
 	}
 	wantRefusal(t, FitComplaints(&calib.TooManyError{Refusal: calib.Refusal{Place: "readings", Found: "9", Expected: "at most 8"}}), registry.TooLarge, "body.readings")
+}
+
+// A session with one reading that is off, asked for with its companion: the
+// companion weighs that reading less and suggests a look, and the official
+// numbers are those without it.
+func TestFitAnswersTheCompanionOnlyWhereItIsAskedFor(t *testing.T) {
+	body := func(companion string) []byte {
+		return []byte(`{"model":{"drift":"linear","weights":"equal"},` + companion + `
+			"anchors":[{"material":"A","value":-30,"u":0.03},{"material":"B","value":10,"u":0.03}],
+			"readings":[{"material":"A","role":"anchor","raw":-30.01,"time":0},{"material":"B","role":"anchor","raw":10.02,"time":1},
+				{"material":"A","role":"anchor","raw":-29.98,"time":2},{"material":"B","role":"anchor","raw":10.01,"time":3},
+				{"material":"A","role":"anchor","raw":-28.50,"time":4},{"material":"B","role":"anchor","raw":10.03,"time":5},
+				{"material":"A","role":"anchor","raw":-30.02,"time":6},{"material":"B","role":"anchor","raw":9.99,"time":7},
+				{"material":"A","role":"anchor","raw":-30.00,"time":8},{"material":"B","role":"anchor","raw":10.00,"time":9},
+				{"material":"A","role":"anchor","raw":-29.99,"time":10},{"material":"B","role":"anchor","raw":10.01,"time":11},
+				{"sample":"S","role":"sample","raw":-10,"time":4}]}`)
+	}
+	answer := func(companion string) FitAnswer {
+		request, err := DecodeFit(body(companion))
+		if err != nil {
+			t.Fatal(err)
+		}
+		a, err := AnswerFit(request)
+		if err != nil {
+			t.Fatal(err)
+		}
+		return a
+	}
+	plain, with := answer(""), answer(`"companion":true,`)
+	if plain.Companion != nil || with.Companion == nil {
+		t.Fatalf("companion %v without asking, %v with", plain.Companion, with.Companion)
+	}
+	c := with.Companion
+	if !slices.Equal(c.Suggested, []int{4}) {
+		t.Errorf("suggested %v, want reading 4, which is 1.5 ‰ off", c.Suggested)
+	}
+	if w := c.Readings[4].Weight; c.Readings[4].Index != 4 || w == nil || !(*w < 0.1) {
+		t.Errorf("reading 4 has the weight %v", w)
+	}
+	if s := c.Samples[0]; s.Sample != "S" || s.Value == nil || math.Abs(*s.Value+10) > 0.05 || math.Abs(*s.Difference-(*s.Value-*with.Samples[0].Value)) > 1e-12 {
+		t.Errorf("sample %+v beside %v; the other readings put it within 0.05 of −10", s, *with.Samples[0].Value)
+	}
+	with.Companion = nil
+	if diff := cmp.Diff(plain, with); diff != "" {
+		t.Errorf("asking for the companion changed the official answer:\n%s", diff)
+	}
+	if len(plain.Needs) == 0 || !strings.HasSuffix(plain.Needs[0].Sentence, ".") {
+		t.Errorf("needs %+v", plain.Needs)
+	}
 }

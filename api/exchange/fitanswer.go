@@ -26,7 +26,9 @@ type FitAnswer struct {
 	Readings           []FitDiagnostic `json:"readings" nullable:"false" doc:"Diagnosis of the readings, by their index in the request."`
 	Anchors            []FitAdjusted   `json:"anchors" nullable:"false" doc:"Assigned values before and after the adjustment."`
 	Samples            []FitSample     `json:"samples" nullable:"false" doc:"Deltas of samples and controls on the scale."`
+	Needs              []FitNeed       `json:"needs" nullable:"false" doc:"What the readings say of each term that the model has, or could have."`
 	Flags              []FitFlag       `json:"flags" nullable:"false" doc:"Judgements that travel with the result."`
+	Companion          *FitCompanion   `json:"companion,omitempty" doc:"A robust fit beside the official one, where it was asked for."`
 	ConditionNumber    *float64        `json:"condition_number" doc:"Of the scaled, whitened problem."`
 	Engine             string          `json:"engine" doc:"Number of the algorithm." example:"1"`
 }
@@ -131,6 +133,28 @@ type FitFlag struct {
 	Advice   string `json:"advice,omitempty" doc:"What to do about it."`
 }
 
+// AnswerFit computes what a request asks for: the fit, and the companion where
+// it is wanted. Refusals name their place in the body.
+func AnswerFit(request FitRequest) (FitAnswer, error) {
+	session, model, policy, err := request.Session()
+	if err != nil {
+		return FitAnswer{}, err
+	}
+	result, err := calib.Fit(session, model, policy)
+	if err != nil {
+		return FitAnswer{}, FitComplaints(err)
+	}
+	answer := NewFitAnswer(request, result)
+	if request.Companion {
+		companion, err := result.Companion()
+		if err != nil {
+			return FitAnswer{}, FitComplaints(err)
+		}
+		answer.Companion = NewFitCompanion(companion, nil)
+	}
+	return answer, nil
+}
+
 // NewFitAnswer writes a result in the words of the contract. request gives
 // nothing to the numbers; it is the request that the result answers.
 func NewFitAnswer(request FitRequest, r *calib.Result) FitAnswer {
@@ -150,6 +174,7 @@ func NewFitAnswer(request FitRequest, r *calib.Result) FitAnswer {
 		Readings:           []FitDiagnostic{},
 		Anchors:            []FitAdjusted{},
 		Samples:            []FitSample{},
+		Needs:              fitNeeds(r.Needs),
 		Flags:              []FitFlag{},
 		ConditionNumber:    finite(r.ConditionNumber),
 		Engine:             r.Engine,

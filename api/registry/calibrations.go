@@ -195,6 +195,9 @@ func (a *assembly) state(r *calib.Result) store.Calibration {
 		}
 		b.Results = append(b.Results, res)
 	}
+	for _, n := range r.Needs {
+		b.Needs = append(b.Needs, store.Need(n))
+	}
 	for _, f := range r.Flags {
 		f.Readings = a.numbers(f.Readings)
 		b.Flags = append(b.Flags, f)

@@ -31,15 +31,11 @@ func (f *face) calculateFit(ctx context.Context, actor registry.Actor, in *struc
 	if err != nil {
 		return nil, err
 	}
-	session, model, policy, err := request.Session()
+	answer, err := exchange.AnswerFit(request)
 	if err != nil {
-		return nil, exchange.FitComplaints(err)
+		return nil, err
 	}
-	result, err := f.registry.Calculate(session, model, policy)
-	if err != nil {
-		return nil, exchange.FitComplaints(err)
-	}
-	return &plain[exchange.FitAnswer]{exchange.NewFitAnswer(request, result)}, nil
+	return &plain[exchange.FitAnswer]{answer}, nil
 }
 
 // fitBody describes the body of a stateless fit, which is read as it came.

@@ -51,7 +51,25 @@ type Calibration struct {
 	ConditionNumber    float64        `json:"condition_number"`
 	Readings           []ReadingCheck `json:"readings" doc:"What the fit says of each reading, by its number in the session."`
 	Results            []Result       `json:"results"`
+	Needs              []Need         `json:"needs" doc:"What the readings say of each term that the model has, or could have; empty in versions recorded before it was kept."`
 	Flags              []Flag         `json:"flags"`
+}
+
+// A Need is a test of whether the readings ask for a term.
+type Need struct {
+	Term            string   `json:"term" example:"drift" doc:"drift.slope is a slope that changes with time."`
+	InModel         bool     `json:"in_model"`
+	DeltaChiSquare  float64  `json:"delta_chi_square" doc:"How much the term explains."`
+	DeltaParameters int      `json:"delta_parameters"`
+	F               *float64 `json:"f" doc:"null where the readings' variance is known: then delta_chi_square is the test."`
+	PValue          float64  `json:"p_value"`
+	AICcWith        *float64 `json:"aicc_with"`
+	AICcWithout     *float64 `json:"aicc_without"`
+	Sentence        string   `json:"sentence" doc:"The same in plain words."`
+}
+
+func showNeed(n store.Need) Need {
+	return Need{n.Term, n.Model, n.DeltaChiSquare, n.DeltaParameters, n.F, n.PValue, n.AICcWith, n.AICcWithout, calib.TermNeed(n).Sentence()}
 }
 
 // An Anchor is an anchor as the fit used it.
@@ -178,6 +196,7 @@ func showCalibration(it registry.Item[store.Calibration]) Calibration {
 		return ReadingCheck{r.Number, r.Corrected, r.Predicted, r.Residual, r.Standardized, r.Studentized, r.Leverage, r.CooksD}
 	})
 	out.Results = convert(c.Results, showResult)
+	out.Needs = convert(c.Needs, showNeed)
 	return out
 }
 

@@ -146,6 +146,7 @@ func (f *face) routes() {
 	handle(f, o(get, "/calibrations/{code}/versions/{version}", "getCalibrationVersion", "calibrations", "Read one version of a calibration"), versionOf(f, calibrationKind))
 	handle(f, o(get, "/calibrations/{code}/changes", "getCalibrationChanges", "calibrations", "Set two versions of a calibration against each other: what changed, and what that moved", conflicts), f.calibrationChanges)
 	handle(f, o(get, "/calibrations/{code}/results", "listResults", "calibrations", "List the results of a calibration", listing[Result]), f.results)
+	handle(f, o(get, "/calibrations/{code}/companion", "getCompanion", "calibrations", "Read a robust fit beside a calibration, as an opinion"), f.companion)
 	handle(f, o(get, "/calibrations/{code}/decisions", "listCalibrationDecisions", "calibrations", "List the decisions on a calibration", listing[VersionDecision]), decisionsOn(f, calibrationKind))
 	handle(f, o(post, "/calibrations/{code}/decisions", "decideCalibration", "calibrations", "Submit, approve, decline or withdraw a calibration", creates, conditional), decisionOn(f, calibrationKind))
 	handle(f, o(post, "/calculations/fit", "calculateFit", "calibrations", "Fit without storing anything", fitBody), f.calculateFit)

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"io"
 	"os"
+	"slices"
 	"strconv"
 	"strings"
 
@@ -34,6 +35,8 @@ them, and --json prints what that answers.`
   deltamoor fit --json - <session.json
   deltamoor fit session.json --draws 1000000 --seed 7`
 	cmd.Args = arguments("FILE")
+	var companion bool
+	cmd.Flags().BoolVar(&companion, "companion", false, "show a robust fit beside the official one, as an opinion")
 	cmd.RunE = p.action(func(ctx context.Context, _ *cobra.Command, args []string) error {
 		if err := draws.check(); err != nil {
 			return err
@@ -49,15 +52,11 @@ them, and --json prints what that answers.`
 		if err != nil {
 			return err
 		}
-		session, model, policy, err := request.Session()
+		request.Companion = request.Companion || companion
+		answer, err := exchange.AnswerFit(request)
 		if err != nil {
 			return err
 		}
-		result, err := calib.Fit(session, model, policy)
-		if err != nil {
-			return exchange.FitComplaints(err)
-		}
-		answer := exchange.NewFitAnswer(request, result)
 		if p.json {
 			return p.printJSON(answer)
 		}
@@ -182,6 +181,16 @@ func printFit(w io.Writer, request exchange.FitRequest, answer exchange.FitAnswe
 			_ = t.print(&b)
 		}
 	}
+	for i, n := range answer.Needs {
+		if i == 0 {
+			b.WriteString("\n")
+		}
+		fmt.Fprintln(&b, n.Sentence)
+	}
+	if answer.Companion != nil {
+		b.WriteString("\n")
+		printCompanion(&b, answer)
+	}
 	for i, f := range answer.Flags {
 		if i == 0 {
 			b.WriteString("\n")
@@ -233,4 +242,54 @@ func orDash(text string) string {
 		return "–"
 	}
 	return text
+}
+
+// printCompanion writes the robust fit as an opinion: what it would weigh less,
+// and how far that would move the values.
+func printCompanion(b *strings.Builder, answer exchange.FitAnswer) {
+	c := answer.Companion
+	fmt.Fprintf(b, "companion: %s", c.Method)
+	if c.Scale != nil {
+		fmt.Fprintf(b, ", readings' u × %s", significant(c.Scale, 3))
+	}
+	fmt.Fprintf(b, "\n%s\n\n", c.Note)
+	parameters := newTable("parameter", ">companion", ">difference/u")
+	for i, x := range c.Parameters {
+		parameters.add(x.Name, optional(x.Value, decimalsOf(answer.Parameters[i].StandardUncertainty)), optional(x.InUnits, 2))
+	}
+	if l, official := c.Line, answer.Line; l != nil && official != nil {
+		parameters.add("true = intercept", optional(l.Intercept, decimalsOf(official.UIntercept)), "")
+		parameters.add("     + slope·raw", optional(l.Slope, decimalsOf(official.USlope)), "")
+	}
+	_ = parameters.print(b)
+	readings := newTable(">reading", ">residual ‰", ">residual/u", ">weight", "")
+	for _, x := range c.Readings {
+		if x.Weight == nil || *x.Weight >= 1 {
+			continue
+		}
+		look := ""
+		if slices.Contains(c.Suggested, x.Index) {
+			look = "suggested for a look"
+		}
+		readings.add(strconv.Itoa(x.Index), significant(x.Residual, 3), optional(x.InUnits, 1), optional(x.Weight, 2), look)
+	}
+	if len(readings.rows) > 0 {
+		b.WriteString("\n")
+		_ = readings.print(b)
+	} else {
+		b.WriteString("\nEvery reading has its full weight.\n")
+	}
+	samples := newTable("sample", ">companion ‰", ">difference/u")
+	var us []*float64
+	for _, x := range answer.Samples {
+		us = append(us, x.StandardUncertainty)
+	}
+	n := decimalsOf(us...)
+	for _, x := range c.Samples {
+		samples.add(x.Sample+x.Material, optional(x.Value, n), optional(x.InUnits, 2))
+	}
+	if len(samples.rows) > 0 {
+		b.WriteString("\n")
+		_ = samples.print(b)
+	}
 }
