@@ -171,7 +171,7 @@ func (b *bench) everything(j journey) {
 		value, value + "/versions", value + "/versions/1", value + "/decisions", value + "/trace",
 		"/v1/relations", "/v1/relations/C-OWN", "/v1/relations/C-OWN/versions", "/v1/relations/C-OWN/versions/1", "/v1/relations/C-OWN/decisions",
 		"/v1/instruments/EA1/h3-factors/trace", "/v1/instruments/EA1/h3-factors/verification", "/v1/relations/C-OWN/trace", "/v1/relations/C-OWN/verification", "/v1/instruments/EA1/h3-factors", "/v1/instruments/EA1/h3-factors?format=csv", "/v1/instruments/EA1/h3-factors/1", "/v1/instruments/EA1/h3-factors/decisions",
-		"/v1/instruments", "/v1/instruments/EA1", "/v1/instruments/EA1/versions", "/v1/instruments/EA1/versions/1",
+		"/v1/instruments", "/v1/instruments/EA1", "/v1/instruments/EA1/versions", "/v1/instruments/EA1/versions/1", "/v1/instruments/EA1/lines", "/v1/instruments/EA1/lines?all=true&method=C-solid&scale=d13C-VPDB-LSVEC&measurand=total&limit=1",
 		"/v1/methods", "/v1/methods/C-solid", "/v1/methods/C-solid/versions", "/v1/methods/C-solid/versions/1", "/v1/methods/C-solid/decisions",
 		"/v1/sessions", session, session + "/versions", session + "/versions/1", session + "/trace", session + "/readings", session + "/readings?limit=3", session + "/exclusions",
 		session + "/outcomes", session + "/outcomes/d13C", session + "/outcomes/d13C/versions", session + "/outcomes/d13C/versions/1", session + "/calibrations",
@@ -188,7 +188,7 @@ func (b *bench) everything(j journey) {
 		b.get(registry.Administrator, path)
 	}
 	for _, path := range []string{"/v1/scales", "/v1/materials", "/v1/units", "/v1/sessions", session + "/readings", session + "/exclusions", session + "/outcomes", calibration + "/results", calibration + "/versions",
-		"/v1/samples", "/v1/finals", report, "/v1/reports", value + "/versions", value + "/decisions", "/v1/methods", "/v1/instruments", "/v1/people", "/v1/ledger/entries"} {
+		"/v1/samples", "/v1/finals", report, "/v1/reports", value + "/versions", value + "/decisions", "/v1/methods", "/v1/instruments", "/v1/instruments/EA1/lines", "/v1/people", "/v1/ledger/entries"} {
 		a := b.get(registry.Auditor, path+"?format=csv")
 		if media := a.Header.Get("Content-Type"); !strings.HasPrefix(media, csvType) {
 			b.t.Errorf("%s as CSV has the media type %q", path, media)

@@ -345,6 +345,16 @@ type Limits struct {
 	ControlRequired  bool    `json:"control_required,omitempty"`
 	// MinimumResolution of neighbouring peaks of one analysis; 1.5 separates them to the base line.
 	MinimumResolution float64 `json:"minimum_resolution,omitempty"`
+	// TestLevel is the p-value below which a test of the fit is flagged; 0 means 0.05.
+	TestLevel float64 `json:"test_level,omitempty"`
+	// HistoryLimit flags a slope, intercept or drift further than so many standard
+	// deviations from the instrument's history of HistorySessions approved sessions; 0
+	// means 3, of 30 sessions.
+	HistoryLimit    float64 `json:"history_limit,omitempty"`
+	HistorySessions int     `json:"history_sessions,omitempty"`
+	// AmountUnit is the unit of the readings' amounts, which the materials' minimum
+	// portion is held against; "" means mg.
+	AmountUnit string `json:"amount_unit,omitempty"`
 }
 
 // A Correction declares where one correction is made. State "" is "not said", which cannot be approved.

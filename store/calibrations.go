@@ -50,6 +50,28 @@ type Calibration struct {
 	// absent in versions recorded before they were kept.
 	Needs []Need       `json:"needs,omitempty"`
 	Flags []calib.Flag `json:"flags,omitempty"`
+	// History is what the instrument's lines were when the fit was made; nil for too few.
+	History *LineHistory `json:"history,omitempty"`
+	// Observed are those of Flags that rest on what was known around the fit and
+	// not on the inputs it names; a recomputation takes them over.
+	Observed []calib.Flag `json:"observed,omitempty"`
+}
+
+// A LineHistory is what an instrument's approved lines were before a session,
+// by the same method on the same scale.
+type LineHistory struct {
+	From         *Instant             `json:"from,omitempty"`
+	To           *Instant             `json:"to,omitempty"`
+	Coefficients []HistoryCoefficient `json:"coefficients"`
+}
+
+// A HistoryCoefficient is the mean and the standard deviation of one
+// coefficient over N lines.
+type HistoryCoefficient struct {
+	Parameter string  `json:"parameter"` // slope intercept drift.linear
+	N         int     `json:"n"`
+	Centre    float64 `json:"centre"`
+	Spread    float64 `json:"spread"`
 }
 
 // A Need is a test of whether the readings ask for a term of the model.

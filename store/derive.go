@@ -34,6 +34,7 @@ var derivedTables = []struct {
 	{namesTable, "kind", "code", "version", ""},
 	{resultsTable, "", "calibration", "version", KindCalibration},
 	{sensitivitiesTable, "", "calibration", "version", KindCalibration},
+	{linesTable, "", "calibration", "version", KindCalibration},
 	{reportedTable, "", "report", "version", KindReport},
 	{sharesTable, "kind", "code", "number", ""},
 }
@@ -61,7 +62,7 @@ func derive(raw Raw, finalValue func(Input) (Version[Final], error)) (derived, e
 	}
 	switch raw.Kind {
 	case KindCalibration:
-		rows["results"], rows["sensitivities"], err = resultsOf(raw)
+		rows["results"], rows["sensitivities"], rows["lines"], err = resultsOf(raw)
 	case KindReport:
 		rows["reported"], rows["shares"], err = reportedOf(raw, finalValue)
 	case KindFinal:
@@ -151,10 +152,10 @@ func namesOf(raw Raw) ([][]any, error) {
 	return rows, nil
 }
 
-func resultsOf(raw Raw) (results, sensitivities [][]any, err error) {
+func resultsOf(raw Raw) (results, sensitivities, lines [][]any, err error) {
 	c, err := Decode[Calibration](raw)
 	if err != nil {
-		return nil, nil, err
+		return nil, nil, nil, err
 	}
 	at := int64(0)
 	if c.Value.StartedAt != nil {
@@ -165,11 +166,11 @@ func resultsOf(raw Raw) (results, sensitivities [][]any, err error) {
 			c.Value.Session, c.Value.Scale, c.Value.Measurand, c.Value.Instrument, at, r.Value + 0, r.StandardUncertainty + 0,
 			strings.Join(r.Flags, " "), int64(raw.RecordedAt)})
 	}
-	parameters, lines, err := packSensitivities(c.Value)
+	parameters, packed, err := packSensitivities(c.Value)
 	if err != nil {
-		return nil, nil, err
+		return nil, nil, nil, err
 	}
-	return results, [][]any{{raw.Laboratory, raw.Code, int64(raw.Version), parameters, lines}}, nil
+	return results, [][]any{{raw.Laboratory, raw.Code, int64(raw.Version), parameters, packed}}, lineOf(raw, c), nil
 }
 
 func sharesOfFinal(raw Raw) ([][]any, error) {

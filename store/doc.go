@@ -54,7 +54,7 @@
 //
 // Of three classes. History (versions, readings, uploads, content, entries,
 // tree_hashes, checkpoints) is inserted only. Derived (edges, results,
-// sensitivities, reported, names, uses, currents, ledger_heads) is written in the
+// sensitivities, lines, reported, names, uses, currents, ledger_heads) is written in the
 // transaction of the version it comes from, by derive, and can be made again. Working
 // (credentials, sign_ins, tokens, idempotency, jobs, leases) may change or vanish
 // without any number moving.

@@ -10,7 +10,7 @@ const (
 	moveRebuild    = `UPDATE rebuilds SET position = $3 WHERE laboratory = $1 AND name = $2`
 	dropRebuild    = `DELETE FROM rebuilds WHERE laboratory = $1 AND name = $2`
 	selectToFill   = `SELECT ` + versionColumns + ` FROM versions v
-		WHERE v.laboratory = $1 AND v.position >= $2 AND v.position < $3 AND v.kind IN ('final', 'report') ORDER BY v.position`
+		WHERE v.laboratory = $1 AND v.position >= $2 AND v.position < $3 AND v.kind IN ('calibration', 'final', 'report') ORDER BY v.position`
 )
 
 // rebuildStep is how many positions of a ledger one transaction fills.
@@ -49,8 +49,15 @@ func (s *Store) rebuild(ctx context.Context, before error) error {
 }
 
 func (s *Store) rebuildLaboratory(ctx context.Context, laboratory, name string, position int64) error {
-	if name != sharesTable.name {
-		return fmt.Errorf("found the table %q, expected %s", name, sharesTable.name)
+	filled, ok := map[string]struct {
+		table
+		key string
+	}{
+		sharesTable.name: {sharesTable, "(laboratory, calibration, version, kind, code, number)"},
+		linesTable.name:  {linesTable, "(laboratory, calibration, version)"},
+	}[name]
+	if !ok {
+		return fmt.Errorf("found the table %q, expected %s or %s", name, sharesTable.name, linesTable.name)
 	}
 	for done := false; !done; {
 		from, next := position, position
@@ -72,7 +79,7 @@ func (s *Store) rebuildLaboratory(ctx context.Context, laboratory, name string, 
 				}
 				rows = append(rows, of[name]...)
 			}
-			if err := tx.q.insert(ctx, sharesTable, rows, "ON CONFLICT (laboratory, calibration, version, kind, code, number) DO NOTHING"); err != nil {
+			if err := tx.q.insert(ctx, filled.table, rows, "ON CONFLICT "+filled.key+" DO NOTHING"); err != nil {
 				return err
 			}
 			if done = to >= head.Size; done {

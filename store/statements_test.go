@@ -24,7 +24,7 @@ var withoutLaboratory = map[string]string{
 	"selectRebuilds":       "what a migration left to fill, before anybody reads",
 	"hasTable":             "the engine's own catalogue",
 	// Pieces of statements, complete only with what stands beside them.
-	"versionColumns": "columns", "resultColumns": "columns", "jobColumns": "columns",
+	"versionColumns": "columns", "resultColumns": "columns", "lineColumns": "columns", "jobColumns": "columns",
 }
 
 // What shows that a statement is confined: a condition on laboratory, or, in an

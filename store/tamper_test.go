@@ -41,6 +41,7 @@ var tableKeys = map[string][]string{
 	"edges":         {"laboratory", "from_kind", "from_code", "from_version", "part", "to_laboratory", "to_kind", "to_code", "to_version"},
 	"results":       {"laboratory", "calibration", "version", "line"},
 	"sensitivities": {"laboratory", "calibration", "version"},
+	"lines":         {"laboratory", "calibration", "version"},
 	"reported":      {"code"},
 	"names":         {"laboratory", "kind", "name", "code", "version"},
 	"shares":        {"laboratory", "calibration", "version", "kind", "code", "number"},

@@ -54,7 +54,7 @@ func keyColumns(t string) int {
 		return 4
 	case "shares":
 		return 6
-	case "sensitivities", "uses", "currents":
+	case "sensitivities", "lines", "uses", "currents":
 		return 3
 	}
 	return 1

@@ -78,6 +78,10 @@ var orphans = []orphan{
 		`SELECT d.laboratory, d.calibration, d.version FROM sensitivities d
 			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = 'calibration' AND v.code = d.calibration AND v.version = d.version
 			WHERE d.laboratory = $1 AND v.version IS NULL ORDER BY d.calibration, d.version`},
+	{"lines", "no version it comes from", []string{"%s", " %s", " %s"},
+		`SELECT d.laboratory, d.calibration, d.version FROM lines d
+			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = 'calibration' AND v.code = d.calibration AND v.version = d.version
+			WHERE d.laboratory = $1 AND v.version IS NULL ORDER BY d.calibration, d.version`},
 	{"reported", "no version it comes from", []string{"%s"},
 		`SELECT d.code FROM reported d
 			LEFT JOIN versions v ON v.laboratory = d.laboratory AND v.kind = 'report' AND v.code = d.report AND v.version = d.version

@@ -33,6 +33,9 @@ type assembly struct {
 	flags           []calib.Flag
 	// prepared is what the readings became before the last fit.
 	prepared preparation
+	// observed and history are what was known around the fit when it was made.
+	observed []calib.Flag
+	history  *store.LineHistory
 }
 
 // assemble chooses what a new fit is made of, and names it as inputs.
@@ -172,7 +175,8 @@ func otherScales(ctx context.Context, v *store.View, laboratory, material string
 
 // assembleStored loads what a stored calibration names as its inputs.
 func assembleStored(ctx context.Context, v source, c store.Version[store.Calibration]) (assembly, error) {
-	a := assembly{version: c.Ref, model: c.Value.Model, limits: c.Value.Limits, between: c.Value.BetweenSession, sampled: c.Value.SampleHomogeneity, excluded: map[int]bool{}, controls: map[string]store.Version[store.Value]{}}
+	a := assembly{version: c.Ref, model: c.Value.Model, limits: c.Value.Limits, between: c.Value.BetweenSession, sampled: c.Value.SampleHomogeneity,
+		observed: c.Value.Observed, history: c.Value.History, excluded: map[int]bool{}, controls: map[string]store.Version[store.Value]{}}
 	for _, n := range c.Value.Excluded {
 		a.excluded[n] = true
 	}
@@ -337,7 +341,7 @@ func (a *assembly) input() (calib.Session, calib.Policy, error) {
 	s.Groups = append(s.Groups, a.prepared.groups...)
 	l := a.limits
 	p := calib.Policy{Probability: l.Probability, CoverageFactor: l.CoverageFactor, LeftOutLimit: l.LeftOut, StudentizedLimit: l.Studentized,
-		MinimumSpan: l.MinimumSpan, AdvisedSpan: l.AdvisedSpan, MinimumAnchors: l.MinimumAnchors}
+		MinimumSpan: l.MinimumSpan, AdvisedSpan: l.AdvisedSpan, MinimumAnchors: l.MinimumAnchors, TestLevel: l.TestLevel}
 	if b := a.between; b != nil {
 		p.BetweenSession = calib.BetweenSession{StandardUncertainty: b.StandardUncertainty, Session: a.session.Code, Scale: a.spec.Scale, Common: b.Common}
 		if b.DegreesOfFreedom != nil {

@@ -62,6 +62,10 @@ func (r *Registry) Fit(ctx context.Context, actor Actor, q FitRequest) (Item[sto
 		if err != nil {
 			return err
 		}
+		if err := a.observe(ctx, &tx.View, actor.Laboratory, body); err != nil {
+			return err
+		}
+		a.addObserved(&body)
 		if q.Preview {
 			out = Item[store.Calibration]{State: store.Drafted}
 			out.Value, out.Inputs = body, inputs
@@ -127,6 +131,7 @@ func (a *assembly) fit() (store.Calibration, error) {
 	body.Flags = append(body.Flags, a.repeatabilityFlags(result)...)
 	body.Flags = append(body.Flags, a.prepared.flags...)
 	body.Flags = append(body.Flags, a.flags...)
+	a.addObserved(&body)
 	return body, nil
 }
 

@@ -96,11 +96,12 @@ func checkMethod(code string, m store.Method) complaints {
 		}
 		for name, x := range map[string]float64{"k": q.Limits.CoverageFactor, "left_out_z": q.Limits.LeftOut, "studentized": q.Limits.Studentized,
 			"minimum_span": q.Limits.MinimumSpan, "advised_span": q.Limits.AdvisedSpan, "control_deviation": q.Limits.ControlDeviation, "replicate_sd": q.Limits.ReplicateSD,
-			"minimum_resolution": q.Limits.MinimumResolution} {
+			"minimum_resolution": q.Limits.MinimumResolution, "history_limit": q.Limits.HistoryLimit} {
 			if !(x >= 0 && x < 1e6) {
 				c.add(place+".limits."+name, fmt.Sprint(x), "a limit of 0 or more")
 			}
 		}
+		checkJudgementLimits(&c, place+".limits", q.Limits)
 		if b := q.BetweenSession; b != nil && !(b.StandardUncertainty >= 0 && b.StandardUncertainty < 1e6) {
 			c.add(place+".between_session.u", fmt.Sprint(b.StandardUncertainty), "a standard uncertainty of 0 or more")
 		}

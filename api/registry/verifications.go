@@ -142,9 +142,14 @@ func (c *recheck) version(ctx context.Context, v source, raw store.Raw) error {
 			return err
 		}
 		scale, condition = a.largest(), stored.Value.ConditionNumber
-		if again, err = a.fit(); err != nil {
+		refitted, err := a.fit()
+		if err != nil {
 			return err
 		}
+		if stored.Value.Needs == nil { // recorded before they were kept
+			refitted.Needs = nil
+		}
+		again = refitted
 	case store.KindFinal:
 		stored, err := store.Decode[store.Final](raw)
 		if err != nil {

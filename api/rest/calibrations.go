@@ -52,7 +52,24 @@ type Calibration struct {
 	Readings           []ReadingCheck `json:"readings" doc:"What the fit says of each reading, by its number in the session."`
 	Results            []Result       `json:"results"`
 	Needs              []Need         `json:"needs" doc:"What the readings say of each term that the model has, or could have; empty in versions recorded before it was kept."`
+	History            *LineHistory   `json:"history" doc:"What the instrument's approved lines were when the fit was made; null where there were too few."`
 	Flags              []Flag         `json:"flags"`
+}
+
+// A LineHistory is what an instrument's approved lines were before a session,
+// by the same method on the same scale.
+type LineHistory struct {
+	From         *time.Time           `json:"from"`
+	To           *time.Time           `json:"to"`
+	Coefficients []HistoryCoefficient `json:"coefficients"`
+}
+
+// A HistoryCoefficient is the mean and the standard deviation over n lines.
+type HistoryCoefficient struct {
+	Parameter string  `json:"parameter" enum:"slope,intercept,drift.linear"`
+	N         int     `json:"n"`
+	Centre    float64 `json:"centre" doc:"Mean."`
+	Spread    float64 `json:"spread" doc:"Standard deviation."`
 }
 
 // A Need is a test of whether the readings ask for a term.
@@ -197,6 +214,10 @@ func showCalibration(it registry.Item[store.Calibration]) Calibration {
 	})
 	out.Results = convert(c.Results, showResult)
 	out.Needs = convert(c.Needs, showNeed)
+	if h := c.History; h != nil {
+		out.History = &LineHistory{timePointer(h.From), timePointer(h.To),
+			convert(h.Coefficients, func(x store.HistoryCoefficient) HistoryCoefficient { return HistoryCoefficient(x) })}
+	}
 	return out
 }
 

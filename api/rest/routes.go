@@ -112,6 +112,8 @@ func (f *face) routes() {
 	handle(f, o(get, "/instruments/{code}/h3-factors/decisions", "listFactorDecisions", "sessions", "List the decisions on H3 factors", listing[VersionDecision]), decisionsOn(f, factorKind))
 	handle(f, o(post, "/instruments/{code}/h3-factors/decisions", "decideFactor", "sessions", "Submit, approve, decline or withdraw an H3 factor", creates, conditional), decisionOn(f, factorKind))
 
+	handle(f, o(get, "/instruments/{code}/lines", "listLines", "sessions", "List an instrument's slopes, intercepts and drifts, for a chart", listing[InstrumentLine]), f.lines)
+
 	handle(f, o(get, "/methods", "listMethods", "sessions", "List methods", listing[Method]), recordsOf(f, methodKind))
 	handle(f, o(post, "/methods", "addMethod", "sessions", "State a method: a draft", creates), f.addMethod)
 	handle(f, o(get, "/methods/{code}", "getMethod", "sessions", "Read the method in force"), recordOf(f, methodKind))
