@@ -56,25 +56,38 @@ func mustFit(t testing.TB, s Session, m Model, p Policy) *Result {
 	return r
 }
 
-// valuesOnly fits and predicts without the diagnostics of the fit, for
-// simulations of thousands of sessions.
+// valuesOnly is quickFit for tests that expect no refusal.
 func valuesOnly(t testing.TB, s Session, m Model) *Result {
 	t.Helper()
-	fail := func(err error) {
-		t.Helper()
-		if err != nil {
-			t.Fatal(err)
-		}
+	r, err := quickFit(s, m, Policy{})
+	if err != nil {
+		t.Fatal(err)
 	}
-	fail(validate(&s, m, Policy{}))
-	in, err := prepare(&s, m, Policy{})
-	fail(err)
+	return r
+}
+
+// quickFit fits and predicts without the diagnostics of the fit, for
+// simulations of thousands of sessions.
+func quickFit(s Session, m Model, policy Policy) (*Result, error) {
+	if err := validate(&s, m, policy); err != nil {
+		return nil, err
+	}
+	in, err := prepare(&s, m, policy)
+	if err != nil {
+		return nil, err
+	}
 	p, err := in.newProblem(-1)
-	fail(err)
+	if err != nil {
+		return nil, err
+	}
 	solved, err := p.solve()
-	fail(err)
+	if err != nil {
+		return nil, err
+	}
 	c, err := solved.calibrate()
-	fail(err)
+	if err != nil {
+		return nil, err
+	}
 	r := &Result{calibrated: c}
 	covariance := c.reported.covariance(c.covariance())
 	for i, name := range c.reported.names {
@@ -83,7 +96,12 @@ func valuesOnly(t testing.TB, s Session, m Model) *Result {
 	r.Covariance = covariance.Slices()
 	c.takeBlank(r)
 	c.takeSubjects(r)
-	return r
+	return r, nil
+}
+
+// commonTerm is a source that all anchors share.
+func commonTerm(u float64) uncertain.Term {
+	return uncertain.Term{Source: uncertain.Source{ID: "scale", Kind: uncertain.KindAnchor, U: u}, Sensitivity: 1}
 }
 
 func (r *Result) parameter(t testing.TB, name string) Parameter {

@@ -1,6 +1,7 @@
 package calib
 
 import (
+	"fmt"
 	"math"
 
 	"deltamoor/calib/adjust"
@@ -119,7 +120,7 @@ func (p *problem) score(v *variances, at func(*whitening) (*reduction, *adjust.M
 	p.startPhi(v, math.Max(start, least))
 	var path scoringPath
 	last := math.Inf(1)
-	for iteration := 1; iteration <= 500; iteration++ {
+	for iteration := 1; iteration <= maxScoring; iteration++ {
 		w := p.whiten(v)
 		if w == nil {
 			return p.refuse(&adjust.SingularError{})
@@ -140,7 +141,9 @@ func (p *problem) score(v *variances, at func(*whitening) (*reduction, *adjust.M
 		for j := range next {
 			move = math.Max(move, math.Abs(next[j]-v.phi[j])/(v.phi[j]+math.Sqrt(2/information.At(j, j))))
 		}
-		if move < 1e-13 || (move >= last && last < 1e-9) {
+		// Fisher scoring converges linearly where a variance is hardly determined: the
+		// last step counts as settled when it is far below any uncertainty of φ.
+		if move < 1e-13 || (move >= last && last < 1e-9) || (iteration == maxScoring && move < slowScoring) {
 			if v.cov, err = inverse(information); err != nil {
 				return p.unidentified(v)
 			}
@@ -149,11 +152,51 @@ func (p *problem) score(v *variances, at func(*whitening) (*reduction, *adjust.M
 			}
 			return nil
 		}
+		if iteration > plainScoring && iteration%4 == 0 {
+			extrapolate(v.phi, next, move/last)
+		}
 		last = move
 		path.take(v.phi, next, gradient)
 		copy(v.phi, next)
 	}
-	return &ConvergenceError{Refusal{Place: "model.weights", Found: "variances not settled after 500 iterations", Expected: "a maximum of the restricted likelihood"}}
+	return &ConvergenceError{Refusal{Place: "model.weights", Found: fmt.Sprintf("variances not settled after %d iterations", maxScoring), Expected: "a maximum of the restricted likelihood"}}
+}
+
+// plainScoring is how many plain scoring steps there are before extrapolated
+// ones are mixed in, maxScoring bounds both; slowScoring is the relative change
+// of φ below which the last of them is taken as it is.
+const (
+	plainScoring = 500
+	maxScoring   = 800
+	slowScoring  = 1e-7
+)
+
+// extrapolate lengthens a step of a slow series. One that shrinks by a ratio
+// each time is taken to where it would end (Aitken 1926), a hundred times as far
+// at most; where the likelihood is so flat that steps do not shrink, that far. A
+// step too far is taken back by [scoringPath.overshot].
+func extrapolate(phi, next []float64, ratio float64) {
+	factor := 100.0
+	switch {
+	case !(ratio > 0.5):
+		return
+	case ratio < 0.99:
+		factor = 1 / (1 - ratio)
+	}
+	for ; factor > 1; factor /= 2 {
+		inside := true
+		for j := range phi {
+			inside = inside && (next[j] <= 0 || phi[j]+float64(factor*(next[j]-phi[j])) > phi[j]/10)
+		}
+		if inside {
+			break
+		}
+	}
+	for j := range phi {
+		if next[j] > 0 && factor > 1 {
+			next[j] = phi[j] + float64(factor*(next[j]-phi[j]))
+		}
+	}
 }
 
 // A scoringPath remembers the last step, to take part of it back where the

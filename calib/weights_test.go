@@ -341,32 +341,3 @@ func TestDeclaredDegreesOfFreedomReachTheResult(t *testing.T) {
 	}
 	near(t, "ν_eff of the number", x.DegreesOfFreedom, 7, 1e-9)
 }
-
-// 95 % intervals of samples cover the truth in 94 to 96 of 100 laboratories.
-func TestIntervalsCover(t *testing.T) {
-	laboratories := 10_000
-	if testing.Short() {
-		laboratories = 500
-	}
-	for _, m := range []Model{{}, {Weights: WeightsReplicate}, {Weights: WeightsEqual}} {
-		r := rand.New(rand.NewPCG(20261201, 7))
-		hit, count := 0, 0
-		for range laboratories {
-			w := truth{intercept: 0.3, slope: 0.98, noise: 0.06, anchorU: 0.03, anchors: []float64{-35, -10, 20}, repeats: 3, samples: 1}
-			s, values := w.session(r)
-			for _, x := range valuesOnly(t, s, m).Subjects {
-				count++
-				if math.Abs(x.Value-values[x.Subject]) <= x.Expanded.U {
-					hit++
-				}
-			}
-		}
-		share := float64(hit) / float64(count)
-		// Three standard deviations of the count, on top of 94 to 96 %.
-		slack := 3 * math.Sqrt(0.95*0.05/float64(count))
-		if testing.Short() && (share < 0.94-slack || share > 0.96+slack) || !testing.Short() && (share < 0.94 || share > 0.96) {
-			t.Errorf("%s: %.4f of %d intervals cover", m.label(), share, count)
-		}
-		t.Logf("%s: %.4f of %d intervals cover", m.label(), share, count)
-	}
-}

@@ -177,6 +177,11 @@ func (w *work) linearise() (float64, error) {
 	return Norm(w.rhs[:w.pr.Parameters]), nil
 }
 
+// slowStep is the step, in standard uncertainties, at which the last iteration
+// counts as settled although its steps still get smaller: where residuals are
+// large, Gauss–Newton converges slowly.
+const slowStep = 1e-7
+
 // minimise iterates to stagnation.
 func (w *work) minimise() error {
 	if err := w.evaluate(w.theta); err != nil {
@@ -198,6 +203,9 @@ func (w *work) minimise() error {
 			}
 		}
 		if w.iterations == maxIterations {
+			if length <= float64(slowStep*(1+math.Sqrt(w.chi2))) {
+				break // slow, and still getting smaller, far below any uncertainty
+			}
 			return &ConvergenceError{Iterations: w.iterations, Step: length}
 		}
 		if err := w.advance(); err != nil {
