@@ -314,7 +314,7 @@ func (c *calibrated) diagnoseAnchors(r *Result) {
 			fitted++
 		}
 	}
-	if fitted < 3 && !c.in.model.AllowSingleAnchor {
+	if fitted < 3 && !c.in.model.AllowSingleAnchor || fitted > MaxLeftOutAnchors {
 		return
 	}
 	for _, l := range c.classes {

@@ -27,6 +27,9 @@ func (r Refusal) Error() string {
 type (
 	// NotFiniteError: a value is NaN or infinite.
 	NotFiniteError struct{ Refusal }
+	// RangeError: a number so large, or differences so small, that squares of
+	// variances leave the range of doubles.
+	RangeError struct{ Refusal }
 	// NegativeUncertaintyError: a standard uncertainty or variance is negative.
 	NegativeUncertaintyError struct{ Refusal }
 	// MissingUncertaintyError: declared weights need u of every reading that is used.

@@ -17,6 +17,9 @@ func (in *input) newProblem(without int) (*problem, error) {
 		return nil, err
 	}
 	p.centre()
+	if err := p.checkRange(); err != nil {
+		return nil, err
+	}
 	var err error
 	if p.time, err = in.takeTime(p.fitted); err != nil {
 		return nil, err
@@ -133,6 +136,22 @@ func (p *problem) centre() {
 	if p.in.vyLow != nil {
 		p.vyLow = p.in.vyLow.Pick(p.anchors)
 	}
+}
+
+// checkRange refuses readings or values whose differences are so small that
+// variances of them have no square: another unit is meant, or nothing.
+func (p *problem) checkRange() error {
+	var raw, value float64
+	for _, i := range p.fitted {
+		raw = math.Max(raw, math.Abs(p.in.readings[i].raw-p.r0))
+	}
+	for _, v := range p.values {
+		value = math.Max(value, math.Abs(v))
+	}
+	if raw > 0 && raw < smallest || value > 0 && value < smallest && !p.ratio {
+		return &RangeError{Refusal{Place: "readings", Found: fmt.Sprintf("raw deltas within %.3g and values within %.3g of their mean", raw, value), Expected: fmt.Sprintf("differences of at least %g ‰", smallest)}}
+	}
+	return nil
 }
 
 // lay gives each internal parameter its place.

@@ -128,7 +128,9 @@ type ReadingResult struct {
 type AnchorResult struct {
 	Material        string
 	Value, Adjusted float64
-	LeftOut         *LeftOut
+	// LeftOut is nil where what is left cannot be fitted, and in fits with more than
+	// MaxLeftOutAnchors anchors.
+	LeftOut *LeftOut
 }
 
 // LeftOut is the prediction of an anchor from a fit without its readings and value.

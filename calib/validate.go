@@ -17,6 +17,18 @@ const (
 	// MaxDenseReadings is the most readings with a full covariance, or with
 	// exact readings among them: the cost grows with the cube.
 	MaxDenseReadings = 2_000
+	// MaxLeftOutAnchors is the most anchors of which each is left out in turn: the
+	// cost grows with the fourth power. With more, [AnchorResult.LeftOut] is nil.
+	MaxLeftOutAnchors = 100
+)
+
+// The range of numbers: deltas and u in ‰, times in hours, sizes in any unit.
+// Fourth powers of anything that a fit makes of them are still doubles.
+const (
+	largest  = 1e30
+	smallest = 1e-30
+	longest  = 1e9
+	biggest  = 1e15
 )
 
 // maxRefusals is how many refusals one answer lists.
@@ -40,12 +52,16 @@ func (r *refusals) err() error {
 	return errors.Join(r.list...)
 }
 
-// number refuses a value that is not finite.
+// number refuses a value that is not finite, or beyond the range.
 func (r *refusals) number(v float64, format string, args ...any) bool {
-	if finite(v) {
+	switch {
+	case !finite(v):
+		r.add(&NotFiniteError{Refusal{Place: fmt.Sprintf(format, args...), Found: fmt.Sprint(v), Expected: "a finite number"}})
+	case math.Abs(v) > largest:
+		r.add(&RangeError{Refusal{Place: fmt.Sprintf(format, args...), Found: fmt.Sprint(v), Expected: fmt.Sprintf("a number within ±%g", largest)}})
+	default:
 		return true
 	}
-	r.add(&NotFiniteError{Refusal{Place: fmt.Sprintf(format, args...), Found: fmt.Sprint(v), Expected: "a finite number"}})
 	return false
 }
 
@@ -133,6 +149,8 @@ func validateAnchors(r *refusals, s *Session) {
 			switch {
 			case !finite(t.U) || !finite(t.Sensitivity):
 				r.add(&NotFiniteError{Refusal{Place: place + ".u", Found: fmt.Sprint(t.U), Expected: "a finite standard uncertainty"}})
+			case math.Abs(t.U) > largest || math.Abs(t.Sensitivity) > largest:
+				r.add(&RangeError{Refusal{Place: place + ".u", Found: fmt.Sprint(t.U), Expected: fmt.Sprintf("at most %g", largest)}})
 			case t.U < 0:
 				r.add(&NegativeUncertaintyError{Refusal{Place: place + ".u", Found: fmt.Sprint(t.U), Expected: "a standard uncertainty, not negative"}})
 			case t.ID == "":
@@ -196,8 +214,8 @@ func validateReadings(r *refusals, s *Session, m Model) {
 
 func validateReading(r *refusals, rd *Reading, i int) {
 	number := func(v *float64, field string) bool {
-		if v == nil || finite(*v) {
-			return v != nil
+		if v == nil {
+			return false
 		}
 		return r.number(*v, "readings[%d].%s", i, field)
 	}
@@ -213,9 +231,15 @@ func validateReading(r *refusals, rd *Reading, i int) {
 	if u := rd.StandardUncertainty; number(u, "u") && *u < 0 {
 		r.add(&NegativeUncertaintyError{Refusal{Place: fmt.Sprintf("readings[%d].u", i), Found: fmt.Sprint(*u), Expected: "a standard uncertainty, not negative"}})
 	}
-	number(rd.Time, "time")
 	number(rd.Previous, "previous")
-	number(rd.Size, "size")
+	if number(rd.Time, "time") && math.Abs(*rd.Time) > longest {
+		r.add(&RangeError{Refusal{Place: fmt.Sprintf("readings[%d].time", i), Found: fmt.Sprint(*rd.Time), Expected: fmt.Sprintf("hours within ±%g", longest)}})
+	}
+	if number(rd.Size, "size") {
+		if s := math.Abs(*rd.Size); s > biggest || s > 0 && s < 1/biggest {
+			r.add(&RangeError{Refusal{Place: fmt.Sprintf("readings[%d].size", i), Found: fmt.Sprint(*rd.Size), Expected: fmt.Sprintf("a size from %g to %g", 1/biggest, biggest)}})
+		}
+	}
 }
 
 func validateCovariances(r *refusals, s *Session, m Model) {
