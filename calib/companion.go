@@ -17,11 +17,14 @@ import (
 // the noise is normal.
 const huberConstant = 1.5
 
-// companionIterations bounds the reweighting, and companionTolerance is the
-// change of a weight or of the scale at which it has settled.
+// companionIterations bounds the reweighting; companionTolerance is the change
+// of a weight or of the scale at which it has settled, and companionSlow the
+// one at which the last iteration is taken as it is: reweighting converges
+// linearly, and an opinion needs no more digits.
 const (
-	companionIterations = 2000
+	companionIterations = 300
 	companionTolerance  = 1e-12
+	companionSlow       = 1e-6
 )
 
 // A Companion is a robust fit of the same session with the same model, as an
@@ -209,7 +212,7 @@ func (b *reweighting) run() (*solved, error) {
 			moved = b.rescale(residuals, nu)
 		}
 		moved = math.Max(moved, b.reweight(residuals))
-		if moved <= companionTolerance {
+		if moved <= companionTolerance || b.iterations == companionIterations && moved <= companionSlow {
 			return s, nil
 		}
 		if b.iterations == companionIterations {
@@ -342,7 +345,7 @@ func (b *reweighting) freeScale() error {
 			}
 		}
 		moved := math.Max(b.rescale(residuals, nu), b.reweight(residuals))
-		if moved <= companionTolerance {
+		if moved <= companionTolerance || iteration == companionIterations && moved <= companionSlow {
 			return nil
 		}
 		if iteration == companionIterations {

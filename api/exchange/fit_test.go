@@ -53,8 +53,8 @@ func TestDecodeFitReadsTheContractsExample(t *testing.T) {
 	if want := (calib.Model{Drift: "linear", Size: "none", Memory: "carryover", Weights: "declared"}); model != want {
 		t.Errorf("model %+v, expected %+v", model, want)
 	}
-	if want := (calib.Policy{Probability: 0.95}); policy != want {
-		t.Errorf("policy %+v, expected %+v", policy, want)
+	if diff := cmp.Diff(calib.Policy{Probability: 0.95}, policy); diff != "" {
+		t.Errorf("policy (-want +got):\n%s", diff)
 	}
 }
 
