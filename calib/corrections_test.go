@@ -18,6 +18,24 @@ func correction(id string, u float64, perReading []float64) Correction {
 
 // An input that shifts all raw deltas alike, or multiplies them, is taken out
 // by the line; one that acts on samples only is not.
+// A blank known independently and the model's blank would take it out twice.
+func TestIndependentBlankBesideSizeBlankIsRefused(t *testing.T) {
+	s, _ := usualTruth.session(rand.New(rand.NewPCG(3, 3)))
+	s.Corrections = []Correction{{Name: "size of the blank", Input: uncertain.Number{Value: 0.1}, PerReading: make([]float64, len(s.Readings)), Blank: true}}
+	if _, err := Fit(s, Model{}, Policy{}); err != nil {
+		t.Errorf("without the model's blank: %v", err)
+	}
+	_, err := Fit(s, Model{Size: SizeBlank}, Policy{})
+	var refused *UnsupportedTermError
+	if !errors.As(err, &refused) || refused.Place != "model.size" {
+		t.Errorf("with it: %v, want *UnsupportedTermError at model.size", err)
+	}
+	s.Corrections[0].Blank = false // an H3 factor, say
+	if _, err := Fit(s, Model{Size: SizeBlank}, Policy{}); errors.As(err, &refused) {
+		t.Errorf("another correction: %v", err)
+	}
+}
+
 func TestCommonInputsCancelThroughTheLine(t *testing.T) {
 	s := randomSession(201, false)
 	want := mustFit(t, s, Model{}, Policy{})

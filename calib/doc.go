@@ -60,6 +60,45 @@
 // when an assigned value does, [Result.AnchorDerivatives] is the exact
 // derivative at fixed variances, which is not ∂θ/∂y where there are residuals.
 //
+// # Flags
+//
+// A flag travels with the result and with everything made of it: a code that
+// stays, how bad it is, the readings or the subject, one sentence and what to do.
+// It never changes a number. Limits are the method's, by [Policy]; where the
+// method is silent, the figure below is used.
+//
+//	code                          severity  raised when
+//	single_anchor                 serious   the scale rests on one anchor
+//	two_anchors                   note      two anchors: nothing shows that one is off
+//	few_anchors                   warning   fewer than MinimumAnchors
+//	anchors_close                 warning   anchors span less than AdvisedSpan (below MinimumSpan: refused)
+//	anchor_is_control             warning   one material is anchor and control of one quantity
+//	anchor_disagrees              serious   a whole anchor is off: left-out |z| > LeftOutLimit (3); says so
+//	                                        when both members of a pair are, and when nothing tells which
+//	reading_disagrees             warning   studentised (known u: standardised) residual > StudentizedLimit (3)
+//	chi_square                    warning   p of chi-square < TestLevel (0.05)
+//	lack_of_fit                   warning   p of the F test against free levels < TestLevel
+//	few_degrees_of_freedom        warning   an estimated variance has fewer than 4
+//	weak_slope                    serious   (t·u(β)/β)² > 0.05 (above 1: refused)
+//	slope_drift                   warning   drift × τ: the slope changed with time, p < 0.01
+//	term_missing                  note      the readings ask for drift, size or memory, p < 0.01
+//	no_predecessor                note      memory, and nothing is known of what came before
+//	unbracketed                   warning   before the first or after the last anchor or monitor
+//	size_range                    note      a peak outside the fitted sizes; warning with a size term
+//	extrapolation                 warning   beyond the anchors' span; note within U of it
+//	replicate_scatter             warning   a subject's readings scatter more than the fit, p < 0.01
+//	preparation_variance_unknown  warning   only samples have several readings of one preparation
+//
+// The registry adds what only it can know: values (provisional_value,
+// expired_value, value_changed_in_session, circular_assignment,
+// definitions_differ), controls (control_without_value, control_deviates,
+// control_outside_limit), the line and its scatter against the method's limits
+// and the instrument's own history (slope_outside_limits,
+// repeatability_outside_limit, slope_off_history, intercept_off_history,
+// drift_off_history), bottles and portions (opened_too_often, open_too_long,
+// unit_in_doubt, unit_overdrawn, portion_too_small), and identical treatment
+// (matrix_mismatch, group_without_anchor).
+//
 // # Numbers
 //
 // The bits of values, uncertainties and covariances are equal on every

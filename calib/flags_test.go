@@ -1,6 +1,9 @@
 package calib
 
 import (
+	"os"
+	"path/filepath"
+	"regexp"
 	"slices"
 	"strings"
 	"testing"
@@ -43,6 +46,18 @@ func TestFlags(t *testing.T) {
 			s.read("P2", Sample, -5, 0.05).at(4).sized(5).of("p")
 		}},
 		{"extrapolation", func(s *Session, _ *Model, _ *Policy) { s.read("P2", Sample, -60, 0.05).at(3).sized(5) }},
+		{"slope_drift", func(s *Session, _ *Model, _ *Policy) {
+			for i := range s.Readings {
+				if s.Readings[i].Subject == "A" {
+					s.Readings[i].Raw -= 0.2 * *s.Readings[i].Time
+				}
+			}
+		}},
+		{"term_missing", func(s *Session, _ *Model, _ *Policy) {
+			for i := range s.Readings {
+				s.Readings[i].Raw += 0.2 * *s.Readings[i].Time
+			}
+		}},
 		{"replicate_scatter", func(s *Session, _ *Model, _ *Policy) { s.read("P1", Sample, -9, 0.05).at(3).sized(5) }},
 	} {
 		t.Run(c.code, func(t *testing.T) {
@@ -113,5 +128,67 @@ func TestLimitsComeFromThePolicy(t *testing.T) {
 	r := mustFit(t, s, Model{}, Policy{Probability: 0.99, CoverageFactor: 3})
 	if x := r.Subjects[0].Expanded; x.CoverageFactor != 3 || x.Probability != 0.99 || x.U != 3*r.Subjects[0].StandardUncertainty {
 		t.Errorf("fixed k: %+v", x)
+	}
+}
+
+// Every code of the engine stands in the page of flags and has its case above;
+// the registry's stand there too.
+func TestEveryFlagIsDocumentedAndHasItsCase(t *testing.T) {
+	page, err := os.ReadFile("doc.go")
+	if err != nil {
+		t.Fatal(err)
+	}
+	cases, err := os.ReadFile("flags_test.go")
+	if err != nil {
+		t.Fatal(err)
+	}
+	code := regexp.MustCompile(`Code: "([a-z_]+)"`)
+	count := 0
+	for _, pattern := range []string{"*.go", "../api/registry/judgements.go", "../api/registry/unitflags.go", "../api/registry/observed.go"} {
+		files, err := filepath.Glob(pattern)
+		if err != nil {
+			t.Fatal(err)
+		}
+		for _, name := range files {
+			if strings.HasSuffix(name, "_test.go") {
+				continue
+			}
+			text, err := os.ReadFile(name)
+			if err != nil {
+				t.Fatal(err)
+			}
+			for _, m := range code.FindAllStringSubmatch(string(text), -1) {
+				count++
+				if !regexp.MustCompile(`\b` + m[1] + `\b`).Match(page) {
+					t.Errorf("%s of %s is not in the page of flags", m[1], name)
+				}
+				if !strings.Contains(name, "/") && !strings.Contains(string(cases), `{"`+m[1]+`"`) {
+					t.Errorf("%s has no case", m[1])
+				}
+			}
+		}
+	}
+	if count < 30 {
+		t.Errorf("found %d flags", count)
+	}
+}
+
+// Two anchors that lie off in one direction are named together.
+func TestBothMembersOfABracketAreNamed(t *testing.T) {
+	var s Session
+	for i, v := range []float64{-40, -38, -1, 1, 38, 40} {
+		code := string(rune('A' + i))
+		s.Anchors = append(s.Anchors, assigned(code, v, 0.03))
+		off := 0.0
+		if i == 2 || i == 3 {
+			off = 0.26
+		}
+		for range 3 {
+			s.read(code, Anchor, v+off, 0.05)
+		}
+	}
+	f := mustFit(t, s, Model{}, Policy{}).flagged("anchor_disagrees")
+	if f == nil || f.Subject != "" || !strings.HasPrefix(f.Message, "Both C (") && !strings.HasPrefix(f.Message, "Both D (") {
+		t.Errorf("flag %+v, want C and D named together", f)
 	}
 }

@@ -61,6 +61,9 @@ type Correction struct {
 	// PerReading is ∂raw/∂input of each reading, in the order of Readings; 0
 	// where the reading was not corrected with it.
 	PerReading []float64
+	// Blank says that the input is a blank known independently, already taken out of
+	// the raw deltas: a model with size blank would take it out twice and is refused.
+	Blank bool
 }
 
 // An AssignedValue is what an anchor is worth on the scale of the fit (‰).

@@ -77,7 +77,7 @@ func validate(s *Session, m Model, p Policy) error {
 	validateAnchors(&r, s)
 	validateReadings(&r, s, m)
 	validateCovariances(&r, s, m)
-	validateCorrections(&r, s)
+	validateCorrections(&r, s, m)
 	return r.err()
 }
 
@@ -277,9 +277,12 @@ func validateCovariances(r *refusals, s *Session, m Model) {
 	}
 }
 
-func validateCorrections(r *refusals, s *Session) {
+func validateCorrections(r *refusals, s *Session, m Model) {
 	for i, c := range s.Corrections {
 		place := fmt.Sprintf("corrections[%d]", i)
+		if c.Blank && m.Size == SizeBlank {
+			r.add(&UnsupportedTermError{Refusal{Place: "model.size", Found: fmt.Sprintf("blank beside %s, %q, a blank already taken out", place, c.Name), Expected: "one of the two: together they take the blank out twice"}})
+		}
 		if _, err := uncertain.New(c.Input.Value, c.Input.Terms...); err != nil {
 			r.add(&CorrectionError{Refusal{Place: place, Found: err.Error(), Expected: "an uncertain number"}})
 		}

@@ -216,6 +216,17 @@ func FuzzDecodeFit(f *testing.F) {
 		if len(s.Readings) != len(request.Readings) || len(s.Anchors) != len(request.Anchors) {
 			t.Fatalf("session of %d readings and %d anchors", len(s.Readings), len(s.Anchors))
 		}
+		if len(s.Readings) > 60 || len(s.Anchors) > 10 {
+			return // larger fits only take longer
+		}
+		answer, err := AnswerFit(request)
+		if err != nil {
+			wantRefusalOrReadings(t, registry.ReadingTable{}, err)
+			return
+		}
+		if _, err := json.Marshal(answer); err != nil {
+			t.Fatalf("the answer cannot be written: %v", err)
+		}
 	})
 }
 
