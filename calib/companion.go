@@ -294,7 +294,7 @@ const leastScale = 1e-9
 // expectedSquare is E[min(z², k²)] of a standard normal z:
 // P(|z| ≤ k) − 2kφ(k) + k²·P(|z| > k).
 func expectedSquare(k float64) float64 {
-	beyond := 2 * distuv.UnitNormal.Survival(k)
+	beyond := float64(2 * distuv.UnitNormal.Survival(k))
 	return 1 - beyond - float64(2*float64(k*distuv.UnitNormal.Prob(k))) + float64(float64(k*k)*beyond)
 }
 
