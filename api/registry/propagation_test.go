@@ -127,7 +127,7 @@ func TestComparisonAgreesWithTheDistributionsOfBothChains(t *testing.T) {
 		{"an older generation", p, c.reports[1].Lines[0].Code, 0, 0.99},
 		{"nothing shared", p, c.other.Lines[0].Code, 1, 1},
 	} {
-		compared, err := c.Compare(c.ctx, c.auditor, []string{x.a, x.b})
+		compared, err := c.Compare(c.ctx, c.auditor, []string{x.a, x.b}, 0)
 		c.must(err)
 		pair := compared.Pair
 		seed := uint64(11)
