@@ -96,8 +96,13 @@
 // and the instrument's own history (slope_outside_limits,
 // repeatability_outside_limit, slope_off_history, intercept_off_history,
 // drift_off_history), bottles and portions (opened_too_often, open_too_long,
-// unit_in_doubt, unit_overdrawn, portion_too_small), and identical treatment
-// (matrix_mismatch, group_without_anchor).
+// unit_in_doubt, unit_overdrawn, storage_excursion, portion_too_small,
+// overlap_waived), identical treatment (matrix_mismatch, group_without_anchor),
+// what was done before the fit (h3_stale, h3_changed, h3_step, h3_not_straight,
+// h3_determined_later, h3_outside_range, h3_not_propagated,
+// nothing_left_of_run, peaks_not_resolved), and, of a file before any fit, how
+// it was seated (quantity_missing, too_few_anchors, no_control,
+// sample_after_last_standard, overlapping_session).
 //
 // # Numbers
 //

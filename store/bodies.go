@@ -352,9 +352,6 @@ type Limits struct {
 	// means 3, of 30 sessions.
 	HistoryLimit    float64 `json:"history_limit,omitempty"`
 	HistorySessions int     `json:"history_sessions,omitempty"`
-	// AmountUnit is the unit of the readings' amounts, which the materials' minimum
-	// portion is held against; "" means mg.
-	AmountUnit string `json:"amount_unit,omitempty"`
 }
 
 // A Correction declares where one correction is made. State "" is "not said", which cannot be approved.

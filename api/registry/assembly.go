@@ -332,7 +332,7 @@ func (a *assembly) input() (calib.Session, calib.Policy, error) {
 		s.Readings = append(s.Readings, rd.Reading)
 	}
 	for j, in := range a.prepared.shared {
-		k := calib.Correction{Name: in.name, Input: in.value, Blank: strings.HasSuffix(in.name, "of the blank")}
+		k := calib.Correction{Name: in.name, Input: in.value, Blank: in.blank}
 		for _, rd := range a.prepared.readings {
 			k.PerReading = append(k.PerReading, rd.per[j])
 		}

@@ -136,9 +136,4 @@ func checkJudgementLimits(c *complaints, place string, l store.Limits) {
 	if n := l.HistorySessions; n < 0 || n > MaxPage || n > 0 && n < leastHistory {
 		c.add(place+".history_sessions", fmt.Sprint(n), "%d to %d sessions", leastHistory, MaxPage)
 	}
-	if l.AmountUnit != "" {
-		if _, _, ok := inBase(&store.Amount{Value: "1", Unit: l.AmountUnit}); !ok {
-			c.add(place+".amount_unit", quote(l.AmountUnit), "kg, g, mg, µg, L, mL or µL")
-		}
-	}
 }

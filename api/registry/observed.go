@@ -2,9 +2,7 @@ package registry
 
 import (
 	"context"
-	"encoding/json"
 	"fmt"
-	"math"
 	"slices"
 	"strings"
 
@@ -21,7 +19,7 @@ import (
 func (a *assembly) observe(ctx context.Context, v *store.View, laboratory string, body store.Calibration) error {
 	a.observed = nil
 	for _, step := range []func(context.Context, *store.View, string, store.Calibration) error{
-		a.observeHistory, a.observeValues, a.observePortions, a.observeUnits, a.observeMatrices, a.observeGroups,
+		a.observeHistory, a.observeValues, a.observeUnits, a.observeMatrices, a.observeGroups,
 	} {
 		if err := step(ctx, v, laboratory, body); err != nil {
 			return err
@@ -91,55 +89,6 @@ func (a *assembly) observeValues(_ context.Context, _ *store.View, _ string, _ s
 		a.observed = append(a.observed, calib.Flag{Code: "definitions_differ", Severity: calib.Warning,
 			Message: fmt.Sprintf("The anchors' values were stated on different versions of the definition of %s: %s.", a.spec.Scale, strings.Join(parts, "; ")),
 			Advice:  "Read what changed in the definition; if it moves values, state those of the older version anew."})
-	}
-	return nil
-}
-
-// observePortions holds what was weighed against the materials' minimum portion.
-func (a *assembly) observePortions(ctx context.Context, v *store.View, _ string, _ store.Calibration) error {
-	unit := nameOr(a.limits.AmountUnit, "mg")
-	values := slices.Clone(a.anchors)
-	for _, material := range slices.Sorted(mapKeys(a.controls)) {
-		values = append(values, a.controls[material])
-	}
-	for _, value := range values {
-		ref, err := inputOf(value.Inputs, "material")
-		if err != nil {
-			continue // stated without its material's version: no minimum is known
-		}
-		m, err := decodeVersion[store.Material](ctx, v, ref)
-		if err != nil {
-			return err
-		}
-		minimum, base, ok := inBase(m.Value.Minimum)
-		if !ok || minimum <= 0 {
-			continue
-		}
-		var below []int
-		least := math.Inf(1)
-		for _, rd := range a.readings {
-			if rd.Material != value.Value.Material || a.excluded[rd.Number] || rd.Extra == "" {
-				continue
-			}
-			var extra struct {
-				Amount *float64 `json:"amount"`
-			}
-			if err := json.Unmarshal([]byte(rd.Extra), &extra); err != nil {
-				return fmt.Errorf("read the rare fields of reading %d of %s: %w", rd.Number, a.session.Code, err)
-			}
-			if extra.Amount == nil {
-				continue
-			}
-			// A weighing that equals the minimum in its own digits is not below it.
-			if x, with, ok := inBase(&store.Amount{Value: store.Decimal(fmt.Sprint(*extra.Amount)), Unit: unit}); ok && with == base && x < minimum*(1-1e-9) {
-				below, least = append(below, rd.Number), math.Min(least, *extra.Amount)
-			}
-		}
-		if len(below) > 0 {
-			a.observed = append(a.observed, calib.Flag{Code: "portion_too_small", Severity: calib.Warning, Subject: value.Value.Material, Readings: below,
-				Message: fmt.Sprintf("Portions of %s down to %g %s are below its minimum of %s %s: its homogeneity is not vouched for there.", value.Value.Material, least, unit, m.Value.Minimum.Value, m.Value.Minimum.Unit),
-				Advice:  "Weigh more, or set these readings aside with that cause."})
-		}
 	}
 	return nil
 }

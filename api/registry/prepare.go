@@ -40,6 +40,7 @@ type preparedReading struct {
 type sharedInput struct {
 	name  string
 	value uncertain.Number
+	blank bool // part of a blank taken out
 }
 
 // declared is what the session says of a correction for the fit's quantity:
@@ -210,7 +211,7 @@ func (a *assembly) prepareH3(p *preparation) error {
 	if err := Complain(cannotFit, c); err != nil {
 		return err
 	}
-	p.share(sharedInput{nameH3, k}, groups, func(i int) float64 { return per[i] })
+	p.share(sharedInput{name: nameH3, value: k}, groups, func(i int) float64 { return per[i] })
 	p.flags = append(p.flags, a.factorFlags(*applied)...)
 	p.flags = append(p.flags, a.intensityFlags(*applied)...)
 	if applied.Value.U == 0 {
@@ -302,8 +303,8 @@ func (a *assembly) prepareBlank(p *preparation) error {
 	if err := Complain(cannotFit, c); err != nil {
 		return err
 	}
-	p.share(sharedInput{"size of the blank", size}, groups[0], func(i int) float64 { return perSize[i] })
-	p.share(sharedInput{"raw delta of the blank", raw}, groups[1], func(i int) float64 { return perRaw[i] })
+	p.share(sharedInput{"size of the blank", size, true}, groups[0], func(i int) float64 { return perSize[i] })
+	p.share(sharedInput{"raw delta of the blank", raw, true}, groups[1], func(i int) float64 { return perRaw[i] })
 	return nil
 }
 

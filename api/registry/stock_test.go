@@ -208,7 +208,7 @@ func TestPortionsBelowTheMinimumFlagTheirReadings(t *testing.T) {
 	b.must(err)
 	c, err := b.Fit(b.ctx, b.analyst, registry.FitRequest{Session: answer.Session.Code, Quantity: "d13C"})
 	b.must(err)
-	i := slices.IndexFunc(c.Value.Flags, func(f calib.Flag) bool { return f.Code == "portion_below_minimum" })
+	i := slices.IndexFunc(c.Value.Flags, func(f calib.Flag) bool { return f.Code == "portion_too_small" })
 	if i < 0 || !slices.Equal(c.Value.Flags[i].Readings, []int{3}) {
 		t.Errorf("flags %+v: want reading 3, of 0.39 mg where 0.40 mg is the least", c.Value.Flags)
 	}

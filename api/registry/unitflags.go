@@ -64,7 +64,7 @@ func (a *assembly) flagPortions(ctx context.Context, v source) error {
 			}
 		}
 		if len(below) > 0 {
-			a.flags = append(a.flags, calib.Flag{Code: "portion_below_minimum", Severity: calib.Warning, Subject: m.Code, Readings: below,
+			a.flags = append(a.flags, calib.Flag{Code: "portion_too_small", Severity: calib.Warning, Subject: m.Code, Readings: below,
 				Message: fmt.Sprintf("%d portions of %s were below %s %s, the least that is the material.", len(below), m.Code, m.Value.Minimum.Value, m.Value.Minimum.Unit), Advice: "Weigh more: its homogeneity is not known for less."})
 		}
 	}

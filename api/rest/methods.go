@@ -73,7 +73,6 @@ type Limits struct {
 	TestLevel         float64 `json:"test_level,omitempty" doc:"p-value below which a test of the fit is flagged; left out: 0.05."`
 	HistoryLimit      float64 `json:"history_limit,omitempty" doc:"Flags a slope, intercept or drift further than so many standard deviations from the instrument's history; left out: 3."`
 	HistorySessions   int     `json:"history_sessions,omitempty" doc:"How many approved sessions of the instrument are its history; left out: 30."`
-	AmountUnit        string  `json:"amount_unit,omitempty" maxLength:"10" doc:"Unit of the readings' amounts, for the materials' minimum portion; left out: mg."`
 }
 
 // A Component is an uncertainty component of a method.
