@@ -16,11 +16,8 @@ import (
 // readingsPerBlock is how many readings one hash of a session covers.
 const readingsPerBlock = 64
 
-var (
-	readingColumns = []string{"laboratory", "session", "number", "analysis", "preparation", "position", "peak",
-		"quantity", "role", "material", "unit", "sample", "compound", "grouping", "measured_at", "raw", "u", "size", "extra"}
-	readingsTable = table{"readings", readingColumns}
-)
+var readingColumns = []string{"laboratory", "session", "number", "analysis", "preparation", "position", "peak",
+	"quantity", "role", "material", "unit", "sample", "compound", "grouping", "measured_at", "raw", "u", "size", "extra"}
 
 // appendLine appends the canonical JSON (RFC 8785) of a reading: the members of
 // Reading's JSON, sorted, without those that are empty. It is written out by hand

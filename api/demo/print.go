@@ -43,6 +43,9 @@ func Print(ctx context.Context, w io.Writer, reg *registry.Registry, s *Summary)
 	if err := exchange.WriteTrace(w, trace); err != nil {
 		return err
 	}
+	if err := p.support(ctx, reg, s, trace); err != nil {
+		return err
+	}
 	p.Line("")
 	p.heading("Caution")
 	p.Paragraph("", "The laboratory is invented; the hazards of such work are not. Reactors run at 1000 to 1450 °C, and compressed gases, flammable hydrogen among them, "+
@@ -88,6 +91,26 @@ func (p *page) story(s *Summary) {
 	p.Paragraph("  - ", fmt.Sprintf("Session %s leaked. The registry flagged it: \"%s\" It was rejected, its calibration declined, its samples measured again; it stays in the record.",
 		store.FormatCode(s.Rejected.Session), said(s.Rejected.Flags, "slope_outside_limits")))
 	p.Line("")
+}
+
+// support says what the readings behind the traced delta say of every term of
+// the model of their session.
+func (p *page) support(ctx context.Context, reg *registry.Registry, s *Summary, trace registry.Trace) error {
+	i := slices.IndexFunc(trace.Nodes, func(n registry.TraceNode) bool { return n.Kind == store.KindCalibration })
+	if i < 0 {
+		return fmt.Errorf("the trace of %s has no calibration", s.Shown)
+	}
+	c, err := registry.One[store.Calibration](ctx, reg, s.Auditor, store.KindCalibration, trace.Nodes[i].Code, trace.Nodes[i].Ref.Version, store.Moment{})
+	if err != nil {
+		return err
+	}
+	p.Line("")
+	p.heading("What the readings of that session support")
+	p.Paragraph("", "Each term of the model, and each that it could have, is tested against the readings; the method decides, the test informs.")
+	for _, n := range c.Value.Needs {
+		p.Paragraph("  - ", calib.TermNeed(n).Sentence())
+	}
+	return p.Err()
 }
 
 func codes(list []string) []string {

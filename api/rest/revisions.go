@@ -9,13 +9,14 @@ import (
 	"deltamoor/store"
 )
 
-// A NewRevision says what may have been wrong: any number of values, bottles,
+// A NewRevision says what may have been wrong: any number of values, bottles, H3 factors,
 // method versions and readings, all in one revision.
 type NewRevision struct {
 	Reason     string              `json:"reason,omitempty" maxLength:"3000" doc:"Asked for unless preview=true; it stands on everything drawn up again."`
 	Values     []RevisedValue      `json:"values,omitempty" maxItems:"500"`
 	Units      []SuspectUnit       `json:"units,omitempty" maxItems:"500"`
 	Methods    []RevisedMethod     `json:"methods,omitempty" maxItems:"500"`
+	Factors    []RevisedFactor     `json:"factors,omitempty" maxItems:"500"`
 	Exclusions []RevisionExclusion `json:"exclusions,omitempty" maxItems:"500"`
 }
 
@@ -41,6 +42,14 @@ type RevisedValue struct {
 type SuspectUnit struct {
 	Unit  string     `json:"unit" maxLength:"40" doc:"Code of the unit."`
 	Since *time.Time `json:"since,omitempty" doc:"In sessions that started then or later; left out: since when the unit is recorded as suspect, else all."`
+}
+
+// A RevisedFactor says which determination of an instrument's H3 factor should
+// have been used.
+type RevisedFactor struct {
+	Instrument string `json:"instrument" maxLength:"40"`
+	Version    int    `json:"version" minimum:"1" doc:"The wrong one."`
+	Use        int    `json:"use" minimum:"1" doc:"The right one; deltas that a program formed with the wrong one have it undone first."`
 }
 
 // A RevisedMethod says which version of a method should have been used.
@@ -83,6 +92,9 @@ func (n NewRevision) proposal() (registry.Proposal, error) {
 	}
 	for _, m := range n.Methods {
 		p.Methods = append(p.Methods, registry.ProposedMethod(m))
+	}
+	for _, x := range n.Factors {
+		p.Factors = append(p.Factors, registry.ProposedFactor(x))
 	}
 	for i, x := range n.Exclusions {
 		code, err := parseCode(fmt.Sprintf("body.exclusions[%d].session", i), x.Session, store.KindSession)
@@ -136,6 +148,7 @@ type Revision struct {
 	Values     []RevisedVersion    `json:"values"`
 	Units      []SuspectUnit       `json:"units"`
 	Methods    []RevisedMethod     `json:"methods"`
+	Factors    []RevisedFactor     `json:"factors"`
 	Exclusions []RevisionExclusion `json:"exclusions"`
 	FrozenAt   time.Time           `json:"frozen_at" doc:"Nothing recorded later belongs to the affected set."`
 	Frozen     int64               `json:"frozen_position" doc:"Size of the ledger then."`
@@ -189,6 +202,9 @@ func showRevision(it registry.Item[store.Revision]) Revision {
 		}),
 		Units: convert(v.Units, func(u store.SuspectUnit) SuspectUnit {
 			return SuspectUnit{store.FormatCode(u.Unit), timePointer(u.Since)}
+		}),
+		Factors: convert(v.Factors, func(x store.ReplacedFactor) RevisedFactor {
+			return RevisedFactor{x.Old.Code, x.Old.Version, x.New.Version}
 		}),
 		Methods: convert(v.Methods, func(m store.ReplacedMethod) RevisedMethod {
 			return RevisedMethod{m.Old.Code, m.Old.Version, m.New.Version}
