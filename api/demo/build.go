@@ -273,7 +273,7 @@ func (b *builder) listSamples(ctx context.Context) error {
 		for _, s := range samplesToCome() {
 			if s.client == client {
 				wanted = append(wanted, s)
-				bodies = append(bodies, store.Sample{Client: s.client, Label: s.label, Matrix: s.matrix, Wanted: wantedOf(s.near)})
+				bodies = append(bodies, store.Sample{Client: s.client, Label: s.label, Matrix: s.treatedAs(), Note: s.matrix, Wanted: wantedOf(s.near)})
 			}
 		}
 		b.minutes(30)

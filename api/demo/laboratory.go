@@ -159,6 +159,15 @@ type wantedSample struct {
 	portions              int
 }
 
+// treatedAs is the matrix by which a sample is prepared and measured, in the
+// words of the standards that share its treatment.
+func (s wantedSample) treatedAs() string {
+	if s.near[scaleH] != 0 {
+		return "water"
+	}
+	return "organic solid"
+}
+
 // samplesToCome are what the two clients send. Solids come with about the
 // protein of a seed or of bone; waters are springs.
 func samplesToCome() []wantedSample {

@@ -50,7 +50,7 @@ func (b *builder) follow(ctx context.Context) error {
 	samples := laterSamples()
 	var bodies []store.Sample
 	for _, s := range samples {
-		bodies = append(bodies, store.Sample{Client: s.client, Label: s.label, Matrix: s.matrix, Wanted: wantedOf(s.near)})
+		bodies = append(bodies, store.Sample{Client: s.client, Label: s.label, Matrix: s.treatedAs(), Note: s.matrix, Wanted: wantedOf(s.near)})
 	}
 	b.minutes(20)
 	items, err := b.reg.AddSamples(ctx, b.summary.Analyst, bodies)
