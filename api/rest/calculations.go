@@ -15,17 +15,28 @@ import (
 // maxFit bounds the body of a stateless fit.
 const maxFit = 16 << 20
 
-// calculateFit is the engine without storing anything.
-func (f *face) calculateFit(ctx context.Context, actor registry.Actor, in *struct {
+// CalculationParams are the body of a calculation that stores nothing, read as it came.
+type CalculationParams struct {
 	ContentType string `header:"Content-Type" hidden:"true"`
 	RawBody     []byte `contentType:"application/octet-stream"`
-}) (*plain[exchange.FitAnswer], error) {
+}
+
+// may refuses who may not read, and what is not JSON.
+func (p *CalculationParams) may(actor registry.Actor) error {
 	if !actor.May(registry.MayRead) {
-		return nil, registry.Refuse(registry.Refused, "%s may not read in laboratory %s", actor.Person, actor.Laboratory)
+		return registry.Refuse(registry.Refused, "%s may not read in laboratory %s", actor.Person, actor.Laboratory)
 	}
-	media, err := FileParams{ContentType: nameOr(in.ContentType, mediaJSON)}.media()
+	media, err := FileParams{ContentType: nameOr(p.ContentType, mediaJSON)}.media()
 	if err != nil || media != mediaJSON {
-		return nil, StatusProblem(http.StatusUnsupportedMediaType, fmt.Sprintf("found the media type %q, expected %s", in.ContentType, mediaJSON), "")
+		return StatusProblem(http.StatusUnsupportedMediaType, fmt.Sprintf("found the media type %q, expected %s", p.ContentType, mediaJSON), "")
+	}
+	return nil
+}
+
+// calculateFit is the engine without storing anything.
+func (f *face) calculateFit(ctx context.Context, actor registry.Actor, in *CalculationParams) (*plain[exchange.FitAnswer], error) {
+	if err := in.may(actor); err != nil {
+		return nil, err
 	}
 	request, err := exchange.DecodeFit(in.RawBody)
 	if err != nil {

@@ -2,8 +2,6 @@ package rest
 
 import (
 	"context"
-	"fmt"
-	"net/http"
 	"reflect"
 
 	"github.com/danielgtaylor/huma/v2"
@@ -72,16 +70,9 @@ func (f *face) propagateCalibration(ctx context.Context, actor registry.Actor, i
 }
 
 // calculatePropagation is the same for a fit that is not stored.
-func (f *face) calculatePropagation(ctx context.Context, actor registry.Actor, in *struct {
-	ContentType string `header:"Content-Type" hidden:"true"`
-	RawBody     []byte `contentType:"application/octet-stream"`
-}) (*plain[exchange.PropagationAnswer], error) {
-	if !actor.May(registry.MayRead) {
-		return nil, registry.Refuse(registry.Refused, "%s may not read in laboratory %s", actor.Person, actor.Laboratory)
-	}
-	media, err := FileParams{ContentType: nameOr(in.ContentType, mediaJSON)}.media()
-	if err != nil || media != mediaJSON {
-		return nil, StatusProblem(http.StatusUnsupportedMediaType, fmt.Sprintf("found the media type %q, expected %s", in.ContentType, mediaJSON), "")
+func (f *face) calculatePropagation(ctx context.Context, actor registry.Actor, in *CalculationParams) (*plain[exchange.PropagationAnswer], error) {
+	if err := in.may(actor); err != nil {
+		return nil, err
 	}
 	request, err := exchange.DecodePropagation(in.RawBody)
 	if err != nil {
